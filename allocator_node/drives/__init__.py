@@ -1,0 +1,15 @@
+"""Drive models: how a command moves a robot. One file a model, one line in a table."""
+
+from .aerial import Aerial
+from .base import AXES, Drive
+from .differential import Differential
+from .fleet import Fleet
+from .holonomic import Holonomic
+
+DRIVES: dict[str, type[Drive]] = {
+    drive.model: drive for drive in (Differential, Holonomic, Aerial)
+}
+"""Name in a team file to model; other packages add theirs by the entry point
+``allocator_node.drives``."""
+
+__all__ = ["AXES", "DRIVES", "Aerial", "Differential", "Drive", "Fleet", "Holonomic"]

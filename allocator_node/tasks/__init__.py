@@ -1,0 +1,12 @@
+"""Task kinds: where robots go for a task. One file a kind, one line in a table."""
+
+from .base import Goals, Scene, Task, distance
+from .patrol import Patrol
+from .visit import Visit
+from .watch import Watch
+
+KINDS: dict[str, type[Task]] = {kind.kind: kind for kind in (Visit, Patrol, Watch)}
+"""Name in a team file to kind; other packages add theirs by the entry point
+``allocator_node.tasks``."""
+
+__all__ = ["KINDS", "Goals", "Patrol", "Scene", "Task", "Visit", "Watch", "distance"]

@@ -1,0 +1,132 @@
+"""What a task kind must give."""
+
+from __future__ import annotations
+
+import abc
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import Annotated, Any, ClassVar
+
+import numpy as np
+from annotated_types import Ge, Le
+
+from ..team import Checked, HeadCount, Name, NonNegative, Positive
+
+
+@dataclass(frozen=True)
+class Scene:
+    """What a task sees of the team in one period.
+
+    Attributes:
+        now: Time, s.
+        points: Control points of all robots, m, shape (N, 3); NaN where unknown.
+        headings: Headings, rad, shape (N,).
+        ahead: Distance of each control point ahead of its axle, m, shape (N,).
+        members: Indices of the robots on the task, increasing, shape (n,).
+        spacing: Distance to leave between two places of a group, m.
+        suffices: Whether robots with these indices meet head count and needs.
+    """
+
+    now: float
+    points: np.ndarray
+    headings: np.ndarray
+    ahead: np.ndarray
+    members: np.ndarray
+    spacing: float
+    suffices: Callable[[np.ndarray], bool]
+
+
+@dataclass(frozen=True)
+class Goals:
+    """Where each robot would go if it did the task.
+
+    Attributes:
+        points: Goal points p*, m, shape (N, 3); a NaN height means "any".
+        path: Way to the place of work, m, shape (N,): what the energy is priced by.
+        velocities: Velocities ṗ* of the goal points, m/s, shape (N, 3).
+        facing: Heading to take at the goal, rad, shape (N,); NaN: any.
+        pace: Share of the cruising speed to travel at, shape (N,).
+        tolerance: Distance at which a robot stands, m; 0 for a goal passed through.
+        dwell: Time to serve at the goal, s, for a task that ends.
+    """
+
+    points: np.ndarray
+    path: np.ndarray
+    velocities: np.ndarray
+    facing: np.ndarray
+    pace: np.ndarray
+    tolerance: float
+    dwell: float = 0.0
+
+    @classmethod
+    def at(cls, points: np.ndarray, scene: Scene, tolerance: float, **more: Any) -> Goals:
+        """Give goals at points (N, 3), reached in a straight line; ``more`` overrides."""
+        count = len(points)
+        goals: dict[str, Any] = {
+            "points": points,
+            "velocities": np.zeros((count, 3)),
+            "facing": np.full(count, np.nan),
+            "pace": np.ones(count),
+            "tolerance": tolerance,
+        }
+        if "path" not in more:
+            goals["path"] = distance(points, scene.points)
+        return cls(**(goals | more))
+
+
+@dataclass(frozen=True, kw_only=True)
+class Task(Checked, abc.ABC):
+    """Base of the task kinds: what every task has, and what a kind must give.
+
+    A task is data and never changes; its progress is a *state*, any immutable
+    object, which the allocator keeps and hands back.
+
+    Attributes:
+        name: Name.
+        needs: Capability to the amount T_mk the group must bring in total.
+        each: Capabilities that every member must have.
+        robots: Head count of the group.
+        priority: Class 0..4; each is served before all below it.
+        urgency: Power the owner would pay to have somebody there sooner, W.
+        after: Tasks that must be finished first.
+        active: Whether the task is to be done now.
+    """
+
+    kind: ClassVar[str]
+    """Name of the kind in a team file."""
+
+    name: Name
+    needs: Mapping[Name, Positive] = field(default_factory=dict)
+    each: tuple[Name, ...] = ()
+    robots: HeadCount = field(default_factory=HeadCount)
+    priority: Annotated[int, Ge(0), Le(4)] = 2
+    urgency: NonNegative = 0.0
+    after: tuple[Name, ...] = ()
+    active: bool = True
+
+    @abc.abstractmethod
+    def begin(self) -> Any:
+        """Give the state before anything is done."""
+
+    @abc.abstractmethod
+    def advance(self, state: Any, scene: Scene) -> Any:
+        """Give the state after what the scene shows; called once a period."""
+
+    @abc.abstractmethod
+    def goals(self, state: Any, scene: Scene) -> Goals:
+        """Give the goal of every robot, members or not."""
+
+    @abc.abstractmethod
+    def moved(self, at: tuple[float, float, float], heading: float | None) -> Task:
+        """Give the same task at another place: x, y, z (m) and heading (rad)."""
+
+    def finished(self, state: Any) -> bool:
+        """Tell whether the task has come to its end; standing tasks never do."""
+        return False
+
+
+def distance(points: np.ndarray, others: np.ndarray) -> np.ndarray:
+    """Give distances in metres along the last axis; a NaN height counts as no difference."""
+    apart = points - others
+    apart[..., 2] = np.nan_to_num(apart[..., 2])
+    return np.linalg.norm(apart, axis=-1)

@@ -1,0 +1,117 @@
+"""Go round a loop of waypoints; several robots spread along it."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+from typing import Annotated
+
+import numpy as np
+from annotated_types import Ge, MinLen
+
+from ..team import Point
+from .base import Goals, Scene, Task
+
+REACHED = 0.5
+"""Distance at which a waypoint counts as passed, m."""
+
+SLOWEST = 0.4
+"""Pace of a robot that is right behind the next one."""
+
+
+@dataclass(frozen=True)
+class Round:
+    """Attributes: next waypoint of each member, and how many were passed in all."""
+
+    next: Mapping[int, int] = field(default_factory=dict)
+    passed: int = 0
+
+
+@dataclass(frozen=True, kw_only=True)
+class Patrol(Task):
+    """Each member goes from waypoint to waypoint; whoever is close behind slows down.
+
+    Attributes:
+        waypoints: Corners of the closed loop, m.
+        laps: Rounds of the whole group together until it is done; 0: for ever.
+    """
+
+    kind = "patrol"
+
+    waypoints: Annotated[tuple[Point, ...], MinLen(2)]
+    laps: Annotated[int, Ge(0)] = 0
+
+    @cached_property
+    def _loop(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Corners (n, 2), legs from each to the next (n, 2), way to each along the loop (n,)."""
+        corners = np.array(self.waypoints, dtype=float)
+        legs = np.roll(corners, -1, axis=0) - corners
+        way = np.concatenate([[0.0], np.cumsum(np.linalg.norm(legs, axis=1))])
+        return corners, legs, way
+
+    def _nearest(self, points: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Give for points (N, 2) the distance to the loop (N,) and the leg it is on (N,)."""
+        corners, legs, _ = self._loop
+        from_corner = points[:, None, :] - corners[None]
+        length2 = np.maximum((legs**2).sum(axis=1), 1e-12)
+        along = np.clip((from_corner * legs).sum(axis=2) / length2, 0.0, 1.0)
+        away = np.linalg.norm(from_corner - along[:, :, None] * legs, axis=2)
+        leg = np.argmin(np.nan_to_num(away, nan=np.inf), axis=1)
+        return away[np.arange(len(points)), leg], leg
+
+    def begin(self) -> Round:
+        """Give the state before the first round."""
+        return Round()
+
+    def advance(self, state: Round, scene: Scene) -> Round:
+        """Send each member that reached its waypoint on to the next."""
+        corners, _, _ = self._loop
+        count = len(corners)
+        upcoming, passed = {}, state.passed
+        joined = [int(i) for i in scene.members if int(i) not in state.next]
+        if joined:
+            _, legs = self._nearest(scene.points[joined, :2])
+            upcoming = {i: (int(leg) + 1) % count for i, leg in zip(joined, legs, strict=True)}
+        for robot in map(int, scene.members):
+            corner = upcoming.get(robot, state.next.get(robot, 0))
+            if np.linalg.norm(scene.points[robot, :2] - corners[corner]) <= REACHED:
+                corner, passed = (corner + 1) % count, passed + 1
+            upcoming[robot] = corner
+        return Round(upcoming, passed)
+
+    def goals(self, state: Round, scene: Scene) -> Goals:
+        """Give members their next waypoint, others the next after the loop's nearest point."""
+        corners, _, _ = self._loop
+        away, legs = self._nearest(scene.points[:, :2])
+        following = (legs + 1) % len(corners)
+        pace = np.ones(len(scene.points))
+        if state.next:
+            members = list(state.next)
+            following[members] = list(state.next.values())
+            pace[members] = self._pace(scene.points[members, :2], following[members])
+        points = np.column_stack([corners[following], np.full(len(following), np.nan)])
+        return Goals.at(points, scene, tolerance=0.0, path=away, pace=pace)
+
+    def _pace(self, points: np.ndarray, following: np.ndarray) -> np.ndarray:
+        """Give the pace of members by the gap to the one ahead; shape (n,)."""
+        if len(points) < 2:
+            return np.ones(len(points))
+        corners, _, way = self._loop
+        length = way[-1]
+        left = np.linalg.norm(corners[following] - points, axis=1)
+        along = (np.where(following == 0, length, way[following]) - left) % length
+        order = np.argsort(along, kind="stable")
+        gap = np.empty(len(points))
+        gap[order] = np.diff(along[order], append=along[order[0]] + length)
+        return np.clip(gap * len(points) / length, SLOWEST, 1.0)
+
+    def finished(self, state: Round) -> bool:
+        """Tell whether all laps are done."""
+        return self.laps > 0 and state.passed >= self.laps * len(self.waypoints)
+
+    def moved(self, at: tuple[float, float, float], heading: float | None) -> Patrol:
+        """Give the same loop with its middle at another place."""
+        corners, _, _ = self._loop
+        shifted = corners - corners.mean(axis=0) + np.array(at[:2])
+        return replace(self, waypoints=tuple((float(x), float(y)) for x, y in shifted))

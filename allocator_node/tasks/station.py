@@ -1,0 +1,32 @@
+"""Common part of the kinds whose group stands around one point."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+import numpy as np
+
+from .base import Scene
+from .places import ring, share_out
+
+
+def centre_of(at: tuple[float, ...]) -> np.ndarray:
+    """Give a goal point of two or three numbers as (3,); without a height it is NaN."""
+    return np.array([at[0], at[1], at[2] if len(at) > 2 else np.nan])
+
+
+def places_of(centre: np.ndarray, scene: Scene, before: Mapping[int, int]) -> dict[int, int]:
+    """Share out the places around a centre among the members of a scene."""
+    if not len(scene.members):
+        return {}
+    places = ring(centre, len(scene.members), scene.spacing)
+    return share_out(places, scene.members, scene.points, before)
+
+
+def points_of(centre: np.ndarray, scene: Scene, taken: Mapping[int, int]) -> np.ndarray:
+    """Give goal points (N, 3): members their places, everybody else the centre."""
+    points = np.repeat(centre[None, :], len(scene.points), axis=0)
+    if taken:
+        places = ring(centre, len(taken), scene.spacing)
+        points[list(taken)] = places[list(taken.values())]
+    return points
