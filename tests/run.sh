@@ -1,0 +1,9 @@
+#!/bin/sh
+# All tests, on real ROS 2:
+#   sh tests/run.sh [--distro kilted|jazzy] [arguments of pytest]
+set -eu
+. "$(dirname "$0")/../launch/prepare.sh"
+
+cd "$ROOT"
+echo "Tests on ROS 2 $distro ($source), $("$PYTHON" -V)."
+exec "$PYTHON" -m pytest -n 2 --dist loadfile "$@"
