@@ -1,0 +1,234 @@
+"""What happened in a rehearsal, gathered period by period, and its run.json."""
+
+from __future__ import annotations
+
+import json
+from collections import defaultdict
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from ..decision import Decision
+from ..team import Team
+from .site import Site
+from .world import SimulatedTeam
+
+EFFICACY_STEP = 0.01
+"""Efficacies are recorded when they have changed by this much."""
+
+TRACE_PERIOD = 1.0
+"""Paths, charges and efficacies are recorded this often, s."""
+
+
+@dataclass(frozen=True)
+class Rehearsal:
+    """The outcome of a rehearsal; the keys of run.json as attributes.
+
+    Attributes:
+        seconds: Simulated time, s.
+        robots: Names of the robots.
+        tasks: Names of the tasks.
+        events: Reallocations: t, task, from, to, cause, detail.
+        assignments: Changes of a robot's task: t, robot, task (None: none).
+        coverage: Task to the share of its active time all its needs were met; 1 if
+            it was never active.
+        active_s: Task to the time it was to be done, s.
+        finished: Task to the time it finished, s.
+        shortfalls: Times in which a task lacked something: t, until, task, text.
+        min_separation_m: Smallest distance between two bodies' surfaces, m; None
+            where no two robots were ever near the same height.
+        closest: When that was and between whom: t, robots.
+        boundary_violations: Robot-steps with the body's centre out of bounds.
+        body_violations: Robot-steps with any part of the body out of bounds.
+        energy_wh: Robot to the energy it used, Wh.
+        efficacy: Changes of learned efficacies: t, robot, task, value.
+        period_ms: Wall time of a decision: p50, p99, max, ms.
+        paths: Robot to rows of t, x, y, z, heading.
+        charges: Robot to rows of t, charge 0..1.
+        notices: Times a person should have known something: t, until, about, level, text.
+    """
+
+    seconds: float
+    robots: list[str]
+    tasks: list[str]
+    events: list[dict[str, Any]]
+    assignments: list[dict[str, Any]]
+    coverage: dict[str, float]
+    active_s: dict[str, float]
+    finished: dict[str, float]
+    shortfalls: list[dict[str, Any]]
+    min_separation_m: float | None
+    closest: dict[str, Any] | None
+    boundary_violations: int
+    body_violations: int
+    energy_wh: dict[str, float]
+    efficacy: list[dict[str, Any]]
+    period_ms: dict[str, float]
+    paths: dict[str, list[list[float]]]
+    charges: dict[str, list[list[float]]]
+    notices: list[dict[str, Any]]
+
+
+def write_run(rehearsal: Rehearsal, directory: Path) -> Path:
+    """Write run.json into a directory, made if needed, and give its path.
+
+    Raises:
+        OSError: The directory cannot be made or written to.
+        ValueError: A number is not finite, so that no strict JSON can hold it.
+    """
+    directory = Path(directory)
+    directory.mkdir(parents=True, exist_ok=True)
+    path = directory / "run.json"
+    path.write_text(json.dumps(vars(rehearsal), indent=1, allow_nan=False) + "\n", "utf-8")
+    return path
+
+
+class Spells:
+    """Facts that hold for a while, as rows with a beginning ``t`` and an end ``until``."""
+
+    def __init__(self) -> None:
+        self.rows: list[dict[str, Any]] = []
+        self._open: dict[tuple, dict[str, Any]] = {}
+
+    def note(self, now: float, facts: Mapping[tuple, Mapping[str, Any]]) -> None:
+        """Note the facts that hold at a time, each under a key that stays while it holds."""
+        for key, fact in facts.items():
+            if key not in self._open:
+                self._open[key] = {"t": now, "until": now, **fact}
+                self.rows.append(self._open[key])
+        for key in list(self._open):
+            self._open[key]["until"] = now
+            if key not in facts:
+                del self._open[key]
+
+
+@dataclass
+class Recorder:
+    """Gathers a rehearsal; the team may change while it runs."""
+
+    team: Team
+    site: Site
+    events: list[dict[str, Any]] = field(default_factory=list)
+    assignments: list[dict[str, Any]] = field(default_factory=list)
+    finished: dict[str, float] = field(default_factory=dict)
+    closest: dict[str, Any] | None = None
+    separation: float = np.inf
+    violations: np.ndarray = field(default_factory=lambda: np.zeros(2, dtype=int))
+    shortfalls: Spells = field(default_factory=Spells)
+    notices: Spells = field(default_factory=Spells)
+
+    def __post_init__(self) -> None:
+        self._task_of: dict[str, str | None] = {}
+        self._active: dict[str, float] = dict.fromkeys(self.team.tasks, 0.0)
+        self._covered: dict[str, float] = dict.fromkeys(self.team.tasks, 0.0)
+        self._efficacy: dict[tuple[str, str], float] = defaultdict(lambda: 1.0)
+        self._efficacies: list[dict[str, Any]] = []
+        self._paths: dict[str, list[list[float]]] = {name: [] for name in self.team.robots}
+        self._charges: dict[str, list[list[float]]] = {name: [] for name in self.team.robots}
+        self._trace_due = 0.0
+        self._wall_ms: list[float] = []
+
+    def decided(self, decision: Decision, period: float, wall_seconds: float) -> None:
+        """Record a decision that holds for a period and took so long to make."""
+        now = round(decision.time, 6)
+        self._wall_ms.append(1000 * wall_seconds)
+        for change in decision.reallocations:
+            self.events.append({
+                "t": now,
+                "task": change.task,
+                "from": list(change.before),
+                "to": list(change.after),
+                "cause": change.cause.value,
+                "detail": change.detail,
+            })
+        for index, robot in enumerate(decision.robots):
+            task = decision.task_of(index)
+            if robot not in self._task_of or self._task_of[robot] != task:
+                self._task_of[robot] = task
+                self.assignments.append({"t": now, "robot": robot, "task": task})
+        for task in decision.finished:
+            self.finished.setdefault(task, now)
+        lacking = {shortfall.task for shortfall in decision.shortfalls}
+        for name, task in self.team.tasks.items():
+            waiting = not set(task.after) <= decision.finished
+            if task.active and not waiting and name not in decision.finished:
+                self._active[name] += period
+                self._covered[name] += period * (name not in lacking)
+        self.shortfalls.note(now, {
+            (s.task, s.capability): {"task": s.task, "text": str(s)} for s in decision.shortfalls
+        })
+        self.notices.note(now, {
+            (n.about, n.level): {"about": n.about, "level": n.level.name.lower(), "text": n.text}
+            for n in decision.notices
+        })
+        if now >= self._trace_due - 1e-9:
+            self._note_efficacies(decision, now)
+
+    def moved(self, world: SimulatedTeam) -> None:
+        """Record where the robots are after a step of the simulation."""
+        nearest = self.site.separation(world.true_poses)
+        if nearest is not None and nearest[0] < self.separation:
+            self.separation, pair = nearest
+            names = sorted(world.robots[i] for i in pair)
+            self.closest = {"t": round(world.now, 6), "robots": names}
+        self.violations += [np.count_nonzero(out) for out in self.site.outside(world.true_poses)]
+
+    def trace(self, world: SimulatedTeam) -> None:
+        """Record paths and charges, once every :data:`TRACE_PERIOD`."""
+        if world.now < self._trace_due - 1e-9:
+            return
+        self._trace_due += TRACE_PERIOD
+        now = round(world.now, 6)
+        for robot, pose, charge in zip(
+            world.robots, world.true_poses, world.charge, strict=True
+        ):
+            self._paths[robot].append([now, *(round(float(value), 4) for value in pose)])
+            self._charges[robot].append([now, round(float(charge), 5)])
+
+    def result(self, world: SimulatedTeam) -> Rehearsal:
+        """Give what was recorded."""
+        p50, p99 = np.percentile(self._wall_ms, [50, 99]) if self._wall_ms else (0.0, 0.0)
+        return Rehearsal(
+            seconds=round(world.now, 6),
+            robots=list(self.team.robots),
+            tasks=list(self.team.tasks),
+            events=self.events,
+            assignments=self.assignments,
+            coverage={
+                task: round(self._covered[task] / active, 6) if active else 1.0
+                for task, active in self._active.items()
+            },
+            active_s={task: round(active, 6) for task, active in self._active.items()},
+            finished=self.finished,
+            shortfalls=self.shortfalls.rows,
+            min_separation_m=self.separation if np.isfinite(self.separation) else None,
+            closest=self.closest,
+            boundary_violations=int(self.violations[0]),
+            body_violations=int(self.violations[1]),
+            energy_wh={
+                robot: round(float(used), 6)
+                for robot, used in zip(world.robots, world.energy, strict=True)
+            },
+            efficacy=self._efficacies,
+            period_ms={
+                "p50": float(p50),
+                "p99": float(p99),
+                "max": float(max(self._wall_ms, default=0.0)),
+            },
+            paths=self._paths,
+            charges=self._charges,
+            notices=self.notices.rows,
+        )
+
+    def _note_efficacies(self, decision: Decision, now: float) -> None:
+        for i, robot in enumerate(decision.robots):
+            for m, task in enumerate(decision.tasks):
+                value = round(float(decision.efficacy[i, m]), 4)
+                if abs(value - self._efficacy[robot, task]) >= EFFICACY_STEP:
+                    self._efficacy[robot, task] = value
+                    self._efficacies.append(
+                        {"t": now, "robot": robot, "task": task, "value": value}
+                    )
