@@ -73,15 +73,24 @@ def generate_launch_description() -> LaunchDescription:
             )
         )
 
-    # A refusal stops here and not the whole launch, which may be somebody's entire stack.
-    refused = "allocator did not {0}: see its message above; then `ros2 lifecycle set` {0}"
+    def refused(transition: str) -> LogInfo:
+        """A refusal stops here and not the whole launch, which may be somebody's entire stack."""
+        return LogInfo(
+            msg=[
+                f"allocator did not {transition}: see its message above, then run: ",
+                "ros2 lifecycle set ",
+                LaunchConfiguration("namespace"),
+                f"/allocator {transition}",
+            ]
+        )
+
     return LaunchDescription(
         [
             *ARGUMENTS,
             allocator,
             on("configuring", "inactive", change(Transition.TRANSITION_ACTIVATE)),
-            on("configuring", "unconfigured", LogInfo(msg=refused.format("configure"))),
-            on("activating", "inactive", LogInfo(msg=refused.format("activate"))),
+            on("configuring", "unconfigured", refused("configure")),
+            on("activating", "inactive", refused("activate")),
             change(Transition.TRANSITION_CONFIGURE),
         ]
     )
