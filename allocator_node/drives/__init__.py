@@ -1,5 +1,8 @@
 """Drive models: how a command moves a robot. One file a model, one line in a table."""
 
+from collections.abc import Mapping
+
+from ..plugins import extended
 from .aerial import Aerial
 from .base import AXES, Drive
 from .differential import Differential
@@ -12,4 +15,23 @@ DRIVES: dict[str, type[Drive]] = {
 """Name in a team file to model; other packages add theirs by the entry point
 ``allocator_node.drives``."""
 
-__all__ = ["AXES", "DRIVES", "Aerial", "Differential", "Drive", "Fleet", "Holonomic"]
+
+def known_drives() -> Mapping[str, type[Drive]]:
+    """Give the table with the drive models of other packages added.
+
+    Raises:
+        PluginError: If one of those cannot be used.
+    """
+    return extended(DRIVES, "allocator_node.drives", Drive)
+
+
+__all__ = [
+    "AXES",
+    "DRIVES",
+    "Aerial",
+    "Differential",
+    "Drive",
+    "Fleet",
+    "Holonomic",
+    "known_drives",
+]

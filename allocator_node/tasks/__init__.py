@@ -1,5 +1,8 @@
 """Task kinds: where robots go for a task. One file a kind, one line in a table."""
 
+from collections.abc import Mapping
+
+from ..plugins import extended
 from .base import Goals, Scene, Task, distance
 from .patrol import Patrol
 from .visit import Visit
@@ -9,4 +12,24 @@ KINDS: dict[str, type[Task]] = {kind.kind: kind for kind in (Visit, Patrol, Watc
 """Name in a team file to kind; other packages add theirs by the entry point
 ``allocator_node.tasks``."""
 
-__all__ = ["KINDS", "Goals", "Patrol", "Scene", "Task", "Visit", "Watch", "distance"]
+
+def known_kinds() -> Mapping[str, type[Task]]:
+    """Give the table with the task kinds of other packages added.
+
+    Raises:
+        PluginError: If one of those cannot be used.
+    """
+    return extended(KINDS, "allocator_node.tasks", Task)
+
+
+__all__ = [
+    "KINDS",
+    "Goals",
+    "Patrol",
+    "Scene",
+    "Task",
+    "Visit",
+    "Watch",
+    "distance",
+    "known_kinds",
+]

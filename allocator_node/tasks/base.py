@@ -104,6 +104,11 @@ class Task(Checked, abc.ABC):
     after: tuple[Name, ...] = ()
     active: bool = True
 
+    @property
+    def ends(self) -> bool:
+        """Whether it comes to an end of its own, so that others may wait for it."""
+        return False
+
     @abc.abstractmethod
     def begin(self) -> Any:
         """Give the state before anything is done."""

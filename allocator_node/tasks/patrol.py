@@ -60,6 +60,11 @@ class Patrol(Task):
         leg = np.argmin(np.nan_to_num(away, nan=np.inf), axis=1)
         return away[np.arange(len(points)), leg], leg
 
+    @property
+    def ends(self) -> bool:
+        """A patrol with a number of laps ends."""
+        return self.laps > 0
+
     def begin(self) -> Round:
         """Give the state before the first round."""
         return Round()

@@ -42,6 +42,11 @@ class Visit(Task):
     tolerance: Positive = 0.3
     dwell: NonNegative = 0.0
 
+    @property
+    def ends(self) -> bool:
+        """A visit always ends."""
+        return True
+
     def begin(self) -> Progress:
         """Give the state before anybody was there."""
         return Progress()
