@@ -8,16 +8,16 @@ from dataclasses import dataclass, field
 from threading import Lock
 from typing import Any
 
-STATES = ("ok", "warning", "error", "stale")
-"""Names of DiagnosticStatus levels 0..3."""
-
 SPECIALIZATION = "specialization."
 """Prefix of the keys that give a robot's specialization for a task."""
 
 
 @dataclass(frozen=True)
 class Row:
-    """One robot: name, task ("": none), specialization by task, charge 0..1 or NaN, state."""
+    """One robot: name, task ("": none), specialization by task, charge 0..1 or NaN, state.
+
+    The text is what the state says beyond the task; "" when all is well.
+    """
 
     robot: str
     task: str
@@ -100,10 +100,12 @@ class Board:
 
 def row_of(status: Mapping[str, Any]) -> Row:
     """Give the row of one status of ``~/assignments``."""
-    values = status["values"]
+    values, robot = status["values"], status["name"]
+    task = values.get("task", "")
+    known = f"{robot} does {task}" if task else f"{robot} has no task"
     return Row(
-        robot=status["name"].rpartition(": ")[2],
-        task=values.get("task", ""),
+        robot=robot,
+        task=task,
         specialization={
             key.removeprefix(SPECIALIZATION): number(value)
             for key, value in values.items()
@@ -111,7 +113,7 @@ def row_of(status: Mapping[str, Any]) -> Row:
         },
         charge=number(values.get("energy", "")),
         level=status["level"],
-        text=status["text"],
+        text=status["text"].removeprefix(known).lstrip(",; "),
     )
 
 

@@ -3,20 +3,25 @@
 from __future__ import annotations
 
 import math
+import textwrap
 from collections.abc import Iterable, Sequence
 
+from rich import box
 from rich.console import Console, Group, RenderableType
 from rich.markup import escape
 from rich.table import Table
 from rich.text import Text
 
-from .board import STATES, Change, Row
+from .board import Change, Row
 
 WIDTH = 100
 """Columns used, and assumed where the output is not a terminal."""
 
 BAR = 6
 """Characters of a bar."""
+
+STATES = ("ok", "warning", "error", "stale")
+"""Names of DiagnosticStatus levels 0..3."""
 
 EIGHTHS = " ▏▎▍▌▋▊▉█"
 STYLES = ("green", "yellow", "red", "magenta")
@@ -51,25 +56,22 @@ def team_table(rows: Sequence[Row], width: int = WIDTH) -> Table:
     Where not all tasks find room, the bar is that of the robot's present task.
     """
     tasks = list(dict.fromkeys(task for row in rows for task in row.specialization))
-    fits = 58 + len(tasks) * (BAR + 3) <= width
-    table = Table(pad_edge=False, expand=False)
+    fits = 60 + len(tasks) * (BAR + 2) <= width
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False, width=width)
     table.add_column("robot", no_wrap=True)
     table.add_column("task", no_wrap=True)
     for heading in map(heading_of, tasks if fits else ["able"]):
         table.add_column(heading, width=BAR, overflow="crop")
     table.add_column("battery", justify="right", no_wrap=True)
-    table.add_column("state", overflow="ellipsis", no_wrap=True, ratio=1)
+    table.add_column("state", overflow="ellipsis", no_wrap=True, ratio=1, min_width=8)
     for row in rows:
         shown = tasks if fits else [row.task]
         bars = [
             Text(bar(row.specialization.get(task, 0.0)), "bold cyan" if task == row.task else "dim")
             for task in shown
         ]
-        state = row.text or STATES[row.level]
-        table.add_row(
-            row.robot, row.task or "–", *bars, percent(row.charge),
-            Text(state, STYLES[min(row.level, 3)]),
-        )
+        state = Text(row.text or STATES[row.level], STYLES[min(row.level, 3)])
+        table.add_row(row.robot, row.task or "–", *bars, percent(row.charge), state)
     return table
 
 
@@ -80,7 +82,7 @@ def heading_of(task: str) -> str:
 
 def change_text(change: Change) -> Text:
     """Give one reallocation in colours."""
-    text = Text(str(change), overflow="fold")
+    text = Text(folded(str(change)))
     text.highlight_regex(r"\[\w+\]", "bold yellow")
     return text
 
@@ -105,10 +107,18 @@ def live_view(
     )
 
 
-def status_line(t: float, rows: Iterable[Row], uncovered: str) -> str:
-    """Give the state of the team in one line without colours."""
-    tasks = "  ".join(f"{row.robot}={row.task or '-'}({percent(row.charge)})" for row in rows)
-    return f"{t:6.1f} s  {tasks}  uncovered: {uncovered or 'nothing'}"
+def status_lines(t: float, rows: Iterable[Row], uncovered: str) -> str:
+    """Give the state of the team without colours, within :data:`WIDTH` columns."""
+    tasks = ", ".join(f"{row.robot}: {row.task or 'none'} ({percent(row.charge)})" for row in rows)
+    return folded(f"{t:6.1f} s  {tasks}; uncovered: {uncovered or 'nothing'}")
+
+
+def folded(text: str) -> str:
+    """Give a text that starts with a time over lines of :data:`WIDTH` columns."""
+    start = len(text) - len(text.lstrip())
+    return textwrap.fill(
+        text[start:], WIDTH, initial_indent=" " * start, subsequent_indent=" " * 10
+    )
 
 
 def facts_table(title: str, facts: Iterable[tuple[str, str]]) -> Table:

@@ -22,7 +22,16 @@ from ..team_file import read_team
 from .board import Board
 from .children import Child
 from .examples import example_files
-from .screen import WIDTH, console, facts_table, live_view, status_line, team_table
+from .screen import (
+    WIDTH,
+    change_text,
+    console,
+    facts_table,
+    folded,
+    live_view,
+    status_lines,
+    team_table,
+)
 from .team_rehearse import positive
 
 STARTUP = 60.0
@@ -44,7 +53,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         team = read_team(team_file)
         if world_file:
             read_world(world_file, team)
-    except (FileError, FileNotFoundError) as error:
+    except (FileError, OSError) as error:
         print(error, file=sys.stderr)
         return 2
     out = asked.out or Path("runs") / f"demo-{datetime.now():%Y%m%d-%H%M%S}"
@@ -182,10 +191,10 @@ def print_lines(board: Board, children: Sequence[Child], seconds: float, screen:
         with board.lock:
             rows, changes, lack = board.rows, board.changes[printed:], board.lack.now
         for change in changes:
-            print(change, flush=True)
+            print(folded(str(change)), flush=True)
         printed += len(changes)
         if t >= due:
-            print(status_line(t, rows, lack), flush=True)
+            print(status_lines(t, rows, lack), flush=True)
             due += LINE_EVERY
         time.sleep(0.1)
 
@@ -197,7 +206,7 @@ def say_summary(board: Board, seconds: float, out: Path, screen: Console) -> Non
     screen.print(team_table(board.rows))
     if screen.is_terminal:
         for change in board.changes:
-            print(change)
+            screen.print(change_text(change))
     causes: dict[str, int] = {}
     for change in board.changes:
         causes[change.cause] = causes.get(change.cause, 0) + 1

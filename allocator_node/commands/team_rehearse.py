@@ -27,7 +27,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     try:
         team = read_team(asked.team)
         world = read_world(asked.world, team) if asked.world else World()
-    except FileError as error:
+    except (FileError, OSError) as error:
         print(error, file=sys.stderr)
         return 2
     with progress_bar(screen) as progress:
