@@ -1,0 +1,65 @@
+"""When a message held: its stamp where that can be believed, else its arrival."""
+
+from __future__ import annotations
+
+import time
+
+BELIEVED = 1.0
+"""A stamp may be this much older than now, s."""
+
+EARLY = 0.1
+"""A stamp may be this much ahead of now, s: clocks of two hosts in good agreement."""
+
+
+def arrival_time(now: float, received: int, last_look: float) -> float:
+    """Give when a message arrived, on the clock of ``now``, s.
+
+    The middleware tells it in system time, which may be stepped, and ``now``
+    may be simulated time; the arrival lies between the last look and now in
+    any case.
+
+    Args:
+        now: Time of this look, s.
+        received: System time of the arrival, ns; 0: not told.
+        last_look: Time of the look before, s; NaN: there was none.
+    """
+    age = (time.time_ns() - received) * 1e-9 if received > 0 else 0.0
+    longest = now - last_look if now >= last_look else age
+    return now - min(max(age, 0.0), longest)
+
+
+class StampReader:
+    """Turns the stamps of one topic into times a pose held.
+
+    A message that repeats the last stamp, or comes late with an older one,
+    is no news. A stamp far from now comes from a clock that disagrees: then
+    the arrival counts.
+    """
+
+    def __init__(self) -> None:
+        self._last = 0.0
+
+    def time_of(self, now: float, arrival: float, stamp: float) -> tuple[float | None, str]:
+        """Give when the message held, s, and what is odd about it ("" if nothing).
+
+        The time is None where the message is no news.
+        """
+        if stamp <= 0:
+            return arrival, ""
+        if stamp == self._last:
+            return None, "the same stamp came again, so the message is not new"
+        if self._last - BELIEVED < stamp < self._last:
+            return None, f"a message came late, {self._last - stamp:.2f} s behind the last one"
+        self._last = stamp
+        if -EARLY <= now - stamp <= BELIEVED:
+            return min(stamp, now), ""
+        off = now - stamp
+        side = "behind" if off > 0 else "ahead of"
+        return arrival, (
+            f"stamps are {abs(off):.1f} s {side} this node's clock; "
+            "the time of arrival is used instead"
+        )
+
+    def forget(self) -> None:
+        """Take the next stamp as the first."""
+        self._last = 0.0

@@ -1,0 +1,236 @@
+"""Messages in: all that was heard since the last decision, as one observation."""
+
+from __future__ import annotations
+
+import fnmatch
+import re
+from collections.abc import Callable, Iterator
+from typing import TypeVar
+
+import numpy as np
+from diagnostic_msgs.msg import DiagnosticArray
+from geometry_msgs.msg import PoseStamped
+from rclpy.node import Node
+from sensor_msgs.msg import BatteryState
+from std_msgs.msg import Float32
+
+from ..observation import HealthReport, MovedGoal, Observation
+from ..team import Robot, Team
+from .clockwork import arrival_time
+from .complaints import Complaints
+from .conversions import numbers, yaw_of
+from .polling import PolledSubscription
+from .poses import PoseTopic, PoseTransform, Transforms
+from .qos import EVENTS, NEWEST
+
+LEVELS = 4
+"""DiagnosticStatus has the levels OK, WARN, ERROR, STALE = 0, 1, 2, 3."""
+
+AT_ONCE = 200
+"""Up to so many quality topics are subscribed to from the start; a large team's
+only once somebody publishes on them."""
+
+Value = TypeVar("Value")
+
+
+class Inbox:
+    """Listens for a team and gives what it heard, once a period.
+
+    What cannot be used is refused with a warning that names the topic and the
+    reason; the last good value stays and ages.
+
+    Attributes:
+        complaints: What was refused.
+    """
+
+    def __init__(self, node: Node, team: Team) -> None:
+        """Subscribe to everything the team file names.
+
+        Raises:
+            ImportError: A pose comes from tf and tf2_ros is not installed.
+        """
+        self._node = node
+        self._frame = team.frame
+        self.complaints = Complaints(node.get_logger())
+        robots = tuple(team.robots.values())
+        self._transforms = Transforms(node) if any(_by_tf(robot) for robot in robots) else None
+        self._poses = [self._pose_source(robot) for robot in robots]
+        self._batteries = [
+            self._subscription(BatteryState, robot.battery_topic, NEWEST) for robot in robots
+        ]
+        self._diagnostics = self._subscription(DiagnosticArray, "/diagnostics", EVENTS)
+        self._concerns_us = _matcher(robots)
+        self._robots = tuple(team.robots)
+        self._goals: dict[str, PolledSubscription] = {}
+        self._quality: dict[tuple[str, str], PolledSubscription] = {}
+        self._last = Observation.nothing(len(robots))
+        self._last_look = np.nan
+        self.watch(team)
+
+    def _pose_source(self, robot: Robot) -> PoseTopic | PoseTransform:
+        if _by_tf(robot):
+            return PoseTransform(self._transforms, robot.pose.tf, self._frame, self.complaints)
+        return PoseTopic(self._node, robot.pose, self._frame, self.complaints)
+
+    def _subscription(self, message_type: type, topic: str, qos: object) -> PolledSubscription:
+        return PolledSubscription(self._node, message_type, topic, qos, self.complaints)
+
+    def watch(self, team: Team) -> None:
+        """Follow a task table: subscribe to its goals and qualities, drop the others."""
+        self._tasks = tuple(team.tasks)
+        self._follow(
+            self._goals,
+            list(self._tasks),
+            lambda task: self._subscription(PoseStamped, f"~/tasks/{task}/goal", EVENTS),
+        )
+        self.notice_publishers()
+
+    def notice_publishers(self) -> None:
+        """Subscribe to the quality topics that are in use; call about once a second."""
+        pairs = [(robot, task) for robot in self._robots for task in self._tasks]
+        if len(pairs) > AT_ONCE:
+            published = {name for name, _ in self._node.get_topic_names_and_types()}
+            pairs = [pair for pair in pairs if self._full(pair) in published]
+        self._follow(
+            self._quality,
+            pairs,
+            lambda pair: self._subscription(Float32, self._full(pair), NEWEST),
+        )
+
+    def _full(self, pair: tuple[str, str]) -> str:
+        return self._node.resolve_topic_name(f"~/quality/{pair[0]}/{pair[1]}")
+
+    @staticmethod
+    def _follow(
+        table: dict[Value, PolledSubscription],
+        wanted: list[Value],
+        subscribe: Callable[[Value], PolledSubscription],
+    ) -> None:
+        for key in table.keys() - set(wanted):
+            table.pop(key).close()
+        for key in wanted:
+            if key not in table:
+                table[key] = subscribe(key)
+
+    def observation(self, now: float) -> Observation:
+        """Give all that was heard up to ``now``, s on the node's clock."""
+        last = self._last
+        poses, times, velocities = last.poses.copy(), last.pose_times.copy(), last.velocities.copy()
+        for i, source in enumerate(self._poses):
+            sighting = source.look(now)
+            if sighting is not None:
+                poses[i], times[i] = sighting.pose, sighting.time
+                velocities[i] = sighting.velocity
+        charges, charge_times = last.charges.copy(), last.charge_times.copy()
+        for i, subscription in enumerate(self._batteries):
+            for arrival in subscription.drain():
+                charge = self._charge(subscription.topic, arrival.message)
+                if charge is not None:
+                    charges[i] = charge
+                    charge_times[i] = arrival_time(now, arrival.received, self._last_look)
+        self._last_look = now
+        self._last = Observation(
+            poses,
+            times,
+            velocities,
+            charges,
+            charge_times,
+            health=tuple(self._health()),
+            goals=tuple(self._moved_goals()),
+            quality=dict(self._qualities()),
+        )
+        return self._last
+
+    def _charge(self, topic: str, message: BatteryState) -> float | None:
+        """Give BatteryState.percentage: "0 to 1 range (If unmeasured NaN)", else None."""
+        charge = float(message.percentage)
+        if np.isnan(charge):
+            return None
+        if not 0.0 <= charge <= 1.0:
+            self.complaints.refuse(topic, f"percentage is {charge:.4g}, it must be within 0..1")
+            return None
+        return charge
+
+    def _health(self) -> Iterator[HealthReport]:
+        newest: dict[str, HealthReport] = {}
+        for arrival in self._diagnostics.drain():
+            for status in arrival.message.status:
+                if not self._concerns_us(status.name):
+                    continue
+                level = status.level[0]
+                if level >= LEVELS:
+                    self.complaints.refuse(
+                        self._diagnostics.topic, f"{status.name!r} has level {level}, not 0..3"
+                    )
+                    continue
+                newest.pop(status.name, None)  # Keeps the order of arrival.
+                newest[status.name] = HealthReport(status.name, level, status.message)
+        yield from newest.values()
+
+    def _moved_goals(self) -> Iterator[MovedGoal]:
+        for task, subscription in self._goals.items():
+            for arrival in subscription.drain():
+                try:
+                    yield self._moved_goal(task, arrival.message)
+                except ValueError as error:
+                    self.complaints.refuse(subscription.topic, str(error))
+
+    def _moved_goal(self, task: str, message: PoseStamped) -> MovedGoal:
+        if message.header.frame_id != self._frame:
+            raise ValueError(
+                f"frame_id is {message.header.frame_id!r}, the site frame is {self._frame!r}"
+            )
+        turn = message.pose.orientation
+        # All zero is no rotation: a sender that leaves the heading as it is.
+        given = any((turn.x, turn.y, turn.z, turn.w))
+        return MovedGoal(
+            task,
+            numbers(message.pose.position, "the position"),
+            yaw_of(turn) if given else None,
+        )
+
+    def _qualities(self) -> Iterator[tuple[tuple[str, str], float]]:
+        for pair, subscription in self._quality.items():
+            for arrival in subscription.drain():
+                quality = float(arrival.message.data)
+                if 0.0 <= quality <= 1.0:
+                    yield pair, quality
+                else:
+                    self.complaints.refuse(
+                        subscription.topic, f"quality is {quality:.4g}, it must be within 0..1"
+                    )
+
+    def sources(self) -> dict[str, str]:
+        """Give each robot's pose topic."""
+        return {
+            robot: source.topic for robot, source in zip(self._robots, self._poses, strict=True)
+        }
+
+    def forget_times(self) -> None:
+        """Drop all that was heard: the clock was set back, so its times mean nothing."""
+        self._last = Observation.nothing(len(self._robots))
+        self._last_look = np.nan
+        for source in self._poses:
+            source.forget_times()
+
+    def close(self) -> None:
+        """End all subscriptions."""
+        for source in self._poses:
+            source.close()
+        tables = (self._goals, self._quality)
+        for subscription in (
+            *self._batteries, self._diagnostics, *(s for table in tables for s in table.values())
+        ):
+            subscription.close()
+        if self._transforms is not None:
+            self._transforms.close()
+
+
+def _by_tf(robot: Robot) -> bool:
+    return robot.pose.tf is not None
+
+
+def _matcher(robots: tuple[Robot, ...]) -> Callable[[str], object]:
+    """Give a test of whether any health rule speaks about a status name."""
+    rules = {rule.name for robot in robots for rule in robot.health}
+    return re.compile("|".join(fnmatch.translate(rule) for rule in rules) or r"(?!)").match

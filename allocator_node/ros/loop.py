@@ -1,0 +1,326 @@
+"""The loop: hear, decide, drive, tell; what exists between configure and cleanup."""
+
+from __future__ import annotations
+
+import time
+import traceback
+from collections.abc import Callable
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from diagnostic_msgs.msg import DiagnosticArray
+from rclpy.node import Node
+from rclpy.timer import Timer
+from visualization_msgs.msg import MarkerArray
+
+from ..decision import Decision
+from ..observation import Orders
+from ..settings import Settings
+from ..team import Team
+from .command_topics import CommandTopics, other_publishers
+from .inbox import Inbox
+from .loop_health import LoopHealth
+from .markers import MarkerBoard
+from .outbox import Outbox
+from .parameters import Options
+from .qos import LATCHED
+from .state_file import StateFile
+
+DISCOVERY = 1.0
+"""Time a node needs to see the publishers of others, s."""
+
+REPORT_EVERY, MARKERS_EVERY, SAVE_EVERY = 1.0, 0.5, 2.0
+"""Periods of diagnostics, markers and the state file, s."""
+
+STOP_REPEATS = 3
+"""The last command is sent so often: a robot may listen with best effort."""
+
+
+class Occupied(Exception):
+    """Somebody else commands a robot of ours."""
+
+
+class Loop:
+    """Runs an allocator on the topics of a team.
+
+    Attributes:
+        allocator: The allocator.
+        active: Whether the loop runs.
+    """
+
+    def __init__(
+        self,
+        node: Node,
+        team: Team,
+        options: Options,
+        settings: Settings,
+        orders: Orders,
+        make_allocator: Callable[..., Any],
+    ) -> None:
+        """Listen and announce, but decide nothing yet.
+
+        Raises:
+            ImportError: A pose comes from tf and tf2_ros is not installed.
+        """
+        self._node, self._log = node, node.get_logger()
+        self._born = time.monotonic()
+        self._make = make_allocator
+        self._options = options
+        self.active = False
+        self.allocator = make_allocator(team, settings, 1 / options.rate)
+        self.allocator.orders = orders
+        self._inbox = Inbox(node, team)
+        self._outbox = Outbox(node, team)
+        self._board = MarkerBoard(team)
+        self._markers = node.create_publisher(MarkerArray, "~/markers", LATCHED)
+        self._diagnostics = node.create_publisher(DiagnosticArray, "/diagnostics", 10)
+        self._health = LoopHealth(node.get_name(), 1 / options.rate)
+        self._state = StateFile(Path(options.state_file)) if options.state_file else None
+        self._commands: CommandTopics | None = None
+        self._timer: Timer | None = None
+        self._decision: Decision | None = None
+        self._last = -np.inf
+        self._due = {"report": 0.0, "markers": 0.0, "save": 0.0}
+        self._recall()
+
+    # What the lifecycle asks for
+
+    def start(self) -> None:
+        """Start to decide, and to drive if the options say so.
+
+        Raises:
+            Occupied: Somebody else publishes on a command topic; nothing is started.
+        """
+        if self._options.command_robots:
+            self._take_over()
+        self._renew()
+        self.active = True
+        self._set_timer()
+
+    def stop(self) -> None:
+        """Make every robot stand, then stop deciding; does nothing the second time."""
+        if self._timer is not None:
+            self._node.destroy_timer(self._timer)
+            self._timer = None
+        self._let_go()
+        if not self.active:
+            return
+        self.active = False
+        self._health.pause()
+        self._outbox.dismiss()
+        self._markers.publish(self._board.clear())
+        if self._state is not None:
+            try:
+                self._state.save(self.allocator.memory())
+            except OSError as error:
+                self._log.error(f"state_file: nothing was saved: {error}")
+
+    def close(self) -> None:
+        """Stop, and give every topic back."""
+        self.stop()
+        self._inbox.close()
+        self._outbox.close()
+        self._node.destroy_publisher(self._markers)
+        self._node.destroy_publisher(self._diagnostics)
+        if self._state is not None:
+            self._state.close()
+
+    # What the operator asks for
+
+    def check(self, options: Options) -> None:
+        """Check that options can be applied now.
+
+        Raises:
+            Occupied: Driving is asked for and somebody else drives.
+        """
+        if self.active and options.command_robots and self._commands is None:
+            self._refuse_if_occupied()
+
+    def apply(self, options: Options, settings: Settings, orders: Orders, team: Team) -> None:
+        """Take new options, settings, orders and, if it is another one, team."""
+        rate, self._options = self._options.rate, options
+        self.allocator.settings = settings
+        self.allocator.orders = orders
+        if team is not self.allocator.team:
+            self.allocator.edit(team, self._now())
+            self._inbox.watch(team)
+        if options.rate != rate:
+            self._change_rate()
+        if self.active and options.command_robots and self._commands is None:
+            self._commands = CommandTopics(self._node, self.allocator.team)
+        elif not options.command_robots:
+            self._let_go()
+
+    def hold(self, hold: bool) -> None:
+        """Make all robots stand, or go on."""
+        self.allocator.orders = replace(self.allocator.orders, hold=hold)
+
+    # The period
+
+    def tick(self) -> None:
+        """Do what is due; an exception makes the robots stand and is told, never raised."""
+        self._health.begin()
+        if not self._guarded(self._decide):
+            self._guarded(self._stand)
+        self._health.end()
+        for what, every, act in (
+            ("markers", MARKERS_EVERY, self._show),
+            ("report", REPORT_EVERY, self._report),
+            ("save", SAVE_EVERY, self._save),
+        ):
+            now = time.monotonic()
+            if now >= self._due[what]:
+                self._due[what] = now + every
+                self._guarded(act)
+
+    def _guarded(self, act: Callable[[], None]) -> bool:
+        try:
+            act()
+        except Exception as error:  # the loop must go on whatever happens
+            self._health.fail(error)
+            self._log.error(
+                f"the loop failed ({self._health.failures} times so far), robots are told to "
+                f"stand:\n{traceback.format_exc()}",
+                throttle_duration_sec=1.0,
+            )
+            return False
+        return True
+
+    def _decide(self) -> None:
+        now = self._now()
+        if now < self._last:
+            self._set_back(now)
+            return
+        self._last = now
+        decision = self.allocator.step(self._inbox.observation(now), now)
+        self._decision = decision
+        if self._commands is not None:
+            broken = self._commands.send(decision, self.allocator.orders.hold)
+            if broken:
+                raise ArithmeticError(f"commands are not finite for {', '.join(broken)}")
+        self._outbox.publish(decision)
+
+    def _set_back(self, now: float) -> None:
+        self._log.warning(
+            f"the clock was set back by {self._last - now:.2f} s: what was heard is dropped, "
+            "what was learned stays"
+        )
+        self._last = now
+        self._stand()
+        self._inbox.forget_times()
+        self._renew()
+
+    def _renew(self) -> None:
+        """Start beliefs about the present anew; keep what was learned, orders and tasks."""
+        old = self.allocator
+        self.allocator = self._make(old.team, old.settings, 1 / self._options.rate)
+        self.allocator.orders = old.orders
+        self.allocator.recall(old.memory())
+
+    def _report(self) -> None:
+        self._inbox.notice_publishers()
+        others = []
+        if self._commands is not None:
+            others = other_publishers(self._node, self.allocator.team, own=1)
+            for sentence in others:
+                self._log.error(f"{sentence} too", throttle_duration_sec=10.0)
+        self._diagnostics.publish(
+            self._health.diagnostics(
+                self._decision, self._now(), self._inbox.complaints.recent(), others, self._silent()
+            )
+        )
+
+    def _silent(self) -> dict[str, str]:
+        """Give the robots not heard from, with what the graph shows about it."""
+        if self._decision is None:
+            return {}
+        sources = self._inbox.sources()
+        silent = {}
+        for robot, heard in zip(self._decision.robots, self._decision.heard, strict=True):
+            if not heard:
+                topic = sources[robot]
+                silent[robot] = f"nothing usable on {topic}"
+                if topic.startswith("/") and not self._node.count_publishers(topic):
+                    silent[robot] = f"nobody publishes on {topic}"
+        return silent
+
+    def _show(self) -> None:
+        if self._decision is not None and self._node.count_subscribers(self._markers.topic_name):
+            self._markers.publish(self._board.markers(self._decision))
+
+    # Commands
+
+    def _take_over(self) -> None:
+        # A publisher that was there before us may not have been discovered yet.
+        time.sleep(max(0.0, DISCOVERY - (time.monotonic() - self._born)))
+        self._refuse_if_occupied()
+        self._commands = CommandTopics(self._node, self.allocator.team)
+
+    def _refuse_if_occupied(self) -> None:
+        others = other_publishers(self._node, self.allocator.team, own=0)
+        if others:
+            raise Occupied(
+                f"{'; '.join(others)}: two nodes would fight over the robots; stop the other, or "
+                "set command_robots to false"
+            )
+
+    def _stand(self) -> None:
+        if self._commands is not None:
+            self._commands.stand()
+
+    def _let_go(self) -> None:
+        if self._commands is None:
+            return
+        for _ in range(STOP_REPEATS):
+            self._commands.stand()
+            self._commands.deliver()
+            time.sleep(0.02)
+        self._commands.close()
+        self._commands = None
+
+    # Clock and memory
+
+    def _now(self) -> float:
+        return self._node.get_clock().now().nanoseconds * 1e-9
+
+    def _set_timer(self) -> None:
+        if self._timer is not None:
+            self._node.destroy_timer(self._timer)
+        self._timer = self._node.create_timer(1 / self._options.rate, self.tick)
+
+    def _change_rate(self) -> None:
+        self._health.period = 1 / self._options.rate
+        self._health.pause()
+        self.allocator.period = 1 / self._options.rate
+        if self.active:
+            self._set_timer()
+
+    def _save(self) -> None:
+        if self._state is None:
+            return
+        try:
+            self._state.save_soon(self.allocator.memory())
+        except OSError as error:
+            self._log.error(
+                f"state_file: nothing is saved: {error}", throttle_duration_sec=10.0
+            )
+
+    def _recall(self) -> None:
+        """Take up what a node before this one learned; a damaged file is set aside."""
+        if self._state is None:
+            return
+        try:
+            memory = self._state.load()
+            if memory is not None:
+                self.allocator.recall(memory)
+                self._log.info(f"taken up from {self._state.path}")
+        except OSError as error:
+            self._log.error(f"state_file: {error}; starting without it")
+        except (ValueError, TypeError, LookupError, AttributeError) as error:
+            aside = self._state.set_aside()
+            self._log.warning(
+                f"state_file: {self._state.path} is damaged ({error}); it is kept as {aside}, "
+                "and nothing of it is used"
+            )
