@@ -40,20 +40,20 @@ python3 -c 'import ensurepip, venv' 2> /dev/null ||
     fail "Python's venv module is missing; install it (Debian, Ubuntu: apt install python3-venv)."
 
 source=wheels
-if [ -n "${ROS_DISTRO:-}" ] && python3 -c 'import rclpy' 2> /dev/null; then
+distro=${asked:-kilted}
+if [ -n "${ROS_DISTRO:-}" ] && [ -n "${AMENT_PREFIX_PATH:-}" ]; then
     source=sourced
-    [ -z "$asked" ] || [ "$asked" = "$ROS_DISTRO" ] ||
-        fail "ROS 2 $ROS_DISTRO is sourced in this shell; for $asked use one where it is not."
     distro=$ROS_DISTRO
-else
-    distro=${asked:-kilted}
-    case $distro in
-        kilted | jazzy) ;;
-        *) fail "--distro is kilted or jazzy, not '$distro'." ;;
-    esac
-    [ -z "${ROS_DISTRO:-}" ] ||
-        echo "ROS 2 $ROS_DISTRO is sourced, but python3 cannot import its rclpy: using wheels."
+    elsewhere="or use a shell where ROS 2 is not sourced: wheels do there."
+    [ "${asked:-$distro}" = "$distro" ] ||
+        fail "ROS 2 $distro is sourced in this shell, not $asked; source $asked, $elsewhere"
+    python3 -c 'import rclpy' ||
+        fail "python3 cannot import rclpy of the sourced ROS 2 $distro; mend that, $elsewhere"
 fi
+case $source,$distro in
+    sourced,* | wheels,kilted | wheels,jazzy) ;;
+    *) fail "--distro is kilted or jazzy, not '$distro'." ;;
+esac
 
 # --- the environment, once -----------------------------------------------------------------
 if [ "$distro" = kilted ]; then venv=$ROOT/.venv; else venv=$ROOT/.venv-$distro; fi
