@@ -1,21 +1,21 @@
 """A YAML document as plain objects that remember their lines.
 
-Scalars follow the core schema of YAML 1.2.2 (section 10.3.2), so ``1e3`` is a
-number while ``no``, ``on`` and ``1:30`` are text. Aliases are fine; tags,
+Scalars follow YAML 1.2 (:mod:`allocator_node.scalars`). Aliases are fine; tags,
 merge keys, keys that are not text and second documents are refused.
 """
 
 from __future__ import annotations
 
-import difflib
-import json
 import re
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
 import yaml
+
+from .scalars import resolved
+from .wording import dotted, quoted
 
 Place = tuple[str | int, ...]
 """Keys and list positions that lead to a value."""
@@ -29,23 +29,10 @@ MOST_VALUES = 100_000
 DEEPEST = 16
 """Levels of lists and mappings within each other."""
 
-LARGEST_NUMBER = 1e9
-"""Everything is in SI units, so a greater number is a slip, and squaring it loses digits."""
-
-LONGEST_LIST = 12
-"""Choices a message lists before it only counts them."""
-
 _LOADER = getattr(yaml, "CSafeLoader", yaml.SafeLoader)
 _UNPRINTABLE = re.compile(
     "[^\t\n\r\x20-\x7e\x85\xa0-\ud7ff\ue000-\ufffd\U00010000-\U0010ffff]"
 )
-_INTEGER = re.compile(r"[-+]?[0-9]+")
-_OCTAL_OR_HEX = re.compile(r"0o[0-7]+|0x[0-9a-fA-F]+")
-_FLOAT = re.compile(r"[-+]?(\.[0-9]+|[0-9]+(\.[0-9]*)?)([eE][-+]?[0-9]+)?")
-_SPECIAL = re.compile(r"([-+]?)\.(inf|Inf|INF)|\.(nan|NaN|NAN)")
-_WORDS = dict.fromkeys(("", "~", "null", "Null", "NULL")) | {
-    word: word.lower() == "true" for word in ("true", "True", "TRUE", "false", "False", "FALSE")
-}
 
 
 @dataclass(frozen=True)
@@ -69,7 +56,7 @@ class Problem:
     def __str__(self) -> str:
         where = f"{self.file}:{self.line}" if self.line else self.file
         parts = (where, self.path, f"found {self.found}; {self.allowed}")
-        return ": ".join(filter(None, parts))
+        return " ".join(": ".join(filter(None, parts)).splitlines())
 
 
 class FileError(Exception):
@@ -171,55 +158,13 @@ def parse_document(text: str, name: str) -> Document:
                 f"must be valid YAML: {hint}colons, quotes and brackets",
                 line=mark.line + 1 if mark else 1,
             )
-        except _TooMuch:
+        except _Hopeless:
             pass
     raise FileError(document.problems)
 
 
-def dotted(place: Place) -> str:
-    """Write a place as in ``robots.rover_1.health[0].feature``."""
-    text = ""
-    for step in place:
-        if isinstance(step, int):
-            text += f"[{step}]"
-        else:
-            plain = re.fullmatch(r"[\w-]+", step)
-            text += ("." if text else "") + (step if plain else _quoted(step))
-    return text
-
-
-def described(value: Any) -> str:
-    """Say what a value is, in one line."""
-    if value is None:
-        return "nothing"
-    if isinstance(value, bool):
-        return str(value).lower()
-    if isinstance(value, int | float):
-        return repr(value)
-    if isinstance(value, str):
-        return f"the text {_quoted(value)}"
-    kind, size = ("a mapping", "keys") if isinstance(value, Mapping) else ("a list", "entries")
-    return f"{kind} with {len(value)} {size}" if value else f"an empty {kind[2:]}"
-
-
-def one_of(choices: Iterable[str], word: object = None) -> str:
-    """Say what may stand there; for a near miss also which one was probably meant."""
-    choices = sorted(choices)
-    if not choices:
-        return "must be left out: there is none to choose from"
-    listed = ", ".join(choices[:LONGEST_LIST])
-    more = f", ... ({len(choices)} in all)" if len(choices) > LONGEST_LIST else ""
-    near = difflib.get_close_matches(word, choices, n=1) if isinstance(word, str) else ()
-    meant = f" (did you mean {near[0]}?)" if near else ""
-    return f"must be {'one of ' if len(choices) > 1 else ''}{listed}{more}{meant}"
-
-
-def _quoted(text: str) -> str:
-    return json.dumps(text if len(text) <= 40 else text[:37] + "...", ensure_ascii=False)
-
-
-class _TooMuch(Exception):
-    """The document is too large or too deep to go on."""
+class _Hopeless(Exception):
+    """The document cannot be read any further."""
 
 
 @dataclass(frozen=True)
@@ -262,13 +207,13 @@ class _Composer:
         size, deepest, self.deepest = self.size, self.deepest, len(place)
         if event.tag is not None:
             allowed = "must be written without a tag"
-            self.document.refuse(place, f"the tag {_quoted(event.tag)}", allowed, _line(event))
+            self.document.refuse(place, f"the tag {quoted(event.tag)}", allowed, _line(event))
         if isinstance(event, yaml.SequenceStartEvent):
             value: Any = self._sequence(place)
         elif isinstance(event, yaml.MappingStartEvent):
             value = self._mapping(place)
         else:
-            value = self._scalar(event, place)
+            value = resolved(event.value, plain=event.implicit[0])
         if event.anchor is not None:
             height = self.deepest - len(place)
             self.anchors[event.anchor] = _Anchored(value, self.size - size + 1, height)
@@ -305,30 +250,24 @@ class _Composer:
             self._value(event, place)
             return None
         self._grow(event, size=1, depth=len(place))
-        key = _resolved(event)
+        key = resolved(event.value, plain=event.implicit[0])
         if key == "<<" and event.implicit[0]:
             found, allowed = "the merge key <<", "must be left out: write the keys themselves"
         elif not isinstance(key, str):
-            found = f"the key {_quoted(event.value)}"
-            allowed = "must be text: put it in quotes"
+            found, allowed = f"the key {event.value}", "must be text: put it in quotes"
+            if isinstance(key, int | float):
+                allowed += " (the decimal sign of a number is a point, no comma)"
         else:
             return key
         self.document.refuse(place, found, allowed, _line(event))
         return None
-
-    def _scalar(self, event: yaml.ScalarEvent, place: Place) -> Any:
-        value = _resolved(event)
-        if isinstance(value, int | float) and LARGEST_NUMBER < abs(value) < float("inf"):
-            allowed = f"must be between -{LARGEST_NUMBER:g} and {LARGEST_NUMBER:g}"
-            self.document.refuse(place, described(value), allowed)
-        return value
 
     def _alias(self, event: yaml.AliasEvent, place: Place) -> Any:
         anchored = self.anchors.get(event.anchor)
         if anchored is None:
             allowed = f"must stand after the value that is marked &{event.anchor}"
             self.document.refuse(place, f"the alias *{event.anchor}", allowed, _line(event))
-            return None
+            raise _Hopeless
         self._grow(event, anchored.size, len(place) + anchored.height)
         return anchored.value
 
@@ -344,24 +283,8 @@ class _Composer:
         else:
             return
         self.document.refuse((), found, allowed, _line(event))
-        raise _TooMuch
+        raise _Hopeless
 
 
 def _line(event: yaml.Event) -> int:
     return event.start_mark.line + 1
-
-
-def _resolved(event: yaml.ScalarEvent) -> Any:
-    """Give the value of a scalar by the core schema; quoted ones are text."""
-    text = event.value
-    if not event.implicit[0]:
-        return text
-    if text in _WORDS:
-        return _WORDS[text]
-    if _INTEGER.fullmatch(text):
-        return int(text) if len(text) < 20 else float(text)
-    if _OCTAL_OR_HEX.fullmatch(text) and len(text) < 20:
-        return int(text, base=0)
-    if _FLOAT.fullmatch(text) or _SPECIAL.fullmatch(text):
-        return float(text.lower().replace(".inf", "inf").replace(".nan", "nan"))
-    return text

@@ -18,7 +18,11 @@ from typing import Any
 
 from pydantic import ConfigDict, TypeAdapter, ValidationError
 
-from .document import Document, Place, described, one_of
+from .document import Document, Place
+from .wording import counted, described, one_of
+
+LARGEST_NUMBER = 1e9
+"""Everything is in SI units, so a greater number is a slip, and squaring it loses digits."""
 
 BROKEN: Any = object()
 """Stands for a value that was refused."""
@@ -124,12 +128,27 @@ def read_value(document: Document, place: Place, data: Any, hint: Any) -> Any:
             read_value(document, (*place, index), entry, item) for index, entry in enumerate(data)
         ]
         return BROKEN if BROKEN in items else tuple(items)
+    if too_large := list(_too_large(data, ())):
+        for steps, number in too_large:
+            allowed = f"must be between -{LARGEST_NUMBER:g} and {LARGEST_NUMBER:g}"
+            document.refuse((*place, *steps), described(number), allowed)
+        return BROKEN
     try:
         return _adapter(hint).validate_python(data)
     except ValidationError as error:
         for steps, found, allowed in _explained(error, data):
             document.refuse((*place, *steps), found, allowed)
         return BROKEN
+
+
+def _too_large(data: Any, place: Place) -> Iterator[tuple[Place, float]]:
+    """Give the numbers in a value that are too large, and where they are."""
+    if isinstance(data, int | float):
+        if LARGEST_NUMBER < abs(data) < float("inf"):
+            yield place, data
+    elif isinstance(data, tuple | Mapping):
+        for step, item in data.items() if isinstance(data, Mapping) else enumerate(data):
+            yield from _too_large(item, (*place, step))
 
 
 @cache
@@ -191,7 +210,7 @@ def _explained(error: ValidationError, data: Any) -> Iterator[tuple[Place, str, 
         else:
             yield place, *_worded(one, _at(data, place))
     for place, length in lengths.items():
-        yield place, described(_at(data, place)), f"must have {length} entries"
+        yield place, described(_at(data, place)), f"must have {counted(length, 'entry')}"
 
 
 def _located(loc: Place, data: Any) -> tuple[Place, str]:
@@ -255,9 +274,9 @@ def _worded(one: dict, value: Any) -> tuple[str, str]:
         case "less_than_equal":
             allowed = f"must be at most {context['le']:g}"
         case "too_short":
-            allowed = f"must have at least {_entries(context['min_length'])}"
+            allowed = f"must have at least {counted(context['min_length'], 'entry')}"
         case "too_long":
-            allowed = f"must have at most {_entries(context['max_length'])}"
+            allowed = f"must have at most {counted(context['max_length'], 'entry')}"
         case "tuple_type":
             allowed = "must be a list"
         case "mapping_type" | "dict_type":
@@ -269,10 +288,6 @@ def _worded(one: dict, value: Any) -> tuple[str, str]:
         case _:
             allowed = f"must be right: {one['msg']}"
     return found, allowed
-
-
-def _entries(count: int) -> str:
-    return f"{count} " + ("entry" if count == 1 else "entries")
 
 
 def _is_number(text: str) -> bool:

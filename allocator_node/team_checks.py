@@ -12,10 +12,11 @@ from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 import shapely
 from shapely import Polygon
 
-from .document import Document, Place, described, one_of
+from .document import Document, Place
 from .form import Draft
 from .free_space import FreeSpace, overlap
 from .team import KeepOut, Robot
+from .wording import described, dotted, one_of
 
 NAME = re.compile(r"[A-Za-z_][A-Za-z0-9_]*")
 TOPIC = re.compile(r"/?[A-Za-z_][A-Za-z0-9_]*(/[A-Za-z_][A-Za-z0-9_]*)*")
@@ -46,7 +47,7 @@ def check_distinct(document: Document, place: Place, names: Sequence[str] | None
     """Check that a list names nothing twice."""
     for index, name in enumerate(names or ()):
         if name in names[:index]:
-            allowed = f"must be there once (it is entry {names.index(name)} already)"
+            allowed = f"must be there once (entry [{names.index(name)}] is the same)"
             document.refuse((*place, index), described(name), allowed)
 
 
@@ -58,8 +59,8 @@ def check_polygon(document: Document, place: Place, corners: Sequence | None) ->
     if polygon.is_valid and polygon.area > 0:
         return True
     reason = shapely.is_valid_reason(polygon).replace("[", " at [")
-    found = f"a polygon without an area or with crossing edges ({reason.lower()})"
-    document.refuse(place, found, "must be a simple polygon: its corners in order along its edge")
+    found = f"corners that make no simple polygon ({reason.lower()})"
+    document.refuse(place, found, "must be in order along an edge that does not cross itself")
     return False
 
 
@@ -91,8 +92,9 @@ def check_robot(
                 document.refuse(where, described(rule.feature), one_of(features, rule.feature))
     if given.get("pose"):
         _check_pose(document, (*place, "pose"), robot)
-    for key, topic in topics_of(robot, draft.broken):
-        check_topic(document, (*place, *key), topic)
+    for key, kind, source in _sources(robot, given):
+        check = check_topic if kind == "topic" else check_frame
+        check(document, (*place, *key), source)
     if given.get("dock"):
         check_inside(document, (*place, "dock"), space, robot.dock)
     if "start" in given:
@@ -100,14 +102,16 @@ def check_robot(
         check_inside(document, (*place, "start"), space, robot.start[:2], radius)
 
 
-def topics_of(robot: Robot, broken: Collection[str] = ()) -> Iterator[tuple[Place, str]]:
-    """Give the topics of a robot with their keys."""
-    if "pose" not in broken and robot.pose.topic:
-        yield ("pose", "topic"), robot.pose.topic
-    if "command" not in broken:
-        yield ("command", "topic"), robot.command.topic
-    if "battery_topic" not in broken:
-        yield ("battery_topic",), robot.battery_topic
+def _sources(robot: Robot, keys: Collection[str]) -> Iterator[tuple[Place, str, str]]:
+    """Give what these keys of a robot name: place, "topic" or "frame", its name."""
+    if "pose" in keys and robot.pose.topic:
+        yield ("pose", "topic"), "topic", robot.pose.topic
+    if "pose" in keys and robot.pose.tf:
+        yield ("pose", "tf"), "frame", robot.pose.tf
+    if "command" in keys:
+        yield ("command", "topic"), "topic", robot.command.topic
+    if "battery_topic" in keys:
+        yield ("battery_topic",), "topic", robot.battery_topic
 
 
 def check_topic(document: Document, place: Place, topic: str) -> None:
@@ -133,7 +137,6 @@ def check_frame(document: Document, place: Place, frame: str | None) -> None:
 def _check_pose(document: Document, place: Place, robot: Robot) -> None:
     source = robot.pose
     check_frame(document, (*place, "frame"), source.frame)
-    check_frame(document, (*place, "tf"), source.tf)
     if source.topic and source.tf:
         document.refuse(place, "topic and tf", "must have one of the two")
     elif not source.topic and not source.tf:
@@ -149,17 +152,18 @@ def _check_pose(document: Document, place: Place, robot: Robot) -> None:
 def check_own_sources(
     document: Document, place: Place, robots: Mapping[str, tuple[Robot, Draft]]
 ) -> None:
-    """Check that no topic and no transform is used twice."""
-    users: dict[tuple[str, str], str] = {}
+    """Check that no topic and no transform is used twice; defaults have the older right."""
+    defaults, given = [], []
     for name, (robot, draft) in robots.items():
-        sources = [(key, "topic", topic) for key, topic in topics_of(robot, draft.broken)]
-        if "pose" not in draft.broken and robot.pose.tf:
-            sources.append((("pose", "tf"), "frame", robot.pose.tf))
-        for key, kind, source in sources:
-            user = users.setdefault((kind, source.removeprefix("/")), f"{name}.{'.'.join(key)}")
-            if user != f"{name}.{'.'.join(key)}":
-                allowed = f"must be a {kind} of its own ({user} has this one)"
-                document.refuse((*place, name, *key), described(source), allowed)
+        given += [(name, *source) for source in _sources(robot, draft.values)]
+        left = {"pose", "command", "battery_topic"} - set(draft.values) - set(draft.broken)
+        defaults += [(name, *source) for source in _sources(robot, left)]
+    users: dict[tuple[str, str], str] = {}
+    for name, key, kind, source in defaults + given:
+        user = users.setdefault((kind, source.removeprefix("/")), dotted((name, *key)))
+        if user != dotted((name, *key)):
+            allowed = f"must be a {kind} of its own ({user} has this one)"
+            document.refuse((*place, name, *key), described(source), allowed)
 
 
 def check_starts(

@@ -8,7 +8,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
-from .document import Document, Place, described, one_of, parse_document, read_document
+from .document import Document, Place, parse_document, read_document
 from .drives import known_drives
 from .form import BROKEN, Draft, read_fields
 from .free_space import FreeSpace
@@ -27,6 +27,7 @@ from .team_checks import (
     check_starts,
     check_task,
 )
+from .wording import described, one_of
 
 PARTS = ("capabilities", "robots", "tasks")
 """Keys of a team file whose entries have names of the user's."""

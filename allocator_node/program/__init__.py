@@ -1,0 +1,22 @@
+"""The allocation-and-control program: its statement, and the fast way to its optimum."""
+
+from .assignment import Assignment, assign
+from .control import Control, ControlProblem, solve_control
+from .model import Model
+from .pricing import least_effort, price
+from .problem import Problem
+from .safety import Safety, SafetyRows
+
+__all__ = [
+    "Assignment",
+    "Control",
+    "ControlProblem",
+    "Model",
+    "Problem",
+    "Safety",
+    "SafetyRows",
+    "assign",
+    "least_effort",
+    "price",
+    "solve_control",
+]

@@ -1,0 +1,229 @@
+"""Safe control: with the assignment fixed, one sparse QP for all robots together."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy import sparse
+from scipy.sparse.csgraph import connected_components
+
+from .pricing import least_effort
+from .safety import SafetyRows
+from .solvers import SolverFailure, solve_qp
+
+TOO_NEAR = 1e3
+"""Price of each m/s by which a row that is violated already is missed."""
+
+KEPT = 1e-4
+"""How far a solved row may be missed before its robots are stopped, m/s."""
+
+CORNERS = np.pi / 8 + np.arange(4) * np.pi / 4
+"""Directions of the sides of an octagon inscribed in the disc of allowed speeds."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class ControlProblem:
+    """The safe-control QP; N robots.
+
+    Attributes:
+        jacobians: G_i, shape (N, 3, 4).
+        limits: Greatest size of each command axis; R_i = diag(1/limits²), shape (N, 4).
+        lowest, highest: What is allowed this period, within the limits, shape (N, 4).
+        round_limit: Robots whose speed (vx, vy) is bounded in length, shape (N,).
+        away: n_i, unit vector from where to steer to the robot, shape (N, 3).
+        demand: Closing speed demanded, m/s, shape (N,); 0: no task row.
+        preferred: Commands preferred to standing still, only in axes and for
+            robots that no task row uses, shape (N, 4).
+        rows: Safety rows.
+        slack_weight: ℓ, s²/m².
+    """
+
+    jacobians: np.ndarray
+    limits: np.ndarray
+    lowest: np.ndarray
+    highest: np.ndarray
+    round_limit: np.ndarray
+    away: np.ndarray
+    demand: np.ndarray
+    preferred: np.ndarray
+    rows: SafetyRows
+    slack_weight: float
+
+
+@dataclass(frozen=True)
+class Control:
+    """Commands, and what the safety rows did to them.
+
+    Attributes:
+        commands: v_i, shape (N, 4).
+        free: Commands without the safety rows, shape (N, 4).
+        solved: Robots whose commands a QP had to find, shape (N,).
+        stopped: Robots that stand because no solver could vouch for them, shape (N,).
+    """
+
+    commands: np.ndarray
+    free: np.ndarray
+    solved: np.ndarray
+    stopped: np.ndarray
+
+
+def solve_control(problem: ControlProblem) -> Control:
+    """Find the commands.
+
+    Without the safety rows the QP falls apart into one closed form a robot.
+    Where that optimum meets the rows it is the optimum with them too, so only
+    the groups of robots bound together by rows, one of which is broken, go to
+    a solver.
+
+    Returns:
+        The optimum; robots no solver could vouch for stand still.
+    """
+    free = _free(problem)
+    count = len(free)
+    solved = np.zeros(count, dtype=bool)
+    rows = problem.rows
+    if not len(rows):
+        return Control(free, free, solved, solved.copy())
+    broken = rows.slackness(_velocities(problem, free)) < -1e-9
+    group = _groups(count, rows)
+    solved = np.isin(group, group[rows.first[broken]])
+    commands, stopped = free.copy(), np.zeros(count, dtype=bool)
+    if solved.any():
+        robots = np.flatnonzero(solved)
+        try:
+            commands[robots] = _coupled(problem, robots, solved[rows.first])
+        except SolverFailure:
+            commands[robots] = 0.0
+            stopped = solved.copy()
+    kept = rows.slackness(_velocities(problem, commands)) >= -KEPT
+    missed = rows.first[~kept & ~rows.violated]
+    if len(missed):
+        stopped |= np.isin(group, group[missed])
+        commands[stopped] = 0.0
+    return Control(commands, free, solved, stopped)
+
+
+def _velocities(problem: ControlProblem, commands: np.ndarray) -> np.ndarray:
+    return np.matmul(problem.jacobians, commands[:, :, None])[:, :, 0]
+
+
+def _free(problem: ControlProblem) -> np.ndarray:
+    """Give the optimum without safety rows, shape (N, 4)."""
+    reach = -np.matmul(problem.away[:, None, :], problem.jacobians)[:, 0] * problem.limits
+    useful = np.where(reach >= 0, problem.highest, -problem.lowest)
+    room = np.divide(
+        useful, problem.limits, out=np.zeros_like(useful), where=problem.limits > 0
+    )
+    effort = least_effort(reach, problem.demand, problem.slack_weight, room)
+    unused = (effort.command == 0) | (problem.demand <= 0)[:, None]
+    command = np.where(unused, problem.preferred, effort.command * problem.limits)
+    command = np.clip(command, problem.lowest, problem.highest)
+    speed = np.linalg.norm(command[:, :2], axis=1)
+    over = problem.round_limit & (speed > problem.limits[:, 0])
+    command[over, :2] *= (problem.limits[over, 0] / speed[over])[:, None]
+    return command
+
+
+def _groups(count: int, rows: SafetyRows) -> np.ndarray:
+    """Label robots bound together by rows with the same number, shape (N,)."""
+    pair = rows.second >= 0
+    links = sparse.coo_array(
+        (np.ones(pair.sum()), (rows.first[pair], rows.second[pair])), shape=(count, count)
+    )
+    return connected_components(links, directed=False)[1]
+
+
+def _coupled(problem: ControlProblem, robots: np.ndarray, used: np.ndarray) -> np.ndarray:
+    """Solve the QP of some robots and the used rows; shape (n, 4).
+
+    Unknowns, in this order: the commands as shares u = v/limit of the axes a
+    robot has, δ of the robots with a task row, one slack for each row that is
+    violated already.
+    """
+    count = len(robots)
+    limits = problem.limits[robots]
+    has = limits > 0
+    column = np.where(has, np.cumsum(has.ravel()).reshape(has.shape) - 1, -1)
+    shares = int(has.sum())
+    moving = problem.demand[robots] > 0
+    rows = problem.rows
+    index = np.flatnonzero(used)
+    eased = rows.violated[index]
+    position = np.full(len(problem.limits), -1)
+    position[robots] = np.arange(count)
+
+    size = shares + int(moving.sum()) + int(eased.sum())
+    quadratic = np.concatenate(
+        [
+            np.full(shares, 2.0),
+            np.full(moving.sum(), 2.0 * problem.slack_weight),
+            np.full(eased.sum(), 2.0),
+        ]
+    )
+    scale = np.where(has, limits, 1.0)
+    linear = np.zeros(size)
+    linear[:shares] = -2.0 * (problem.preferred[robots] / scale)[has]
+    linear[shares + moving.sum() :] = TOO_NEAR
+    lowest = np.concatenate(
+        [(problem.lowest[robots] / scale)[has], np.zeros(size - shares)]
+    )
+    highest = np.concatenate(
+        [(problem.highest[robots] / scale)[has], np.full(size - shares, np.inf)]
+    )
+
+    # Velocity of each control point by share of each axis, m/s: (n, 3, 4).
+    speed = problem.jacobians[robots] * limits[:, None, :]
+    entries: list[tuple[np.ndarray, np.ndarray, np.ndarray]] = []
+    right: list[np.ndarray] = []
+
+    def add(row: np.ndarray, who: np.ndarray, coefficients: np.ndarray) -> None:
+        """Add coefficients (r, 4) on the command of robots who (r,) to rows row (r,)."""
+        wanted = has[who]
+        where = np.broadcast_to(row[:, None], wanted.shape)[wanted]
+        entries.append((where, column[who][wanted], coefficients[wanted]))
+
+    # Task rows: n·G v − δ ≤ −demand.
+    tasks = np.flatnonzero(moving)
+    row = np.arange(len(tasks))
+    along = np.matmul(problem.away[robots][tasks][:, None, :], speed[tasks])[:, 0]
+    add(row, tasks, along)
+    entries.append((row, shares + row, -np.ones(len(tasks))))
+    right.append(-problem.demand[robots][tasks])
+
+    # Safety rows: −normal·(ṗ_first − ṗ_second) − slack ≤ −bound.
+    top = len(tasks)
+    row = top + np.arange(len(index))
+    first, second = position[rows.first[index]], rows.second[index]
+    normal = rows.normal[index]
+    add(row, first, -np.matmul(normal[:, None, :], speed[first][:, :2])[:, 0])
+    paired = second >= 0
+    other = position[second[paired]]
+    add(row[paired], other, np.matmul(normal[paired][:, None, :], speed[other][:, :2])[:, 0])
+    entries.append(
+        (row[eased], shares + len(tasks) + np.arange(eased.sum()), -np.ones(eased.sum()))
+    )
+    right.append(-rows.bound[index])
+
+    # Speed limits that are round: an octagon with a corner in the way to go.
+    top += len(index)
+    rounds = np.flatnonzero(problem.round_limit[robots])
+    if len(rounds):
+        steer = -np.matmul(problem.away[robots][rounds][:, None, :], speed[rounds])[:, 0, :2]
+        side = np.arctan2(steer[:, 1], steer[:, 0])[:, None] + CORNERS
+        normals = np.zeros((*side.shape, 4))
+        normals[..., 0], normals[..., 1] = np.cos(side), np.sin(side)
+        normals = normals.reshape(-1, 4)
+        who = np.repeat(rounds, len(CORNERS))
+        row = top + np.arange(len(who))
+        add(row, who, normals)
+        add(row + len(who), who, -normals)
+        right.append(np.full(2 * len(who), np.cos(np.pi / 8)))
+
+    parts = [np.concatenate(part) for part in zip(*entries, strict=True)]
+    bound = np.concatenate(right)
+    matrix = sparse.csc_array((parts[2], (parts[0], parts[1])), shape=(len(bound), size))
+    answer = solve_qp(quadratic, linear, matrix, bound, lowest, highest)
+    commands = np.zeros((count, 4))
+    commands[has] = np.clip(answer[:shares], lowest[:shares], highest[:shares])
+    return commands * limits

@@ -1,0 +1,87 @@
+"""What each robot's own control problem costs under each task, in closed form."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from .problem import Problem
+
+
+@dataclass(frozen=True)
+class Effort:
+    """Optima of many one-row control problems at once; leading shape (...).
+
+    Attributes:
+        value: vᵀ R v + ℓ δ² at the optimum, shape (...).
+        command: Optimal v as a share of the limits, shape (..., 4).
+        given_up: δ, m/s, shape (...).
+    """
+
+    value: np.ndarray
+    command: np.ndarray
+    given_up: np.ndarray
+
+
+def least_effort(
+    reach: np.ndarray, demand: np.ndarray, slack_weight: float, room: np.ndarray | None = None
+) -> Effort:
+    r"""Solve min uᵀu + ℓ δ² s.t. reachᵀ u + δ ≥ demand, 0 ≤ sign(reach) u ≤ room, δ ≥ 0.
+
+    With u = v/limit this is a robot's own problem under one task: the command
+    v(λ) = clip(−λ R⁻¹ Gᵀn / 2), the progress given up δ(λ) = λ / 2ℓ. What they
+    bring, f(λ) = Σ_j h_j min(λ h_j / 2, room_j) + λ / 2ℓ with h = \|reach\|, is
+    concave and piecewise linear: the least of its lines, one for each set of
+    clipped axes. So f(λ) = demand is solved by the greatest λ among the lines.
+    (Water-filling; Boyd and Vandenberghe, Convex Optimization, 2004, ch. 5.5.3.)
+
+    Args:
+        reach: Closing speed each axis brings at its limit, −limit·(Gᵀn), m/s,
+            shape (..., 4).
+        demand: Closing speed demanded, m/s, shape (...).
+        slack_weight: ℓ, s²/m².
+        room: Greatest share of the limit now allowed in the useful direction,
+            shape (..., 4); default 1.
+
+    Returns:
+        The optima.
+    """
+    size = np.abs(reach)
+    if room is None:
+        # The axis of greatest reach clips first, whatever λ.
+        ordered = np.sort(size, axis=-1)[..., ::-1]
+        clipped = ordered
+    else:
+        with np.errstate(divide="ignore", invalid="ignore"):
+            clips_at = np.where(size > 0, room / size, np.inf)
+        order = np.argsort(clips_at, axis=-1)
+        ordered = np.take_along_axis(size, order, axis=-1)
+        clipped = ordered * np.take_along_axis(np.broadcast_to(room, size.shape), order, axis=-1)
+    slope = 0.5 * (ordered**2).sum(axis=-1) + 0.5 / slack_weight
+    left = np.maximum(demand, 0.0)
+    multiplier = left / slope
+    for axis in range(ordered.shape[-1]):
+        slope = slope - 0.5 * ordered[..., axis] ** 2
+        left = left - clipped[..., axis]
+        np.maximum(
+            multiplier, left / np.maximum(slope, 0.5 / slack_weight), out=multiplier
+        )
+    share = np.minimum(0.5 * multiplier[..., None] * size, 1.0 if room is None else room)
+    given_up = multiplier / (2 * slack_weight)
+    value = (share**2).sum(axis=-1) + slack_weight * given_up**2
+    return Effort(value, np.copysign(share, reach), given_up)
+
+
+def reach_of(problem: Problem) -> np.ndarray:
+    """Give the closing speed each axis brings at its limit, m/s, shape (N, M, 4)."""
+    return -np.matmul(problem.away, problem.jacobians) * problem.limits[:, None, :]
+
+
+def price(problem: Problem) -> np.ndarray:
+    """Give the price κ w_im + e_im of every pair, Wh, shape (N, M).
+
+    w_im is the optimum of robot i's own control problem under task m alone.
+    """
+    effort = least_effort(reach_of(problem), problem.demand, problem.slack_weight)
+    return problem.kappa * effort.value + problem.energy

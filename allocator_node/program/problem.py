@@ -1,0 +1,63 @@
+"""One period's program as numbers, in the symbols of the statement."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+
+@dataclass(frozen=True, kw_only=True)
+class Problem:
+    """Data of the allocation-and-control program; N robots, M tasks, K capabilities.
+
+    Attributes:
+        capability: c_ik, shape (N, K).
+        needs: T_mk, shape (M, K); zero for tasks not active now.
+        least: min_m, shape (M,); zero for tasks not active now.
+        most: max_m, shape (M,).
+        priority: Class of each task, 0..4, shape (M,).
+        eligible: Where α_im may be 1, shape (N, M).
+        pinned: Task a robot must do, −1: none, shape (N,); only eligible ones.
+        previous: Task each robot has now, −1: none, shape (N,).
+        swap_cost: ρ_i, Wh, shape (N,).
+        energy: e_im, Wh, shape (N, M).
+        limits: Greatest size of each command axis, shape (N, 4).
+        jacobians: G_i, shape (N, 3, 4).
+        away: n_im, unit vector from goal to robot, shape (N, M, 3).
+        closing: min(γ d_im, c_i), m/s, shape (N, M); 0 where the row is dropped.
+        goal_speed: n_im · ṗ*_im, m/s, shape (N, M).
+        kappa: κ, Wh.
+        slack_weight: ℓ, s²/m².
+    """
+
+    capability: np.ndarray
+    needs: np.ndarray
+    least: np.ndarray
+    most: np.ndarray
+    priority: np.ndarray
+    eligible: np.ndarray
+    pinned: np.ndarray
+    previous: np.ndarray
+    swap_cost: np.ndarray
+    energy: np.ndarray
+    limits: np.ndarray
+    jacobians: np.ndarray
+    away: np.ndarray
+    closing: np.ndarray
+    goal_speed: np.ndarray
+    kappa: float
+    slack_weight: float
+
+    @property
+    def demand(self) -> np.ndarray:
+        """Closing speed the task row demands of the command, m/s, shape (N, M)."""
+        return np.where(self.closing > 0, self.closing - self.goal_speed, 0.0)
+
+    @property
+    def keeps_on(self) -> np.ndarray:
+        """Where a robot could go on with the task it has, shape (N, M)."""
+        keeps = np.zeros(self.eligible.shape, dtype=bool)
+        busy = np.flatnonzero(self.previous >= 0)
+        keeps[busy, self.previous[busy]] = True
+        return keeps & self.eligible

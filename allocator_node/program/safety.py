@@ -1,0 +1,221 @@
+"""The rows that may not be traded for progress: pairs, areas, silent robots."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import shapely
+from scipy.spatial import cKDTree
+
+from ..settings import Settings
+from ..team import Team
+from .model import Model
+
+CALM = 0.3
+"""Highest speed at which robots that are too near are asked to come apart, m/s."""
+
+
+@dataclass(frozen=True)
+class SafetyRows:
+    """Linear rows normal · (ṗ_first − ṗ_second) ≥ bound on horizontal velocities.
+
+    Attributes:
+        first: Robot index, shape (R,).
+        second: Robot index or −1 (a wall or a robot that takes no commands), shape (R,).
+        normal: Unit vectors pointing away from the obstacle, shape (R, 2).
+        bound: Right-hand sides, m/s, shape (R,).
+        violated: Where the distance asked for is not kept already, shape (R,).
+        room: Distance left before the margin is touched, m, shape (R,).
+        obstacle: What the row keeps away from: a robot index, or −1 for an area.
+    """
+
+    first: np.ndarray
+    second: np.ndarray
+    normal: np.ndarray
+    bound: np.ndarray
+    violated: np.ndarray
+    room: np.ndarray
+    obstacle: np.ndarray
+
+    def __len__(self) -> int:
+        return len(self.first)
+
+    @classmethod
+    def none(cls) -> SafetyRows:
+        """Give no rows."""
+        return cls(
+            np.zeros(0, int), np.zeros(0, int), np.zeros((0, 2)), np.zeros(0),
+            np.zeros(0, bool), np.zeros(0), np.zeros(0, int),
+        )  # fmt: skip
+
+    @classmethod
+    def of(
+        cls,
+        first: np.ndarray,
+        second: np.ndarray,
+        normal: np.ndarray,
+        bound: np.ndarray,
+        room: np.ndarray,
+        obstacle: np.ndarray,
+    ) -> SafetyRows:
+        """Give rows; violated ones ask for a calm way out."""
+        violated = room < 0
+        return cls(first, second, normal, np.minimum(bound, CALM), violated, room, obstacle)
+
+    @classmethod
+    def joined(cls, parts: list[SafetyRows]) -> SafetyRows:
+        """Give the rows of all parts."""
+        return cls(
+            *(
+                np.concatenate([getattr(part, name) for part in parts])
+                for name in cls.__dataclass_fields__
+            )
+        )
+
+    def slackness(self, velocities: np.ndarray) -> np.ndarray:
+        """Give normal · (ṗ_first − ṗ_second) − bound for velocities (N, 3); shape (R,)."""
+        relative = velocities[self.first, :2].copy()
+        other = self.second >= 0
+        relative[other] -= velocities[self.second[other], :2]
+        return (self.normal * relative).sum(axis=1) - self.bound
+
+
+class Safety:
+    """Makes the rows of one period; keeps what does not change of a team and its site.
+
+    Barriers on the control points, in the published form ḣ ≥ −γ_s h (Ames, Xu,
+    Grizzle and Tabuada, "Control barrier function based quadratic programs for
+    safety critical systems", IEEE Trans. Automatic Control 62(8), 2017):
+    h_ij = ‖p_i − p_j‖² − D_ij² for pairs, the distance to the nearest points of
+    edges for areas. A row on one pair allows one robot to come nearer while the
+    other makes way; so that nobody relies on a robot that may be stuck, each also
+    keeps the row it would have beside a robot that stands still.
+    """
+
+    def __init__(self, team: Team, model: Model, settings: Settings) -> None:
+        self.settings = settings
+        fleet = model.fleet
+        # The body reaches this far around the control point.
+        self.reach = model.radius + fleet.ahead
+        self.speed = fleet.max_speed
+        self.body = model.radius
+        self.lookahead = fleet.ahead
+        self.areas = [shapely.Polygon(area.polygon) for area in team.keep_out]
+        self.boundary = shapely.Polygon(team.boundary) if team.boundary else None
+        rings = [area.exterior for area in self.areas]
+        if self.boundary is not None:
+            rings.append(self.boundary.exterior)
+        self.edges = np.array(
+            [
+                shapely.LineString([start, end])
+                for ring in rings
+                for start, end in zip(ring.coords[:-1], ring.coords[1:], strict=True)
+            ]
+        )
+        self.edge_index = shapely.STRtree(self.edges) if len(self.edges) else None
+        for shape in self.areas:
+            shapely.prepare(shape)
+        if self.boundary is not None:
+            shapely.prepare(self.boundary)
+
+    def rows(
+        self, points: np.ndarray, known: np.ndarray, heard: np.ndarray, growth: np.ndarray
+    ) -> SafetyRows:
+        """Give the rows of this period.
+
+        Args:
+            points: Control points, m, shape (N, 3); NaN where not known.
+            known: Robots that were ever heard, shape (N,).
+            heard: Robots heard from now, which obey commands, shape (N,).
+            growth: How far a silent robot may have moved, m, shape (N,).
+        """
+        parts = [self._pairs(points, known, heard, growth)]
+        if self.edge_index is not None and heard.any():
+            parts.append(self._areas(points, np.flatnonzero(heard)))
+        return SafetyRows.joined(parts)
+
+    def _pairs(
+        self, points: np.ndarray, known: np.ndarray, heard: np.ndarray, growth: np.ndarray
+    ) -> SafetyRows:
+        robots = np.flatnonzero(known)
+        if len(robots) < 2:
+            return SafetyRows.none()
+        gamma, margin = self.settings.gamma_s, self.settings.margin
+        # Beyond this distance no command can bring h down faster than γ_s h.
+        widest = 2 * self.reach[robots].max() + margin + growth[robots].max()
+        rush = 2 * self.speed[robots].max() / gamma
+        horizon = rush / 2 + np.hypot(rush / 2, widest)
+        pairs = cKDTree(points[robots, :2]).query_pairs(horizon, output_type="ndarray")
+        i, j = robots[pairs[:, 0]], robots[pairs[:, 1]]
+        level = np.abs(points[i, 2] - points[j, 2]) < self.settings.height_clearance
+        near = level & (heard[i] | heard[j])
+        i, j = i[near], j[near]
+
+        apart = points[i, :2] - points[j, :2]
+        distance = np.linalg.norm(apart, axis=1)
+        keep = self.reach[i] + self.reach[j] + margin + growth[i] + growth[j]
+        h = distance**2 - keep**2
+        binding = 2 * distance * (self.speed[i] + self.speed[j]) >= gamma * h
+        i, j, apart, distance, keep, h = (
+            part[binding] for part in (i, j, apart, distance, keep, h)
+        )
+        together = distance < 1e-6
+        apart[together], distance[together] = (1.0, 0.0), 1e-6
+        normal = apart / np.linalg.norm(apart, axis=1, keepdims=True)
+        bound = -gamma * h / (2 * distance)
+        room = distance - keep
+
+        both = heard[i] & heard[j]
+        alone = np.where(h < 0, bound / 2, bound)
+        return SafetyRows.joined(
+            [
+                SafetyRows.of(i[both], j[both], normal[both], bound[both], room[both], j[both]),
+                *(
+                    SafetyRows.of(
+                        me[obeys],
+                        np.full(obeys.sum(), -1),
+                        sign * normal[obeys],
+                        np.where(both, alone, bound)[obeys],
+                        room[obeys],
+                        other[obeys],
+                    )
+                    for me, other, obeys, sign in ((i, j, heard[i], 1), (j, i, heard[j], -1))
+                ),
+            ]
+        )
+
+    def _areas(self, points: np.ndarray, robots: np.ndarray) -> SafetyRows:
+        places = shapely.points(points[robots, :2])
+        gamma = self.settings.gamma_s
+        keep = self.reach[robots] + self.settings.margin
+        outside = self._outside(points[robots, :2])
+        horizon = keep + self.speed[robots] / gamma
+        near, edge = self.edge_index.query(places, predicate="dwithin", distance=horizon)
+        near, edge = near[~outside[near]], edge[~outside[near]]
+        # Where a robot is on the wrong side, only the nearest edge counts: back over it.
+        wrong = np.flatnonzero(outside)
+        near = np.concatenate([near, wrong])
+        edge = np.concatenate([edge, self.edge_index.nearest(places[wrong])]).astype(int)
+
+        if not len(near):
+            return SafetyRows.none()
+        line = shapely.get_coordinates(shapely.shortest_line(self.edges[edge], places[near]))
+        closest, point = line[0::2], line[1::2]
+        away = point - closest
+        distance = np.linalg.norm(away, axis=1)
+        normal = away / np.maximum(distance, 1e-9)[:, None]
+        back = outside[near]
+        normal[back] *= -1
+        room = np.where(back, -distance, distance) - keep[near]
+        lone = np.full(len(near), -1)
+        return SafetyRows.of(robots[near], lone, normal, -gamma * room, room, lone)
+
+    def _outside(self, points: np.ndarray) -> np.ndarray:
+        """Tell which points (n, 2) are beyond the boundary or inside a keep-out area."""
+        outside = np.zeros(len(points), dtype=bool)
+        if self.boundary is not None:
+            outside |= ~shapely.contains_xy(self.boundary, points)
+        for area in self.areas:
+            outside |= shapely.contains_xy(area, points)
+        return outside
