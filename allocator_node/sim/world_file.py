@@ -9,11 +9,12 @@ from typing import Annotated, Any, Literal
 
 from annotated_types import MinLen
 
-from ..document import Document, Place, described, one_of, parse_document, read_document
+from ..document import Document, Place, parse_document, read_document
 from ..form import BROKEN, Draft, read_fields
 from ..free_space import FreeSpace
 from ..team import Checked, Name, NonNegative, Point, Positive, Share, Team
 from ..team_checks import check_distinct, check_inside, points_of
+from ..wording import described, one_of
 
 
 @dataclass(frozen=True)
@@ -153,7 +154,9 @@ def _world(document: Document, team: Team) -> World:
     _check_ground(document, draft.get("ground") or (), team)
     events = []
     if isinstance(document.value, Mapping):
-        listed = document.value.get("events") or ()
+        listed = document.value.get("events")
+        if listed is None:
+            listed = ()
         if isinstance(listed, tuple):
             for index, data in enumerate(listed):
                 events.append(_read_event(document, ("events", index), data, team))
