@@ -2,7 +2,6 @@
 
 from .assignment import Assignment, assign
 from .control import Control, ControlProblem, solve_control
-from .model import Model
 from .pricing import least_effort, price
 from .problem import Problem
 from .safety import Safety, SafetyRows
@@ -11,7 +10,6 @@ __all__ = [
     "Assignment",
     "Control",
     "ControlProblem",
-    "Model",
     "Problem",
     "Safety",
     "SafetyRows",

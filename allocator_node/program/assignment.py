@@ -113,11 +113,11 @@ class _Integers:
             (np.ones(pairs), (self.task, pair)), shape=(tasks, self.columns)
         )
         needing = sparse.csr_array(
-            (
+
                 problem.capability[self.robot].T[self.need] * (self.task == self.need_task[:, None])
                 if len(self.need)
                 else np.zeros((0, pairs))
-            )
+
         )
         needing.resize((len(self.need), self.columns))
         missing = sparse.eye_array(self.columns, format="csr")[pairs:]

@@ -8,9 +8,9 @@ import numpy as np
 import shapely
 from scipy.spatial import cKDTree
 
+from ..model import Model
 from ..settings import Settings
 from ..team import Team
-from .model import Model
 
 CALM = 0.3
 """Highest speed at which robots that are too near are asked to come apart, m/s."""

@@ -56,7 +56,7 @@ class Statement:
         least, most, T, c = problem.least, problem.most, problem.needs, problem.capability
         limits = problem.limits
         R = np.divide(1.0, limits**2, out=np.zeros_like(limits), where=limits > 0)
-        κ, ℓ, e, ρ = problem.kappa, problem.slack_weight, problem.energy, problem.swap_cost
+        κ, weight, e, ρ = problem.kappa, problem.slack_weight, problem.energy, problem.swap_cost
         keeps = problem.keeps_on
 
         self.constraints = [
@@ -86,7 +86,7 @@ class Statement:
             for q in (4, 3, 2, 1, 0)
         ]
         self.cost = (
-            κ * (cp.sum(cp.multiply(R, v**2)) + ℓ * cp.sum_squares(δ))
+            κ * (cp.sum(cp.multiply(R, v**2)) + weight * cp.sum_squares(δ))
             + cp.sum(cp.multiply(α, e))
             + cp.sum(cp.multiply(ρ, keeps.any(axis=1) - cp.sum(cp.multiply(α, keeps), axis=1)))
         )

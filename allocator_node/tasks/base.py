@@ -129,6 +129,10 @@ class Task(Checked, abc.ABC):
         """Tell whether the task has come to its end; standing tasks never do."""
         return False
 
+    def ended(self) -> Any:
+        """Give the state of a task that has come to its end; standing tasks begin anew."""
+        return self.begin()
+
 
 def distance(points: np.ndarray, others: np.ndarray) -> np.ndarray:
     """Give distances in metres along the last axis; a NaN height counts as no difference."""

@@ -115,6 +115,10 @@ class Patrol(Task):
         """Tell whether all laps are done."""
         return self.laps > 0 and state.passed >= self.laps * len(self.waypoints)
 
+    def ended(self) -> Round:
+        """Give the state after the last lap."""
+        return Round(passed=self.laps * len(self.waypoints))
+
     def moved(self, at: tuple[float, float, float], heading: float | None) -> Patrol:
         """Give the same loop with its middle at another place."""
         corners, _, _ = self._loop

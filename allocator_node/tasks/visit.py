@@ -89,6 +89,10 @@ class Visit(Task):
         """Tell whether the dwell is over."""
         return state.done
 
+    def ended(self) -> Progress:
+        """Give the state after the dwell."""
+        return Progress(done=True)
+
     def moved(self, at: tuple[float, float, float], heading: float | None) -> Visit:
         """Give the visit at another place."""
         place = at if len(self.at) == 3 else at[:2]

@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from ..drives import Fleet
-from ..team import Team
+from .drives import Fleet
+from .team import Team
 
 
 class Model:

@@ -1,0 +1,558 @@
+"""The allocator: one observation in, one decision out, at a fixed rate."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+
+from .belief import EfficacyBelief, EnergyBelief, FeatureBelief, PoseBelief
+from .belief.efficacy import Step
+from .belief.energy import SECONDS_PER_HOUR, way_energy
+from .belief.poses import Places
+from .decision import Decision, Level, Notice, Shortfall
+from .model import Model
+from .observation import MovedGoal, Observation, Orders
+from .program import (
+    Assignment,
+    Control,
+    ControlProblem,
+    Problem,
+    Safety,
+    SafetyRows,
+    assign,
+    price,
+    solve_control,
+)
+from .program.guidance import Course, Guidance, Targets, offsets
+from .reasons import Reasons, Situation
+from .settings import Settings
+from .tasks import Goals, Scene
+from .team import Team
+
+LONGEST_STEP = 1.0
+"""Longest time one step counts for; beyond it the loop was paused, s."""
+
+
+@dataclass(frozen=True)
+class _View:
+    """What is known in one period, before anything is decided."""
+
+    now: float
+    dt: float
+    places: Places
+    points: np.ndarray
+    jacobians: np.ndarray
+    health: np.ndarray
+    capability: np.ndarray
+    suitability: np.ndarray
+
+
+class Allocator:
+    """Decides who does what and how everybody moves; knows nothing of ROS.
+
+    Attributes:
+        orders: What the operator asks for; assign another to change it.
+        team: The team with its present task table; :meth:`edit` changes it.
+    """
+
+    def __init__(self, team: Team, settings: Settings | None = None, period: float = 0.1) -> None:
+        """Begin with nobody heard and nothing assigned.
+
+        Args:
+            team: The team.
+            settings: Weights and times.
+            period: Time between two steps, s; used for the first one.
+        """
+        self.team = team
+        self.period = period
+        self.orders = Orders()
+        self._settings = settings or Settings()
+        self._now: float | None = None
+        count = len(team.robots)
+        self._poses = PoseBelief(count)
+        self._guidance = Guidance(count)
+        self._commands = np.zeros((count, 4))
+        self._since = np.full(count, np.nan)
+        self._last: tuple[np.ndarray, np.ndarray, Course] | None = None
+        self._states: dict[str, Any] = {name: task.begin() for name, task in team.tasks.items()}
+        self._model = Model(team)
+        self._assignment = np.full(count, -1)
+        self._energy = EnergyBelief(self._model)
+        self._features = FeatureBelief(team, self._model.features, self._model.declared)
+        self._efficacy = EfficacyBelief(count, len(team.tasks))
+        self._reasons = Reasons(self._model, self._say_feature)
+        self._safety = Safety(team, self._model, self._settings)
+
+    @property
+    def settings(self) -> Settings:
+        """Weights and times; assign another to change them while running."""
+        return self._settings
+
+    @settings.setter
+    def settings(self, settings: Settings) -> None:
+        self._settings = settings
+        self._safety = Safety(self.team, self._model, settings)
+
+    # -- one period ---------------------------------------------------------------
+
+    def step(self, observation: Observation, now: float) -> Decision:
+        """Take in what was heard and decide.
+
+        Args:
+            observation: What was heard since the last step.
+            now: Time, s, on the clock of the observation's times.
+
+        Returns:
+            The decision; its commands are zero for robots that are not heard.
+        """
+        seconds: dict[str, float] = {}
+        with _timed(seconds, "belief"):
+            view = self._believe(observation, now)
+        with _timed(seconds, "pricing"):
+            goals, scenes = self._goals(view)
+            problem, enough = self._problem(view, goals)
+            prices = price(problem)
+        with _timed(seconds, "assignment"):
+            found = assign(problem, prices)
+        situation = self._situation(view, enough, prices)
+        before, self._assignment = self._assignment, found.task
+        reallocations = self._reasons.explain(
+            situation, before, found.task, problem.swap_cost, now
+        )
+        self._take_up(before, view, goals, scenes)
+        with _timed(seconds, "control"):
+            course, control, rows = self._control(view, goals)
+        self._remember(view, course, control)
+        return self._decision(
+            view, found, goals, enough, problem, reallocations, control, rows, seconds
+        )
+
+    def _believe(self, observation: Observation, now: float) -> _View:
+        model, settings = self._model, self._settings
+        dt = self.period if self._now is None else now - self._now
+        if not 0 < dt <= LONGEST_STEP:
+            # The clock jumped or the loop was paused: nothing is learned from the gap.
+            dt, self._last = self.period, None
+            self._features.forget_times(now)
+        self._now = now
+        for moved in observation.goals:
+            self._move(moved)
+        model = self._model
+        places = self._poses.update(observation, now, settings.pose_timeout)
+        health = self._features.update(observation.health, now, settings)
+        self._energy.update(
+            observation, model, self._commands, now, dt, settings.battery_timeout
+        )
+        points = model.fleet.control_points(places.poses)
+        self._learn(observation, places, points, now, dt)
+        capability = model.capability(health)
+        return _View(
+            now, dt, places, points, model.fleet.jacobians(places.poses), health,
+            capability, model.suitability(capability),
+        )  # fmt: skip
+
+    def _learn(
+        self, observation: Observation, places: Places, points: np.ndarray, now: float, dt: float
+    ) -> None:
+        """Compare the motion since the last step with what its commands implied."""
+        settings, model = self._settings, self._model
+        for (robot, task), quality in observation.quality.items():
+            if robot in self.team.robots and task in self.team.tasks:
+                i, m = model.robots.index(robot), model.tasks.index(task)
+                self._efficacy.outside(i, m, quality, settings)
+        if self._last is None:
+            return
+        former, implied, course = self._last
+        moved = points - former
+        expected = (course.to_goal * implied).sum(axis=1) * dt
+        measured = (course.to_goal * moved).sum(axis=1)
+        counted = (
+            places.heard & np.isfinite(measured) & (course.demand > 0) & self.orders.driving
+        )
+        step = Step(now, expected, np.nan_to_num(measured), counted)
+        self._efficacy.update(step, self._assignment, course.distance, points, dt, settings)
+
+    def _goals(self, view: _View) -> tuple[list[Goals], list[Scene]]:
+        """Advance every task and give its goals."""
+        goals, scenes = [], []
+        for m, (name, task) in enumerate(self.team.tasks.items()):
+            scene = self._scene(view, m)
+            self._states[name] = task.advance(self._states[name], scene)
+            scenes.append(scene)
+            goals.append(task.goals(self._states[name], scene))
+        return goals, scenes
+
+    def _scene(self, view: _View, m: int) -> Scene:
+        model = self._model
+
+        def suffices(robots: np.ndarray) -> bool:
+            amounts = view.capability[robots].sum(axis=0)
+            enough = (amounts >= model.needs[m] - 1e-9).all()
+            return bool(enough and len(robots) >= max(model.least[m], 1))
+
+        members = np.flatnonzero((self._assignment == m) & view.places.heard)
+        spacing = 2 * self._safety.reach[members].max(initial=0.0) + 1.5 * self._settings.margin
+        return Scene(
+            view.now, view.points, view.places.poses[:, 3], model.fleet.ahead,
+            members, spacing, suffices,
+        )  # fmt: skip
+
+    def _finished(self) -> frozenset[str]:
+        tasks = self.team.tasks
+        return frozenset(name for name in tasks if tasks[name].finished(self._states[name]))
+
+    def _active(self) -> np.ndarray:
+        finished = self._finished()
+        return np.array(
+            [
+                task.active and name not in finished and finished.issuperset(task.after)
+                for name, task in self.team.tasks.items()
+            ],
+            dtype=bool,
+        )
+
+    def _problem(self, view: _View, goals: list[Goals]) -> tuple[Problem, np.ndarray]:
+        """Put the period's program into numbers; also where the energy suffices, (N, M)."""
+        model, settings = self._model, self._settings
+        robots, tasks = len(model.robots), len(model.tasks)
+        active = self._active()
+        points = np.stack([goal.points for goal in goals], axis=1, dtype=float) if goals else (
+            np.zeros((robots, 0, 3))
+        )
+        velocities = _stacked([goal.velocities for goal in goals], (robots, tasks, 3))
+        path = _stacked([goal.path for goal in goals], (robots, tasks))
+        pace = _stacked([goal.pace for goal in goals], (robots, tasks))
+        tolerance = np.array([goal.tolerance for goal in goals])
+        dwell = np.array([goal.dwell for goal in goals])
+
+        offset = offsets(model, view.places.poses, view.points, points)
+        distance = np.linalg.norm(offset, axis=2)
+        away = -offset / np.maximum(distance, 1e-9)[:, :, None]
+        closing = pace * np.minimum(settings.gamma * distance, model.fleet.cruise[:, None])
+        closing[distance <= tolerance] = 0.0
+
+        serving = way_energy(model, path) + model.idle[:, None] * dwell / SECONDS_PER_HOUR
+        dearness = self._energy.dearness(model)
+        s = view.suitability * self._efficacy.eta
+        energy = dearness[:, None] * serving + model.urgency * path / (
+            SECONDS_PER_HOUR * model.fleet.cruise[:, None]
+        )
+        home = np.linalg.norm(points[..., :2] - model.docks[:, None, :2], axis=2)
+        return_energy = way_energy(model, np.nan_to_num(home))
+        enough = serving + return_energy <= self._energy.spendable(model)[:, None]
+
+        pinned, banned = self._pairs(self.orders.pins), self._pairs(self.orders.bans)
+        eligible = (
+            (s >= settings.s_min)
+            & ~self._efficacy.barred
+            & view.places.heard[:, None]
+            & enough
+            & ~banned
+            & active
+        )
+        pins = pinned & eligible
+        problem = Problem(
+            capability=view.capability,
+            needs=np.where(active[:, None], model.needs, 0.0),
+            least=np.where(active, model.least, 0),
+            most=model.most,
+            priority=model.priority,
+            eligible=eligible,
+            pinned=np.where(pins.any(axis=1), pins.argmax(axis=1) if tasks else -1, -1),
+            previous=self._assignment,
+            swap_cost=dearness * way_energy(model, np.full(robots, settings.swap_distance)),
+            energy=np.nan_to_num(energy / np.maximum(s, settings.s_min)),
+            limits=model.fleet.limits,
+            jacobians=np.nan_to_num(view.jacobians),
+            away=np.nan_to_num(away),
+            closing=np.nan_to_num(closing),
+            goal_speed=np.nan_to_num((away * velocities).sum(axis=2)),
+            kappa=settings.kappa,
+            slack_weight=settings.slack_weight,
+        )
+        return problem, enough
+
+    def _pairs(self, pairs: frozenset[tuple[str, str]]) -> np.ndarray:
+        """Give (robot, task) pairs as a mask, shape (N, M); unknown names say nothing."""
+        mask = np.zeros((len(self._model.robots), len(self._model.tasks)), dtype=bool)
+        for robot, task in pairs:
+            if robot in self.team.robots and task in self.team.tasks:
+                mask[self._model.robots.index(robot), self._model.tasks.index(task)] = True
+        return mask
+
+    def _situation(self, view: _View, enough: np.ndarray, prices: np.ndarray) -> Situation:
+        return Situation(
+            known=view.places.known,
+            heard=view.places.heard,
+            health=view.health,
+            suitability=view.suitability,
+            efficacy=self._efficacy.eta.copy(),
+            barred=self._efficacy.barred.copy(),
+            enough=enough,
+            dearness=self._energy.dearness(self._model),
+            prices=prices,
+            pinned=self._pairs(self.orders.pins),
+            banned=self._pairs(self.orders.bans),
+            active=self._active(),
+            tasks=tuple(self.team.tasks.values()),
+            finished=self._finished(),
+        )
+
+    def _take_up(
+        self, before: np.ndarray, view: _View, goals: list[Goals], scenes: list[Scene]
+    ) -> None:
+        """Hand the changed robots their new tasks, and these their new groups."""
+        changed = np.flatnonzero(before != self._assignment)
+        if not len(changed):
+            return
+        self._since[changed] = view.now
+        self._guidance.restart(changed)
+        self._efficacy.reassigned(
+            changed, before[changed], view.points, view.now, self._settings
+        )
+        tasks = list(self.team.tasks.values())
+        for m in set(before[changed]) | set(self._assignment[changed]) - {-1}:
+            if m < 0:
+                continue
+            name = self._model.tasks[m]
+            scenes[m] = self._scene(view, m)
+            self._states[name] = tasks[m].advance(self._states[name], scenes[m])
+            goals[m] = tasks[m].goals(self._states[name], scenes[m])
+
+    def _targets(self, goals: list[Goals]) -> Targets:
+        count = len(self._assignment)
+        busy = self._assignment >= 0
+        robots, tasks = np.flatnonzero(busy), self._assignment[busy]
+        points, velocities = np.full((count, 3), np.nan), np.zeros((count, 3))
+        facing, pace, tolerance = np.full(count, np.nan), np.ones(count), np.zeros(count)
+        for i, m in zip(robots, tasks, strict=True):
+            points[i], velocities[i] = goals[m].points[i], goals[m].velocities[i]
+            facing[i], pace[i] = goals[m].facing[i], goals[m].pace[i]
+            tolerance[i] = goals[m].tolerance
+        return Targets(busy, points, velocities, facing, pace, tolerance)
+
+    def _control(self, view: _View, goals: list[Goals]) -> tuple[Course, Control, SafetyRows]:
+        model, settings, places = self._model, self._settings, view.places
+        poses = np.nan_to_num(places.poses)
+        points = np.where(places.known[:, None], view.points, 0.0)
+        targets = self._targets(goals)
+        targets = replace(targets, busy=targets.busy & places.heard)
+        course = self._guidance.course(model, targets, poses, points, settings)
+        lowest, highest = model.fleet.command_box(
+            self._commands, view.dt, poses[:, 2], settings.gamma_s
+        )
+        still = ~places.heard | self.orders.hold
+        lowest[still] = highest[still] = 0.0
+        silent_for = np.where(places.heard, 0.0, np.where(places.known, places.age, 0.0))
+        growth = np.minimum(model.fleet.max_speed * silent_for, settings.silent_reach)
+        rows = self._safety.rows(points, places.known, places.heard, growth)
+        control = solve_control(
+            ControlProblem(
+                jacobians=np.nan_to_num(view.jacobians),
+                limits=model.fleet.limits,
+                lowest=lowest,
+                highest=highest,
+                round_limit=model.fleet.round_limit,
+                away=course.away,
+                demand=np.where(still, 0.0, course.demand),
+                preferred=course.preferred,
+                rows=rows,
+                slack_weight=settings.slack_weight,
+            )
+        )
+        return course, control, rows
+
+    def _remember(self, view: _View, course: Course, control: Control) -> None:
+        """Keep what the next step's learning compares its poses with."""
+        self._commands = control.commands
+        implied = np.matmul(np.nan_to_num(view.jacobians), control.commands[:, :, None])[:, :, 0]
+        if not self.orders.hold:
+            self._guidance.notice(course, implied, view.dt)
+        self._last = (view.points, implied, course)
+
+    # -- what comes out -----------------------------------------------------------
+
+    def _decision(
+        self,
+        view: _View,
+        found: Assignment,
+        goals: list[Goals],
+        enough: np.ndarray,
+        problem: Problem,
+        reallocations: tuple,
+        control: Control,
+        rows: SafetyRows,
+        seconds: Mapping[str, float],
+    ) -> Decision:
+        model = self._model
+        targets = self._targets(goals)
+        return Decision(
+            time=view.now,
+            robots=model.robots,
+            tasks=model.tasks,
+            assignment=found.task.copy(),
+            since=self._since.copy(),
+            commands=control.commands,
+            goals=targets.points,
+            poses=view.places.poses,
+            heard=view.places.heard,
+            able=problem.eligible,
+            suitability=view.suitability,
+            efficacy=self._efficacy.eta.copy(),
+            charge=self._energy.charge.copy(),
+            charge_estimated=self._energy.estimated.copy(),
+            finished=self._finished(),
+            reallocations=reallocations,
+            shortfalls=self._shortfalls(found),
+            notices=tuple(self._notices(view, enough, control, rows)),
+            seconds=seconds,
+        )
+
+    def _shortfalls(self, found: Assignment) -> tuple[Shortfall, ...]:
+        model = self._model
+        robots = [
+            Shortfall(model.tasks[m], float(found.missing_robots[m]))
+            for m in np.flatnonzero(found.missing_robots)
+        ]
+        needs = [
+            Shortfall(model.tasks[m], float(found.missing_needs[m, k]), model.capabilities[k])
+            for m, k in np.argwhere(found.missing_needs > 0)
+        ]
+        return tuple(robots + needs)
+
+    def _notices(
+        self, view: _View, enough: np.ndarray, control: Control, rows: SafetyRows
+    ) -> Iterator[Notice]:
+        names, places = self._model.robots, view.places
+        for i in np.flatnonzero(~places.heard):
+            text = f"not heard for {places.age[i]:.1f} s" if places.known[i] else "never heard"
+            yield Notice(names[i], Level.WARN, text)
+        for i in np.flatnonzero(places.heard & ~enough.any(axis=1) & bool(enough.shape[1])):
+            yield Notice(names[i], Level.WARN, "too little energy for any task")
+        for i in np.flatnonzero(control.stopped):
+            yield Notice(names[i], Level.ERROR, "stopped: no safe command could be found")
+        seen = set()
+        for i, other in zip(rows.first[rows.violated], rows.obstacle[rows.violated], strict=True):
+            if (i, other) in seen or (other >= 0 and not places.heard[other]):
+                continue
+            seen.add((i, other))
+            what = names[other] if other >= 0 else "the boundary or a keep-out area"
+            yield Notice(names[i], Level.ERROR, f"nearer to {what} than the margin allows")
+
+    def _say_feature(self, robot: int, feature: int) -> str:
+        return self._features.says(robot, feature, self._now or 0.0, self._settings)
+
+    def unheard_health(self) -> list[tuple[str, str, str]]:
+        """Give (robot, feature, status name) of features no diagnostic ever spoke of."""
+        return self._features.unheard()
+
+    # -- live changes -------------------------------------------------------------
+
+    def edit(self, team: Team, now: float) -> None:
+        """Go on with another task table of the same robots.
+
+        What was learned and done stays with the tasks that stay as they are; a
+        task whose place or kind of work changed begins anew.
+        """
+        model = Model(team)
+        old = {name: m for m, name in enumerate(self._model.tasks)}
+        kept = np.array([old.get(name, -1) for name in model.tasks], dtype=int)
+        self._states = {
+            name: self._states[name]
+            if name in old and _same_work(self.team.tasks[name], task)
+            else task.begin()
+            for name, task in team.tasks.items()
+        }
+        self._efficacy.retable(kept)
+        self._reasons.retable(model, kept)
+        position = {former: m for m, former in enumerate(kept) if former >= 0}
+        self._assignment = np.array(
+            [position.get(int(m), -1) for m in self._assignment], dtype=int
+        )
+        self.team, self._model = team, model
+        self._safety = Safety(team, model, self._settings)
+        self._last = None
+
+    def _move(self, moved: MovedGoal) -> None:
+        task = self.team.tasks.get(moved.task)
+        if task is not None:
+            edited = dict(self.team.tasks) | {moved.task: task.moved(moved.at, moved.heading)}
+            self.edit(self.team.with_tasks(edited), self._now or 0.0)
+
+    def forget(self) -> None:
+        """Set every efficacy back to 1."""
+        self._efficacy.forget()
+
+    def memory(self) -> dict[str, Any]:
+        """Give what should survive a restart, as plain JSON-able data."""
+        model = self._model
+        robots, tasks = np.nonzero((self._efficacy.eta < 0.999) | (self._efficacy.failures > 0))
+        return {
+            "efficacy": [
+                {
+                    "robot": model.robots[i],
+                    "task": model.tasks[m],
+                    "value": float(self._efficacy.eta[i, m]),
+                    "failures": int(self._efficacy.failures[i, m]),
+                    "barred": bool(self._efficacy.barred[i, m]),
+                }
+                for i, m in zip(robots, tasks, strict=True)
+            ],
+            "finished": sorted(self._finished()),
+            "assignment": {
+                model.robots[i]: model.tasks[m] for i, m in enumerate(self._assignment) if m >= 0
+            },
+        }
+
+    def recall(self, memory: Mapping[str, Any]) -> None:
+        """Take up what an earlier run left; names that no longer exist are passed over.
+
+        Raises:
+            ValueError: The memory is not of the form :meth:`memory` gives.
+        """
+        model = self._model
+        robot_of = {name: i for i, name in enumerate(model.robots)}
+        task_of = {name: m for m, name in enumerate(model.tasks)}
+        try:
+            learned = [
+                (entry["robot"], entry["task"], float(entry["value"]), int(entry["failures"]),
+                 bool(entry["barred"]))
+                for entry in memory["efficacy"]
+            ]  # fmt: skip
+            finished = [str(name) for name in memory["finished"]]
+            assignment = {str(robot): str(task) for robot, task in memory["assignment"].items()}
+        except (KeyError, TypeError, ValueError, AttributeError) as error:
+            raise ValueError(f"not an allocator's memory: {error!r}") from error
+        for robot, task, value, failures, barred in learned:
+            if robot in robot_of and task in task_of and 0 <= value <= 1:
+                self._efficacy.recall(robot_of[robot], task_of[task], value, failures, barred)
+        for name in finished:
+            if name in task_of:
+                self._states[name] = self.team.tasks[name].ended()
+        for robot, task in assignment.items():
+            if robot in robot_of and task in task_of:
+                self._assignment[robot_of[robot]] = task_of[task]
+
+
+def _same_work(old: Any, new: Any) -> bool:
+    """Tell whether two tasks are the same but for who may do them and when."""
+    if type(old) is not type(new):
+        return False
+    common = ("needs", "each", "robots", "priority", "urgency", "after", "active")
+    return replace(old, **{name: getattr(new, name) for name in common}) == new
+
+
+def _stacked(parts: list[np.ndarray], shape: tuple[int, ...]) -> np.ndarray:
+    return np.stack(parts, axis=1) if parts else np.zeros(shape)
+
+
+@contextmanager
+def _timed(seconds: dict[str, float], part: str) -> Iterator[None]:
+    start = time.perf_counter()
+    yield
+    seconds[part] = time.perf_counter() - start

@@ -1,0 +1,172 @@
+"""From the goal of each robot to the row that takes it there."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..model import Model
+from ..settings import Settings
+
+TURN_GAIN = 2.0
+"""Turn rate for each radian off the heading demanded, 1/s."""
+
+FACING_DEADBAND = 0.05
+"""Heading error that is left alone, rad."""
+
+HELD_BELOW = 0.35
+"""Share of the closing speed demanded below which a robot counts as held back."""
+
+PATIENCE = 1.0
+"""How long a robot is held back before it turns aside, s."""
+
+TURN_ASIDE = np.radians(40)
+"""How fast it turns aside then, rad/s."""
+
+MOST_ASIDE = np.radians(110)
+
+TURN_BACK = 2.5
+"""Time constant with which it turns back once it moves, s."""
+
+
+@dataclass(frozen=True)
+class Targets:
+    """Goal of each robot's own task; robots without one have ``busy`` False.
+
+    Attributes:
+        busy: Robots with a task, shape (N,).
+        points: Goal points, m, shape (N, 3); NaN heights mean "any".
+        velocities: Their velocities, m/s, shape (N, 3).
+        facing: Headings to take, rad, shape (N,); NaN: any.
+        pace: Share of the cruising speed, shape (N,).
+        tolerance: Distance at which a robot stands, m, shape (N,).
+    """
+
+    busy: np.ndarray
+    points: np.ndarray
+    velocities: np.ndarray
+    facing: np.ndarray
+    pace: np.ndarray
+    tolerance: np.ndarray
+
+
+@dataclass(frozen=True)
+class Course:
+    """What the safe-control QP is asked for.
+
+    Attributes:
+        away: Unit vector from where to steer to the robot, shape (N, 3).
+        demand: Closing speed demanded, m/s, shape (N,); 0: no task row.
+        preferred: Preferred commands, shape (N, 4).
+        to_goal: Unit vector from the robot to its goal, shape (N, 3).
+        distance: Distance to the goal, m, shape (N,); 0 without one.
+    """
+
+    away: np.ndarray
+    demand: np.ndarray
+    preferred: np.ndarray
+    to_goal: np.ndarray
+    distance: np.ndarray
+
+
+def offsets(model: Model, poses: np.ndarray, points: np.ndarray, goals: np.ndarray) -> np.ndarray:
+    """Give vectors from robots to goals; the height counts only for robots that fly.
+
+    Args:
+        model: The team.
+        poses: Poses, shape (N, 4).
+        points: Control points, m, shape (N, 3).
+        goals: Goal points, m, shape (N, 3) or (N, M, 3); NaN height: any.
+
+    Returns:
+        Offsets, m, of the shape of ``goals``.
+    """
+    wide = goals.ndim == 3
+    offset = goals - (points[:, None] if wide else points)
+    if not model.fleet.flies.any():
+        offset[..., 2] = 0.0
+        return offset
+    low, high = model.fleet.height_band.T
+    z, middle = poses[:, 2], (low + high) / 2
+    if wide:
+        low, high, z, middle = (part[:, None] for part in (low, high, z, middle))
+    height = goals[..., 2]
+    height = np.where(np.isnan(height), middle, np.clip(height, low, high))
+    offset[..., 2] = np.nan_to_num(height - z)
+    return offset
+
+
+class Guidance:
+    """Keeps who stands at its goal, and who is held back and turns aside.
+
+    A robot that has reached its goal stands until it is clearly away from it
+    again. One that rows hold back for long turns the way it prefers to the
+    right-hand side, more the longer it lasts, and back when it moves again:
+    two that meet head-on pass each other on the same side.
+    """
+
+    def __init__(self, robots: int) -> None:
+        self.standing = np.zeros(robots, dtype=bool)
+        self.held = np.zeros(robots)
+        self.aside = np.zeros(robots)
+
+    def restart(self, robots: np.ndarray) -> None:
+        """Begin anew for robots (n,) that got another goal."""
+        self.standing[robots] = False
+        self.held[robots] = 0.0
+        self.aside[robots] = 0.0
+
+    def course(
+        self,
+        model: Model,
+        targets: Targets,
+        poses: np.ndarray,
+        points: np.ndarray,
+        settings: Settings,
+    ) -> Course:
+        """Give what each robot should do now, safety aside."""
+        fleet = model.fleet
+        offset = offsets(model, poses, points, targets.points)
+        offset[~targets.busy] = 0.0
+        distance = np.linalg.norm(offset, axis=1)
+        to_goal = offset / np.maximum(distance, 1e-9)[:, None]
+
+        turning = np.where(np.isfinite(targets.facing), 2 * fleet.ahead, 0.0)
+        limit = np.where(self.standing, 1.5 * targets.tolerance + turning, targets.tolerance)
+        self.standing = targets.busy & (distance <= limit) & (targets.tolerance > 0)
+
+        closing = targets.pace * np.minimum(settings.gamma * distance, fleet.cruise)
+        demand = closing + (to_goal * targets.velocities).sum(axis=1)
+        demand = np.where(targets.busy & ~self.standing, np.maximum(demand, 0.0), 0.0)
+
+        away = -_turned(to_goal, -self.aside)
+        return Course(away, demand, self._turning(model, targets, poses), to_goal, distance)
+
+    def _turning(self, model: Model, targets: Targets, poses: np.ndarray) -> np.ndarray:
+        """Prefer to turn to the facing demanded, standing or able to while moving."""
+        preferred = np.zeros((len(poses), 4))
+        off = np.angle(np.exp(1j * (targets.facing - poses[:, 3])))
+        may = targets.busy & (self.standing | (model.fleet.ahead == 0))
+        turn = may & (np.abs(off) > FACING_DEADBAND)
+        preferred[turn, 3] = np.clip(
+            TURN_GAIN * off[turn], -model.fleet.limits[turn, 3], model.fleet.limits[turn, 3]
+        )
+        return preferred
+
+    def notice(self, course: Course, velocities: np.ndarray, dt: float) -> None:
+        """Learn who is held back from the velocities (N, 3) that were allowed, m/s."""
+        closing = -(course.away * velocities).sum(axis=1)
+        wanting = course.demand > 0.05
+        held = wanting & (closing < HELD_BELOW * course.demand)
+        self.held = np.where(held, self.held + dt, 0.0)
+        impatient = self.held > PATIENCE
+        self.aside[impatient] = np.minimum(self.aside[impatient] + TURN_ASIDE * dt, MOST_ASIDE)
+        self.aside[~held] *= np.exp(-dt / TURN_BACK)
+
+
+def _turned(vectors: np.ndarray, angles: np.ndarray) -> np.ndarray:
+    """Turn vectors (N, 3) by angles (N,) about the vertical, counter-clockwise."""
+    cos, sin = np.cos(angles), np.sin(angles)
+    x, y = vectors[:, 0], vectors[:, 1]
+    return np.column_stack([cos * x - sin * y, sin * x + cos * y, vectors[:, 2]])
