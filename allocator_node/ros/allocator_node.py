@@ -20,7 +20,7 @@ from ..allocator import Allocator
 from ..document import FileError
 from ..team import Team
 from ..team_file import merge_tasks, read_team
-from . import names, parameters
+from . import parameters
 from .loop import Loop, Occupied
 from .parameters import ParameterError
 
@@ -131,9 +131,6 @@ class AllocatorNode(LifecycleNode):
         team = read_team(options.team_file)
         if options.task_edit:
             team = merge_tasks(team, options.task_edit)
-        problems = names.problems(self, team)
-        if problems:
-            raise ParameterError("\n".join(problems))
         return team
 
     # Parameters
@@ -167,11 +164,7 @@ class AllocatorNode(LifecycleNode):
         team = self.loop.allocator.team
         if not options.task_edit or all(change.name != "task_edit" for change in changes):
             return team
-        edited = merge_tasks(team, options.task_edit)
-        problems = names.problems(self, edited)
-        if problems:
-            raise ParameterError("\n".join(problems))
-        return edited
+        return merge_tasks(team, options.task_edit)
 
     # Services
 

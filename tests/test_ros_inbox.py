@@ -1,0 +1,291 @@
+"""What comes in: frames, stamps, and messages no robot should be driven by."""
+
+from __future__ import annotations
+
+import math
+import time
+
+import numpy as np
+import pytest
+
+rclpy = pytest.importorskip("rclpy", reason="needs ROS 2: rclpy is not installed")
+
+from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus  # noqa: E402
+from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped, Twist  # noqa: E402
+from nav_msgs.msg import Odometry  # noqa: E402
+from ros_bench import until  # noqa: E402
+from std_msgs.msg import Float32  # noqa: E402
+
+from allocator_node.ros.clockwork import StampReader, arrival_time  # noqa: E402
+from allocator_node.ros.inbox import Inbox  # noqa: E402
+from allocator_node.team_file import parse_team  # noqa: E402
+
+pytestmark = pytest.mark.ros
+
+TEAM = """
+frame: site
+robots:
+  placed:
+    drive: {model: differential, max_speed: 1}
+    features: [camera]
+    health: [{name: "placed/cam*", feature: camera}]
+    pose: {topic: placed/odom, frame: placed/odom, offset: [10, 20, 1.5707963267948966]}
+  plain:
+    drive: {model: holonomic, max_speed: 1}
+    pose: {topic: plain/pose, type: geometry_msgs/msg/PoseStamped}
+  covered:
+    drive: {model: holonomic, max_speed: 1}
+    pose: {topic: covered/pose, type: geometry_msgs/msg/PoseWithCovarianceStamped}
+tasks:
+  gate: {kind: watch, at: [8, 2]}
+"""
+PLACED, PLAIN, COVERED = range(3)
+
+
+class Post:
+    """An inbox and somebody who writes to it."""
+
+    def __init__(self) -> None:
+        self.receiver = rclpy.create_node("allocator")
+        self.sender = rclpy.create_node("sender")
+        self.inbox = Inbox(self.receiver, parse_team(TEAM))
+        self._publishers: dict[str, object] = {}
+
+    def send(self, topic: str, message: object) -> None:
+        """Publish a message, once somebody listens."""
+        if topic not in self._publishers:
+            self._publishers[topic] = self.sender.create_publisher(type(message), topic, 10)
+        until(self._publishers[topic].get_subscription_count, f"a listener on {topic}")
+        self._publishers[topic].publish(message)
+        time.sleep(0.03)
+
+    def now(self) -> float:
+        """Give the time, s."""
+        return self.receiver.get_clock().now().nanoseconds * 1e-9
+
+    def look(self):
+        """Give the observation of now."""
+        return self.inbox.observation(self.now())
+
+    def stamped(self, message, frame: str, x: float = 0.0, y: float = 0.0, age: float = 0.0):
+        """Fill in header and place."""
+        message.header.frame_id = frame
+        nanoseconds = self.receiver.get_clock().now().nanoseconds - int(age * 1e9)
+        message.header.stamp.sec, message.header.stamp.nanosec = divmod(nanoseconds, 10**9)
+        pose = message.pose if isinstance(message, PoseStamped) else message.pose.pose
+        pose.position.x, pose.position.y = x, y
+        return message
+
+
+@pytest.fixture(scope="module")
+def post():
+    rclpy.init()
+    made = Post()
+    yield made
+    made.inbox.close()
+    made.receiver.destroy_node()
+    made.sender.destroy_node()
+    rclpy.shutdown()
+
+
+def test_odometry_in_its_own_frame_is_placed_by_the_offset(post: Post) -> None:
+    """REP 105: pose in header.frame_id, twist in child_frame_id (the body).
+
+    By hand: a frame at (10, 20) turned by 90° to the left; 2 m ahead in it is 2 m
+    north of (10, 20); a robot that heads along it and drives ahead goes north.
+    """
+    message = post.stamped(Odometry(), "placed/odom", x=2.0)
+    message.twist.twist.linear.x, message.twist.twist.angular.z = 0.5, 0.1
+    post.send("/placed/odom", message)
+    seen = post.look()
+    assert seen.poses[PLACED] == pytest.approx([10, 22, 0, math.pi / 2])
+    assert seen.velocities[PLACED] == pytest.approx([0, 0.5, 0, 0.1], abs=1e-9)
+    assert post.now() - seen.pose_times[PLACED] < 0.5
+
+
+def test_odometry_in_the_site_frame_is_taken_as_it_is(post: Post) -> None:
+    """The offset belongs to the declared frame only."""
+    message = post.stamped(Odometry(), "site", x=3.0, y=4.0)
+    message.pose.pose.orientation.z, message.pose.pose.orientation.w = 1.0, 0.0
+    message.twist.twist.linear.x = 0.5
+    post.send("/placed/odom", message)
+    seen = post.look()
+    assert seen.poses[PLACED][:3] == pytest.approx([3, 4, 0])
+    assert abs(seen.poses[PLACED][3]) == pytest.approx(math.pi)
+    assert seen.velocities[PLACED] == pytest.approx([-0.5, 0, 0, 0], abs=1e-9)
+
+
+def test_other_pose_types_have_no_velocity(post: Post) -> None:
+    """PoseStamped and PoseWithCovarianceStamped."""
+    post.send("/plain/pose", post.stamped(PoseStamped(), "site", x=1.0))
+    post.send("/covered/pose", post.stamped(PoseWithCovarianceStamped(), "site", x=2.0))
+    seen = post.look()
+    assert seen.poses[[PLAIN, COVERED], 0] == pytest.approx([1, 2])
+    assert np.isnan(seen.velocities[[PLAIN, COVERED]]).all()
+
+
+def test_only_the_newest_pose_counts(post: Post) -> None:
+    """Depth 1: of many between two looks the last one is taken, and once only."""
+    for k in range(20):
+        post.send("/plain/pose", post.stamped(PoseStamped(), "site", x=float(k)))
+    first, second = post.look(), post.look()
+    assert first.poses[PLAIN, 0] == 19
+    assert second.pose_times[PLAIN] == first.pose_times[PLAIN]
+
+
+def nan_position(message: PoseStamped) -> None:
+    message.pose.position.y = math.nan
+
+
+def infinite_position(message: PoseStamped) -> None:
+    message.pose.position.x = math.inf
+
+
+def absurd_position(message: PoseStamped) -> None:
+    message.pose.position.x = 1e300
+
+
+def zero_quaternion(message: PoseStamped) -> None:
+    message.pose.orientation.w = 0.0
+
+
+def long_quaternion(message: PoseStamped) -> None:
+    message.pose.orientation.w = 7.0
+
+
+def nan_quaternion(message: PoseStamped) -> None:
+    message.pose.orientation.z = math.nan
+
+
+def other_frame(message: PoseStamped) -> None:
+    message.header.frame_id = "map"
+
+
+def no_frame(message: PoseStamped) -> None:
+    message.header.frame_id = ""
+
+
+@pytest.mark.parametrize(
+    ("spoil", "reason"),
+    [
+        (nan_position, "the position is not finite"),
+        (infinite_position, "the position is not finite"),
+        (absurd_position, "the position is absurdly large"),
+        (zero_quaternion, "the quaternion has length 0"),
+        (long_quaternion, "the quaternion has length 7"),
+        (nan_quaternion, "the quaternion has length nan"),
+        (other_frame, "frame_id is 'map', the team file says 'site'"),
+        (no_frame, "frame_id is '', the team file says 'site'"),
+    ],
+)
+def test_a_pose_of_no_use_is_refused(post: Post, spoil, reason: str) -> None:
+    """The last good one stays and ages; the complaint names topic and reason."""
+    post.send("/plain/pose", post.stamped(PoseStamped(), "site", x=5.0))
+    good = post.look()
+    message = post.stamped(PoseStamped(), "site", x=6.0)
+    spoil(message)
+    refused = post.inbox.complaints.refused.get("/plain/pose", 0)
+    post.send("/plain/pose", message)
+    seen = post.look()
+    assert seen.poses[PLAIN, 0] == 5.0
+    assert seen.pose_times[PLAIN] == good.pose_times[PLAIN]
+    assert post.inbox.complaints.refused["/plain/pose"] == refused + 1
+    assert reason in post.inbox.complaints.last["/plain/pose"][0]
+
+
+def test_a_wrong_velocity_does_not_cost_the_pose(post: Post) -> None:
+    """Only the velocity is not used."""
+    message = post.stamped(Odometry(), "site", x=7.0)
+    message.twist.twist = Twist()
+    message.twist.twist.linear.x = math.nan
+    post.send("/placed/odom", message)
+    seen = post.look()
+    assert seen.poses[PLACED, 0] == 7.0
+    assert np.isnan(seen.velocities[PLACED]).all()
+
+
+@pytest.mark.parametrize("age", [-30.0, 30.0, 3000.0])
+def test_a_stamp_of_another_clock_is_replaced_by_the_arrival(post: Post, age: float) -> None:
+    """Seconds off, before or after: the pose counts from when it arrived."""
+    post.send("/plain/pose", post.stamped(PoseStamped(), "site", x=8.0, age=age))
+    time.sleep(0.2)
+    seen = post.look()
+    assert seen.poses[PLAIN, 0] == 8.0
+    assert 0.15 < post.now() - seen.pose_times[PLAIN] < 2.0
+    assert "the time of arrival is used" in post.inbox.complaints.last["/plain/pose"][0]
+
+
+def test_a_repeated_message_is_no_news(post: Post) -> None:
+    """A publisher that repeats its last pose for ever must not keep a robot alive."""
+    message = post.stamped(PoseStamped(), "site", x=9.0)
+    post.send("/plain/pose", message)
+    first = post.look()
+    post.send("/plain/pose", message)
+    assert post.look().pose_times[PLAIN] == first.pose_times[PLAIN]
+
+
+def test_stamps_alone() -> None:
+    """The rules for one topic, without messages."""
+    reader = StampReader()
+    assert reader.time_of(100.0, 99.9, 0.0) == (99.9, "")  # no stamp
+    assert reader.time_of(100.0, 99.9, 99.5) == (99.5, "")
+    assert reader.time_of(100.1, 100.0, 99.5)[0] is None  # repeated
+    assert reader.time_of(100.1, 100.0, 99.2)[0] is None  # out of order
+    assert reader.time_of(100.1, 100.0, 100.15) == (100.1, "")  # a little ahead
+    assert reader.time_of(100.2, 100.0, 20.0)[0] == 100.0  # a restarted clock
+    reader.forget()
+    assert reader.time_of(50.0, 49.9, 49.8) == (49.8, "")
+
+
+def test_arrival_lies_between_two_looks() -> None:
+    """Whatever the system clock does."""
+    received = time.time_ns() - 50_000_000
+    assert arrival_time(10.0, received, 9.9) == pytest.approx(9.95, abs=0.02)
+    assert arrival_time(10.0, time.time_ns() - 10**12, 9.9) == pytest.approx(9.9)
+    assert arrival_time(10.0, time.time_ns() + 10**12, 9.9) == 10.0
+    assert arrival_time(10.0, 0, 9.9) == 10.0  # the middleware does not tell
+    assert arrival_time(10.0, received, math.nan) == pytest.approx(9.95, abs=0.02)
+
+
+def test_health_keeps_the_last_report_of_each_name_we_know(post: Post) -> None:
+    """Shell wildcards in the rules; other names are dropped."""
+    levels = [DiagnosticStatus.ERROR, DiagnosticStatus.OK, DiagnosticStatus.WARN]
+    post.send(
+        "/diagnostics",
+        DiagnosticArray(
+            status=[DiagnosticStatus(name="placed/cam 1", level=level) for level in levels]
+            + [DiagnosticStatus(name="disk", level=DiagnosticStatus.ERROR)]
+        ),
+    )
+    assert [(r.name, r.level) for r in post.look().health] == [("placed/cam 1", 1)]
+    assert post.look().health == ()
+
+
+def test_goal_and_quality(post: Post) -> None:
+    """An all-zero orientation leaves the heading as it is; numbers out of range are refused."""
+    message = post.stamped(PoseStamped(), "site", x=1.0, y=2.0)
+    message.pose.orientation.w = 0.0
+    post.send("/allocator/tasks/gate/goal", message)
+    post.send("/allocator/quality/plain/gate", Float32(data=0.25))
+    seen = post.look()
+    (goal,) = seen.goals
+    assert (goal.task, goal.at, goal.heading) == ("gate", (1.0, 2.0, 0.0), None)
+    assert seen.quality == {("plain", "gate"): 0.25}
+    for quality in (-0.1, 1.5, math.nan):
+        post.send("/allocator/quality/plain/gate", Float32(data=quality))
+        assert post.look().quality == {}
+    message.pose.orientation.z = 1.0
+    post.send("/allocator/tasks/gate/goal", message)
+    assert abs(post.look().goals[0].heading) == pytest.approx(math.pi)
+    message.pose.position.x = math.nan
+    post.send("/allocator/tasks/gate/goal", message)
+    assert post.look().goals == ()
+
+
+def test_forgetting_times_forgets_what_was_heard(post: Post) -> None:
+    """After a clock that was set back nothing counts as heard."""
+    post.send("/plain/pose", post.stamped(PoseStamped(), "site"))
+    assert np.isfinite(post.look().pose_times[PLAIN])
+    post.inbox.forget_times()
+    assert np.isnan(post.look().pose_times).all()
+    assert np.isnan(post.look().poses).all()
