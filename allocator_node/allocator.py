@@ -175,7 +175,7 @@ class Allocator:
             places.heard & np.isfinite(measured) & (course.demand > 0) & self.orders.driving
         )
         step = Step(now, expected, np.nan_to_num(measured), counted)
-        self._efficacy.update(step, self._assignment, course.distance, points, dt, settings)
+        self._efficacy.update(step, self._assignment, course.distance, dt, settings)
 
     def _goals(self, view: _View) -> tuple[list[Goals], list[Scene]]:
         """Advance every task and give its goals."""
@@ -239,6 +239,7 @@ class Allocator:
         serving = way_energy(model, path) + model.idle[:, None] * dwell / SECONDS_PER_HOUR
         dearness = self._energy.dearness(model)
         s = view.suitability * self._efficacy.eta
+        trusted = self._trusted(view)
         energy = dearness[:, None] * serving + model.urgency * path / (
             SECONDS_PER_HOUR * model.fleet.cruise[:, None]
         )
@@ -248,8 +249,8 @@ class Allocator:
 
         pinned, banned = self._pairs(self.orders.pins), self._pairs(self.orders.bans)
         eligible = (
-            (s >= settings.s_min)
-            & ~self._efficacy.barred
+            (view.suitability > 0)
+            & trusted
             & view.places.heard[:, None]
             & enough
             & ~banned
@@ -277,6 +278,11 @@ class Allocator:
         )
         return problem, enough
 
+    def _trusted(self, view: _View) -> np.ndarray:
+        """Tell where the specialization suffices, or would but for the features, (N, M)."""
+        s = np.where(view.suitability > 0, view.suitability, 1.0) * self._efficacy.eta
+        return (s >= self._settings.s_min) & ~self._efficacy.barred
+
     def _pairs(self, pairs: frozenset[tuple[str, str]]) -> np.ndarray:
         """Give (robot, task) pairs as a mask, shape (N, M); unknown names say nothing."""
         mask = np.zeros((len(self._model.robots), len(self._model.tasks)), dtype=bool)
@@ -292,7 +298,7 @@ class Allocator:
             health=view.health,
             suitability=view.suitability,
             efficacy=self._efficacy.eta.copy(),
-            barred=self._efficacy.barred.copy(),
+            trusted=self._trusted(view),
             enough=enough,
             dearness=self._energy.dearness(self._model),
             prices=prices,
@@ -312,9 +318,7 @@ class Allocator:
             return
         self._since[changed] = view.now
         self._guidance.restart(changed)
-        self._efficacy.reassigned(
-            changed, before[changed], view.points, view.now, self._settings
-        )
+        self._efficacy.reassigned(changed, before[changed], view.now, self._settings)
         tasks = list(self.team.tasks.values())
         for m in set(before[changed]) | set(self._assignment[changed]) - {-1}:
             if m < 0:

@@ -14,6 +14,9 @@ from .tasks import Task
 NOTICEABLE = 0.05
 """Change of efficacy or suitability that can be a reason."""
 
+DEARER = 1.1
+"""Factor by which energy must have become dearer to be a reason."""
+
 
 @dataclass(frozen=True)
 class Situation:
@@ -24,7 +27,8 @@ class Situation:
         health: φ, shape (N, F).
         suitability: a, shape (N, M).
         efficacy: η, shape (N, M).
-        barred: Pairs that failed and wait for their next try, shape (N, M).
+        trusted: Pairs whose efficacy allows them (not failed, not waiting for the
+            next try), shape (N, M).
         enough: Where the energy suffices, shape (N, M).
         dearness: λ, shape (N,).
         prices: κ w + e, Wh, shape (N, M).
@@ -39,7 +43,7 @@ class Situation:
     health: np.ndarray
     suitability: np.ndarray
     efficacy: np.ndarray
-    barred: np.ndarray
+    trusted: np.ndarray
     enough: np.ndarray
     dearness: np.ndarray
     prices: np.ndarray
@@ -50,12 +54,12 @@ class Situation:
     finished: frozenset[str]
 
     ROBOTS = (
-        "known", "heard", "health", "suitability", "efficacy", "barred",
+        "known", "heard", "health", "suitability", "efficacy", "trusted",
         "enough", "dearness", "prices", "pinned", "banned",
     )  # fmt: skip
     """Parts whose first axis is the robot."""
 
-    PAIRS = ("suitability", "efficacy", "barred", "enough", "prices", "pinned", "banned")
+    PAIRS = ("suitability", "efficacy", "trusted", "enough", "prices", "pinned", "banned")
     """Parts of shape (N, M)."""
 
     def updated(self, now: Situation, robots: np.ndarray, tasks: Iterable[int]) -> Situation:
@@ -94,7 +98,12 @@ class _Reason:
 
 
 class Reasons:
-    """Explains changes; keeps the situation in which each robot and task was last decided."""
+    """Explains changes.
+
+    What happened since the last decision is looked at first: a failure, a return,
+    an order. If nothing did, the reason crept in, and is found against the situation
+    in which the robots and tasks concerned were last decided.
+    """
 
     def __init__(self, model: Model, say_feature: Callable[[int, int], str]) -> None:
         """Begin with nothing decided.
@@ -105,6 +114,7 @@ class Reasons:
         """
         self.model = model
         self.say_feature = say_feature
+        self.last: Situation | None = None
         self.chosen: Situation | None = None
 
     def retable(self, model: Model, kept: np.ndarray) -> None:
@@ -115,8 +125,10 @@ class Reasons:
             kept: Former index of each task, −1 for a new one, shape (M,).
         """
         self.model = model
-        if self.chosen is not None:
-            self.chosen = self.chosen.retabled(kept, tuple(model.team.tasks.values()))
+        if self.chosen is not None and self.last is not None:
+            tasks = tuple(model.team.tasks.values())
+            self.chosen = self.chosen.retabled(kept, tasks)
+            self.last = self.last.retabled(kept, tasks)
 
     def explain(
         self,
@@ -134,24 +146,19 @@ class Reasons:
             swap_cost: ρ, Wh, shape (N,).
             time: s.
         """
-        if self.chosen is None:
-            self.chosen = replace(
+        if self.chosen is None or self.last is None:
+            self.last = self.chosen = replace(
                 now,
                 known=np.zeros_like(now.known),
                 heard=np.zeros_like(now.heard),
                 active=np.zeros_like(now.active),
             )
         moved = np.flatnonzero(before != after)
-        if not len(moved):
-            return ()
         changes: list[Reallocation] = []
+        decided = self.chosen
         for tasks in _exchanges(moved, before, after):
             robots = np.flatnonzero(np.isin(before, list(tasks)) | np.isin(after, list(tasks)))
-            own = {m: self._own(m, now, before, after) for m in tasks}
-            found = [reason for reason in own.values() if reason]
-            shared = min(found, key=lambda reason: reason.rank, default=None)
-            if shared is None:
-                shared = self._by_price(now, robots, before, after, swap_cost)
+            own, shared = self._find(tasks, robots, now, before, after, swap_cost)
             for m in sorted(tasks):
                 groups = [
                     tuple(sorted(self.model.robots[i] for i in np.flatnonzero(side == m)))
@@ -159,37 +166,46 @@ class Reasons:
                 ]
                 if groups[0] == groups[1]:
                     continue
-                reason = own[m] or shared
-                changes.append(
-                    Reallocation(
-                        time, self.model.tasks[m], groups[0], groups[1], reason.cause, reason.detail
-                    )
-                )
-            self.chosen = self.chosen.updated(now, robots, tasks)
+                reason, task = own.get(m) or shared, self.model.tasks[m]
+                changes.append(Reallocation(time, task, *groups, reason.cause, reason.detail))
+            decided = decided.updated(now, robots, tasks)
+        self.chosen, self.last = decided, now
         return tuple(changes)
 
+    def _find(
+        self,
+        tasks: set[int],
+        robots: np.ndarray,
+        now: Situation,
+        before: np.ndarray,
+        after: np.ndarray,
+        swap_cost: np.ndarray,
+    ) -> tuple[dict[int, _Reason], _Reason]:
+        """Find the reasons of single tasks, and the one that the others share."""
+        for then in (self.last, self.chosen):
+            found = {m: self._own(m, then, now, before, after) for m in tasks}
+            own = {m: reason for m, reason in found.items() if reason}
+            if own:
+                return own, min(own.values(), key=lambda reason: reason.rank)
+        return {}, self._by_price(now, robots, before, after, swap_cost)
+
     def _own(
-        self, m: int, now: Situation, before: np.ndarray, after: np.ndarray
+        self, m: int, then: Situation, now: Situation, before: np.ndarray, after: np.ndarray
     ) -> _Reason | None:
         """Find a reason in the task itself or in the robots of its group."""
         left = np.flatnonzero((before == m) & (after != m))
         joined = np.flatnonzero((after == m) & (before != m))
         stayed = np.flatnonzero((after == m) & (before == m))
         reasons = [
-            *(self._loss(i, m, now) for i in left),
-            *(self._loss(i, m, now) for i in stayed),
-            *(self._gain(i, m, now) for i in joined),
-            *(self._gain(i, m, now) for i in left if self._ordered_away(i, m, now)),
-            self._task(m, now),
+            *(self._loss(i, m, then, now) for i in (*left, *stayed)),
+            *(self._gain(i, m, then, now) for i in joined),
+            self._task(m, then, now),
         ]
         return min(filter(None, reasons), key=lambda reason: reason.rank, default=None)
 
-    def _ordered_away(self, i: int, m: int, now: Situation) -> bool:
-        return bool((now.pinned[i] & ~self.chosen.pinned[i]).any())
-
-    def _loss(self, i: int, m: int, now: Situation) -> _Reason | None:
-        """Tell what took robot i from task m."""
-        then, name, task = self.chosen, self.model.robots[i], self.model.tasks[m]
+    def _loss(self, i: int, m: int, then: Situation, now: Situation) -> _Reason | None:
+        """Tell what took robot i from task m, or made it less able to do it."""
+        name, task = self.model.robots[i], self.model.tasks[m]
         if now.banned[i, m] and not then.banned[i, m]:
             return _Reason(0, Cause.PIN, f"{name} is banned from {task}")
         pins = np.flatnonzero(now.pinned[i] & ~then.pinned[i])
@@ -200,18 +216,16 @@ class Reasons:
         if then.heard[i] and not now.heard[i]:
             return _Reason(2, Cause.SILENT, f"{name} is silent")
         if now.suitability[i, m] < then.suitability[i, m] - NOTICEABLE:
-            return _Reason(3, Cause.FEATURE, self._features(i, now, came_back=False))
+            return _Reason(3, Cause.FEATURE, self._failed(i, then, now))
         if then.enough[i, m] and not now.enough[i, m]:
             return _Reason(4, Cause.ENERGY, f"{name} has too little energy left for {task}")
-        failed = now.barred[i, m] and not then.barred[i, m]
-        floored = then.efficacy[i, m] - now.efficacy[i, m] > 0.5
-        if failed or floored:
+        if then.trusted[i, m] and not now.trusted[i, m]:
             return _Reason(5, Cause.EFFICACY, self._progress(i, m, now))
         return None
 
-    def _gain(self, i: int, m: int, now: Situation) -> _Reason | None:
+    def _gain(self, i: int, m: int, then: Situation, now: Situation) -> _Reason | None:
         """Tell what brought robot i to task m."""
-        then, name, task = self.chosen, self.model.robots[i], self.model.tasks[m]
+        name, task = self.model.robots[i], self.model.tasks[m]
         if now.pinned[i, m] and not then.pinned[i, m]:
             return _Reason(0, Cause.PIN, f"{name} is pinned to {task}")
         if not then.known[i]:
@@ -219,18 +233,18 @@ class Reasons:
         if not then.heard[i] and now.heard[i]:
             return _Reason(2, Cause.RETURNED, f"{name} is heard again")
         if now.suitability[i, m] > then.suitability[i, m] + NOTICEABLE:
-            return _Reason(3, Cause.FEATURE, self._features(i, now, came_back=True))
+            return _Reason(3, Cause.FEATURE, self._works_again(i, then, now))
         if now.enough[i, m] and not then.enough[i, m]:
             return _Reason(4, Cause.ENERGY, f"{name} has enough energy again for {task}")
         if then.banned[i, m] and not now.banned[i, m]:
             return _Reason(6, Cause.PIN, f"{name} is no longer banned from {task}")
-        if then.barred[i, m] and not now.barred[i, m]:
+        if now.trusted[i, m] and not then.trusted[i, m]:
             return _Reason(6, Cause.EFFICACY, f"{name} may try {task} again")
         return None
 
-    def _task(self, m: int, now: Situation) -> _Reason | None:
+    def _task(self, m: int, then: Situation, now: Situation) -> _Reason | None:
         """Tell what changed about task m itself."""
-        then, name = self.chosen, self.model.tasks[m]
+        name = self.model.tasks[m]
         if then.active[m] and not now.active[m]:
             word = "finished" if name in now.finished else "switched off"
             return _Reason(1, Cause.TASK, f"{name} is {word}")
@@ -253,19 +267,20 @@ class Reasons:
         """Find what made the new assignment cheaper than the old one."""
         then = self.chosen
         saving = self._saving(now.prices, robots, before, after, swap_cost)
-        trusted = np.maximum(then.efficacy, 1e-3) / np.maximum(now.efficacy, 1e-3)
-        worst = min(
-            ((now.efficacy - then.efficacy)[i, before[i]], i) for i in robots if before[i] >= 0
-        ) if (before[robots] >= 0).any() else (0.0, -1)
-        if worst[0] < -NOTICEABLE and (
-            self._saving(now.prices / trusted, robots, before, after, swap_cost) <= 0
+        busy = [i for i in robots if before[i] >= 0]
+
+        fall = {i: then.efficacy[i, before[i]] - now.efficacy[i, before[i]] for i in busy}
+        worst = max(fall, key=fall.get, default=None)
+        lost = np.maximum(now.efficacy, 1e-3) / np.maximum(then.efficacy, 1e-3)
+        if worst is not None and fall[worst] > NOTICEABLE and (
+            self._saving(now.prices * lost, robots, before, after, swap_cost) <= 0
         ):
-            return _Reason(8, Cause.EFFICACY, self._progress(worst[1], before[worst[1]], now))
+            return _Reason(8, Cause.EFFICACY, self._progress(worst, before[worst], now))
+
         dearer = now.dearness / then.dearness
-        cheaper_then = now.prices / dearer[:, None]
         sags = robots[np.argmax(dearer[robots])]
-        if dearer[sags] > 1.1 and (
-            self._saving(cheaper_then, robots, before, after, swap_cost) <= 0
+        if dearer[sags] > DEARER and (
+            self._saving(now.prices / dearer[:, None], robots, before, after, swap_cost) <= 0
         ):
             return _Reason(8, Cause.ENERGY, f"the energy of {self.model.robots[sags]} runs low")
         return _Reason(9, Cause.CHEAPER, f"the new choice saves {max(saving, 0.0):.3g} Wh")
@@ -289,14 +304,16 @@ class Reasons:
             f"efficacy {self.chosen.efficacy[i, m]:.2f} → {now.efficacy[i, m]:.2f}"
         )
 
-    def _features(self, i: int, now: Situation, *, came_back: bool) -> str:
-        change = now.health[i] - self.chosen.health[i]
-        changed = np.flatnonzero(change > 0 if came_back else change < 0)
-        names = ", ".join(self.model.features[f] for f in changed)
-        if came_back:
-            return f"{self.model.robots[i]}: {names} works again"
-        said = "; ".join(self.say_feature(i, f) for f in changed)
+    def _failed(self, i: int, then: Situation, now: Situation) -> str:
+        worse = np.flatnonzero(now.health[i] < then.health[i])
+        names = ", ".join(self.model.features[f] for f in worse)
+        said = "; ".join(self.say_feature(i, f) for f in worse)
         return f"{self.model.robots[i]}: {names} failed ({said})"
+
+    def _works_again(self, i: int, then: Situation, now: Situation) -> str:
+        better = np.flatnonzero(now.health[i] > then.health[i])
+        names = ", ".join(self.model.features[f] for f in better)
+        return f"{self.model.robots[i]}: {names} works again"
 
 
 def _exchanges(moved: np.ndarray, before: np.ndarray, after: np.ndarray) -> list[set[int]]:

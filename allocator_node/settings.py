@@ -57,4 +57,4 @@ class Settings(Checked):
     efficacy_tau: Positive = 4.0
     allowance: Annotated[float, Ge(0), Lt(1)] = 0.2
     pose_noise: NonNegative = 0.05
-    retry_after: Positive = 60.0
+    retry_after: Positive = 120.0

@@ -15,14 +15,14 @@ CLEAR = 8.0
 MOST_DOUBLINGS = 5
 """Trust returns at most 2⁵ times more slowly after repeated failures."""
 
-TRUSTED = 0.5
+TRUSTED = 0.6
 """Efficacy to which a robot that failed must have relaxed before it tries again."""
 
-LEFT = 1.0
-"""Distance from where it failed at which a robot is judged at other tasks again, m."""
+FREE = 0.7
+"""Share of the expected progress from which a robot that was stuck moves freely again."""
 
-LEAVING = 30.0
-"""Time after which it is judged again all the same, s."""
+LEAVING = 60.0
+"""Time after which it is judged at its next task even if it does not, s."""
 
 
 @dataclass(frozen=True)
@@ -67,7 +67,6 @@ class EfficacyBelief:
         self.barred = np.zeros((robots, tasks), dtype=bool)
         self._steps: deque[Step] = deque()
         self._since = np.full(robots, -np.inf)
-        self._stuck_at = np.full((robots, 2), np.nan)
         self._stuck_until = np.full(robots, -np.inf)
 
     def forget(self) -> None:
@@ -100,19 +99,17 @@ class EfficacyBelief:
         self,
         robots: np.ndarray,
         former: np.ndarray,
-        points: np.ndarray,
         now: float,
         settings: Settings,
     ) -> None:
         """Note that robots got another task.
 
         A robot that failed at its former task is not judged at the next one
-        before it has left the place: being stuck there is the former task's fault.
+        before it moves freely again: being stuck there is the former task's fault.
 
         Args:
             robots: Indices, shape (n,).
             former: Their former tasks, −1: none, shape (n,).
-            points: Control points of all robots, m, shape (N, 3).
             now: Time, s.
             settings: Weights and times.
         """
@@ -121,7 +118,6 @@ class EfficacyBelief:
             if task >= 0 and self.eta[robot, task] < self._failed_below(settings):
                 self.failures[robot, task] = min(self.failures[robot, task] + 1, MOST_DOUBLINGS)
                 self.barred[robot, task] = True
-                self._stuck_at[robot] = points[robot, :2]
                 self._stuck_until[robot] = now + LEAVING
 
     @staticmethod
@@ -129,32 +125,37 @@ class EfficacyBelief:
         return (1 + settings.s_min) / 2
 
     def update(
-        self, step: Step, assignment: np.ndarray, away: np.ndarray, points: np.ndarray,
-        dt: float, settings: Settings,
-    ) -> None:  # fmt: skip
+        self,
+        step: Step,
+        assignment: np.ndarray,
+        away: np.ndarray,
+        dt: float,
+        settings: Settings,
+    ) -> None:
         """Learn from one period.
 
         Args:
             step: What was expected and measured.
             assignment: Task of each robot during it, −1: none, shape (N,).
             away: Distances to the goals, m, shape (N,).
-            points: Control points, m, shape (N, 3).
             dt: Length of the period, s.
             settings: Weights and times.
         """
         self._relax(assignment, dt, settings)
-        left = np.linalg.norm(points[:, :2] - self._stuck_at, axis=1) > LEFT
-        free = left | (step.time > self._stuck_until)
-        released = free & np.isfinite(self._stuck_until)
-        self._since[released] = step.time
-        self._stuck_until[released] = -np.inf
-        judged = step.counted & (assignment >= 0) & free
-
         self._steps.append(step)
-        while self._steps and step.time - self._steps[0].time > settings.efficacy_window:
+        while step.time - self._steps[0].time > settings.efficacy_window:
             self._steps.popleft()
         expected, measured = self._window(len(assignment))
-        robots = np.flatnonzero(judged & (expected >= max(CLEAR * settings.pose_noise, 1e-3)))
+        clear = expected >= max(CLEAR * settings.pose_noise, 1e-3)
+
+        stuck = np.isfinite(self._stuck_until)
+        released = stuck & (
+            (clear & (measured > FREE * expected)) | (step.time > self._stuck_until)
+        )
+        self._since[released] = step.time
+        self._stuck_until[released] = -np.inf
+        judged = step.counted & (assignment >= 0) & ~stuck
+        robots = np.flatnonzero(judged & clear)
         tasks = assignment[robots]
         if settings.efficacy_law == "additive":
             # Δh = d · progress; the window's surprise is spread evenly over its length.
