@@ -11,6 +11,9 @@ from ..team import NonNegative, Positive
 from .base import Goals, Scene, Task, distance
 from .station import centre_of, places_of, points_of
 
+STAYS = 1.5
+"""Share of the tolerances within which those who are there still count: noise ends no dwell."""
+
 FACING_TOLERANCE = 0.15
 """How well a demanded heading must be met, rad."""
 
@@ -56,22 +59,24 @@ class Visit(Task):
         if state.done:
             return state
         places = places_of(centre_of(self.at), scene, state.places)
-        there = scene.members[self._there(places, scene)]
+        share = 1.0 if state.since is None else STAYS
+        there = scene.members[self._there(places, scene, share)]
         if not scene.suffices(there):
             return Progress(places)
         since = scene.now if state.since is None else state.since
         return Progress(places, since, scene.now - since >= self.dwell)
 
-    def _there(self, places: Mapping[int, int], scene: Scene) -> np.ndarray:
+    def _there(self, places: Mapping[int, int], scene: Scene, share: float) -> np.ndarray:
+        """Tell which members are within a share of the tolerances."""
         members = scene.members
         goals = points_of(centre_of(self.at), scene, places)[members]
         away = distance(goals, scene.points[members])
         if self.heading is None:
-            return away <= self.tolerance
+            return away <= share * self.tolerance
         off = np.angle(np.exp(1j * (scene.headings[members] - self.heading)))
         # Turning on the spot carries the point ahead of the axle along.
-        reach = self.tolerance + 2 * scene.ahead[members]
-        return (away <= reach) & (np.abs(off) <= FACING_TOLERANCE)
+        reach = share * self.tolerance + 2 * scene.ahead[members]
+        return (away <= reach) & (np.abs(off) <= share * FACING_TOLERANCE)
 
     def goals(self, state: Progress, scene: Scene) -> Goals:
         """Give the members their places and everybody else the point itself."""
