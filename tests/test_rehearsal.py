@@ -103,11 +103,11 @@ def test_each_mishap_on_the_solar_farm_is_met_for_the_right_reason(farm):
         )
 
     assert change("start", "north_rows", 0, 0.2)
-    assert change("efficacy", "drain_watch", 20, 50, left="rover_3", joined="crawler_1")
+    assert change("efficacy", "drain_watch", 5, 40, left="rover_3", joined="crawler_1")
     assert change("feature", "north_rows", 50, 50.2, left="rover_1")
     assert change("silent", "south_rows", 80.9, 81.5, left="rover_2")
-    assert change("returned", "south_rows", 98, 99, joined="rover_2")
-    assert change("energy", "north_rows", 115, 175, left="drone_1")
+    assert change("returned", "south_rows", 90, 90.5, joined="rover_2")
+    assert change("energy", "north_rows", 120, 135, left="drone_1")
     assert change("task", "gate_watch", 145, 145.3)
 
 
