@@ -19,7 +19,7 @@ def example_files() -> tuple[Path, Path]:
         from ament_index_python import get_package_share_directory
 
         places.append(Path(get_package_share_directory("allocator_node")))
-    except (ImportError, LookupError):
+    except (ImportError, LookupError, OSError):
         pass
     for place in places:
         team, world = place / "config" / TEAM, place / "config" / WORLD

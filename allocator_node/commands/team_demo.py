@@ -65,28 +65,50 @@ def main(arguments: Sequence[str] | None = None) -> int:
         f"{len(team.robots)} robots, {len(team.tasks)} tasks, {asked.seconds:.0f} s; "
         f"ROS_DOMAIN_ID={environment['ROS_DOMAIN_ID']}, on this machine only; logs in {out}"
     )
-    with ExitStack() as stack:
-        files = [str(team_file), *([str(world_file)] if world_file else [])]
-        children = []
-        for command, given in (
-            ("team_sim", files),
-            ("allocator", ["--team", str(team_file), "--autostart"]),
-        ):
-            child = Child(command, given, out / f"{command}.log", environment)
-            stack.callback(child.stop)
-            children.append(child)
-        board = Board()
-        stack.callback(listen(board))
-        try:
-            watch(board, children, asked.seconds, screen)
-        except KeyboardInterrupt:
-            screen.print("interrupted")
-            return 130
-        except ChildFailed as failure:
-            screen.print(str(failure), markup=False)
-            return 1
+    board = Board()
+    try:
+        run(board, team_file, world_file, asked.seconds, out, environment, screen)
+    except KeyboardInterrupt:
+        screen.print("interrupted")
+        return 130
+    except ChildFailed as failure:
+        screen.print(str(failure), markup=False)
+        return 1
     say_summary(board, asked.seconds, out, screen)
     return 0
+
+
+def run(
+    board: Board,
+    team_file: Path,
+    world_file: Path | None,
+    seconds: float,
+    out: Path,
+    environment: Mapping[str, str],
+    screen: Console,
+) -> None:
+    """Start the processes, watch them, and end them whatever happens.
+
+    Raises:
+        ChildFailed: A child process ended before the time was over.
+    """
+    simulated = [str(path) for path in (team_file, world_file) if path]
+    commands = {
+        "team_sim": simulated, "allocator": ["--team", str(team_file), "--autostart"]
+    }
+    with ExitStack() as stack:
+        try:
+            children = []
+            for command, arguments in commands.items():
+                child = Child(command, arguments, out / f"{command}.log", environment)
+                stack.callback(child.stop)
+                children.append(child)
+            stack.callback(listen(board))
+            watch(board, children, seconds, screen)
+        finally:
+            # Nothing interrupts the ending of the children.
+            for sign in (signal.SIGINT, signal.SIGTERM):
+                signal.signal(sign, signal.SIG_IGN)
 
 
 def parser() -> argparse.ArgumentParser:
@@ -185,7 +207,7 @@ def redraw(board: Board, children: Sequence[Child], seconds: float, screen: Cons
 
 def print_lines(board: Board, children: Sequence[Child], seconds: float, screen: Console) -> None:
     """Print a line for each reallocation, and one of state now and then."""
-    began, printed, due = time.monotonic(), 0, 0.0
+    began, printed, due = time.monotonic(), 0, 1.0
     while (t := time.monotonic() - began) < seconds:
         check(children)
         with board.lock:
