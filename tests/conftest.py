@@ -1,4 +1,8 @@
-"""Gives every test process a ROS 2 domain of its own, before anything imports rclpy."""
+"""Gives every test process a ROS 2 domain of its own, before anything imports rclpy.
+
+Also the campaigns: a test marked ``campaign(slice, whole)`` takes a ``seed`` and runs
+for the first few seeds, or with ``--whole`` for all of them.
+"""
 
 from __future__ import annotations
 
@@ -39,3 +43,14 @@ _DOMAIN = _settle()
 def ros_domain() -> int:
     """The ROS_DOMAIN_ID that nodes of this test process, and their children, use."""
     return _DOMAIN
+
+
+def pytest_addoption(parser: pytest.Parser) -> None:
+    parser.addoption("--whole", action="store_true", help="run campaigns whole, not a slice")
+
+
+def pytest_generate_tests(metafunc: pytest.Metafunc) -> None:
+    campaign = metafunc.definition.get_closest_marker("campaign")
+    if campaign is not None:
+        part, whole = campaign.kwargs["slice"], campaign.kwargs["whole"]
+        metafunc.parametrize("seed", range(whole if metafunc.config.option.whole else part))

@@ -60,7 +60,7 @@ def least_effort(
         clipped = ordered * np.take_along_axis(np.broadcast_to(room, size.shape), order, axis=-1)
     slope = 0.5 * (ordered**2).sum(axis=-1) + 0.5 / slack_weight
     left = np.maximum(demand, 0.0)
-    multiplier = left / slope
+    multiplier = np.asarray(left / slope)
     for axis in range(ordered.shape[-1]):
         slope = slope - 0.5 * ordered[..., axis] ** 2
         left = left - clipped[..., axis]

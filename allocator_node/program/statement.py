@@ -119,7 +119,7 @@ def solve_statement(problem: Problem) -> Optimum:
 
     polished = Statement(problem, alpha)
     cost = cp.Problem(cp.Minimize(scale * polished.cost), polished.constraints).solve(
-        solver=cp.CLARABEL, tol_gap_abs=1e-11, tol_gap_rel=1e-11, tol_feas=1e-11
+        solver=cp.CLARABEL, tol_gap_abs=1e-10, tol_gap_rel=1e-10, tol_feas=1e-10
     )
     return Optimum(
         shortfall=shortfall,
