@@ -11,13 +11,15 @@ import pytest
 rclpy = pytest.importorskip("rclpy", reason="needs ROS 2: rclpy is not installed")
 
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus  # noqa: E402
-from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped, Twist  # noqa: E402
+from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped, TransformStamped, Twist  # noqa: E402
 from nav_msgs.msg import Odometry  # noqa: E402
 from ros_bench import until  # noqa: E402
 from std_msgs.msg import Float32  # noqa: E402
 
 from allocator_node.ros.clockwork import StampReader, arrival_time  # noqa: E402
+from allocator_node.ros.complaints import Complaints  # noqa: E402
 from allocator_node.ros.inbox import Inbox  # noqa: E402
+from allocator_node.ros.poses import PoseTransform  # noqa: E402
 from allocator_node.team_file import parse_team  # noqa: E402
 
 pytestmark = pytest.mark.ros
@@ -289,3 +291,56 @@ def test_forgetting_times_forgets_what_was_heard(post: Post) -> None:
     post.inbox.forget_times()
     assert np.isnan(post.look().pose_times).all()
     assert np.isnan(post.look().poses).all()
+
+
+def test_a_large_team_listens_to_quality_once_it_is_published(post: Post, monkeypatch) -> None:
+    """Robots times tasks can be thousands of topics, of which few are ever used."""
+    monkeypatch.setattr("allocator_node.ros.inbox.AT_ONCE", 0)
+    topic = "/allocator/quality/covered/gate"
+    post.inbox.notice_publishers()
+    until(lambda: not post.sender.count_subscribers(topic), "nobody listens")
+    publisher = post.sender.create_publisher(Float32, topic, 10)
+
+    def matched() -> int:
+        post.inbox.notice_publishers()
+        return publisher.get_subscription_count()
+
+    until(matched, "a listener")
+    publisher.publish(Float32(data=0.5))
+    time.sleep(0.05)
+    assert post.look().quality == {("covered", "gate"): 0.5}
+
+
+class Tree:
+    """A tf tree of one robot."""
+
+    def __init__(self) -> None:
+        self.transform = TransformStamped()
+        self.transform.transform.rotation.w = 1.0
+
+    def newest(self, frame: str, child: str) -> TransformStamped:
+        if (frame, child) != ("site", "rover/base_link"):
+            raise ValueError(f"no {child} in {frame}")
+        return self.transform
+
+
+def test_a_pose_from_tf_is_news_only_when_its_stamp_is() -> None:
+    """The tree keeps the last transform for ever; a robot that stopped publishing is silent."""
+    complaints = Complaints(rclpy.logging.get_logger("tf"))
+    tree = Tree()
+    source = PoseTransform(tree, "rover/base_link", "site", complaints)
+    tree.transform.header.stamp.sec = 100
+    tree.transform.transform.translation.x = 3.0
+    seen = source.look(100.2)
+    assert seen.pose == pytest.approx([3, 0, 0, 0])
+    assert seen.time == 100.0
+    assert source.look(100.3) is None
+    tree.transform.header.stamp.sec = 101
+    assert source.look(101.1).time == 101.0
+    tree.transform.header.stamp.sec = 102
+    tree.transform.transform.rotation.w = 0.0
+    assert source.look(102.0) is None
+    assert "quaternion" in complaints.last["tf rover/base_link"][0]
+    lost = PoseTransform(tree, "rover/body", "site", complaints)
+    assert lost.look(102.0) is None
+    assert complaints.last["tf rover/body"][0] == "refused: no rover/body in site"

@@ -27,7 +27,8 @@ from .parameters import ParameterError
 LISTEN = 0.2
 """How often a request to end is looked for where no message wakes the node, s."""
 
-ENDING = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
+ENDING = ("SIGINT", "SIGTERM", "SIGHUP")
+"""Signals that ask the node to end; not every platform has all of them."""
 
 
 def told(transition: Callable) -> Callable:
@@ -193,8 +194,9 @@ class Ending:
 
     def __init__(self) -> None:
         self.asked = False
-        for number in ENDING:
-            signal.signal(number, self._ask)
+        for name in ENDING:
+            if hasattr(signal, name):
+                signal.signal(getattr(signal, name), self._ask)
 
     def _ask(self, number: int, frame: object) -> None:
         self.asked = True

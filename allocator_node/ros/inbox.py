@@ -89,8 +89,12 @@ class Inbox:
         """Subscribe to the quality topics that are in use; call about once a second."""
         pairs = [(robot, task) for robot in self._robots for task in self._tasks]
         if len(pairs) > AT_ONCE:
-            published = {name for name, _ in self._node.get_topic_names_and_types()}
-            pairs = [pair for pair in pairs if self._full(pair) in published]
+            known = {name for name, _ in self._node.get_topic_names_and_types()}
+            pairs = [
+                pair
+                for pair in pairs
+                if (topic := self._full(pair)) in known and self._node.count_publishers(topic)
+            ]
         self._follow(
             self._quality,
             pairs,

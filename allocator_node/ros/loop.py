@@ -34,6 +34,12 @@ DISCOVERY = 1.0
 REPORT_EVERY, MARKERS_EVERY, SAVE_EVERY = 1.0, 0.5, 2.0
 """Periods of diagnostics, markers and the state file, s."""
 
+TELL_EVERY = 1.0
+"""The same failure is logged once in this time, s."""
+
+SET_BACK = 1.0
+"""A clock set back further than this belongs to another run, s."""
+
 STOP_REPEATS = 3
 """The last command is sent so often: a robot may listen with best effort."""
 
@@ -183,7 +189,7 @@ class Loop:
             self._log.error(
                 f"the loop failed ({self._health.failures} times so far), robots are told to "
                 f"stand:\n{traceback.format_exc()}",
-                throttle_duration_sec=1.0,
+                throttle_duration_sec=TELL_EVERY,
             )
             return False
         return True
@@ -199,18 +205,21 @@ class Loop:
         if self._commands is not None:
             broken = self._commands.send(decision, self.allocator.orders.hold)
             if broken:
-                raise ArithmeticError(f"commands are not finite for {', '.join(broken)}")
+                error = ArithmeticError(f"commands are not finite for {', '.join(broken)}")
+                self._health.fail(error)
+                self._log.error(f"{error}: told to stand", throttle_duration_sec=TELL_EVERY)
         self._outbox.publish(decision)
 
     def _set_back(self, now: float) -> None:
+        back, self._last = self._last - now, now
         self._log.warning(
-            f"the clock was set back by {self._last - now:.2f} s: what was heard is dropped, "
+            f"the clock was set back by {back:.2f} s: what was heard is dropped, "
             "what was learned stays"
         )
-        self._last = now
         self._stand()
         self._inbox.forget_times()
-        self._renew()
+        if back > SET_BACK:
+            self._renew()
 
     def _renew(self) -> None:
         """Start beliefs about the present anew; keep what was learned, orders and tasks."""
@@ -228,7 +237,12 @@ class Loop:
                 self._log.error(f"{sentence} too", throttle_duration_sec=10.0)
         self._diagnostics.publish(
             self._health.diagnostics(
-                self._decision, self._now(), self._inbox.complaints.recent(), others, self._silent()
+                self._decision,
+                self._now(),
+                self._inbox.complaints.recent(),
+                self.allocator.unheard_health(),
+                others,
+                self._silent(),
             )
         )
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import time
 from collections import deque
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 
 import numpy as np
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus
@@ -72,6 +72,7 @@ class LoopHealth:
         decision: Decision | None,
         now: float,
         refused: Mapping[str, str],
+        unheard: Sequence[tuple[str, str, str]],
         others: list[str],
         silent: Mapping[str, str],
     ) -> DiagnosticArray:
@@ -81,10 +82,11 @@ class LoopHealth:
             decision: The last decision, if there is one.
             now: Time, s.
             refused: Topic to the reason why its messages are refused.
+            unheard: Robot, feature and status name where no diagnostic ever came.
             others: Sentences on other publishers on the command topics.
             silent: Robot to what is known about why it is silent.
         """
-        statuses = [self._loop(), self._inputs(refused), self._outputs(others)]
+        statuses = [self._loop(), self._inputs(refused, unheard), self._outputs(others)]
         if decision is not None:
             statuses += [
                 self._solvers(decision), self._robots(decision, silent), self._coverage(decision)
@@ -111,7 +113,7 @@ class LoopHealth:
         }
         if time.monotonic() - self._failed < LINGER:
             return self._status(
-                "period", Level.ERROR, f"the loop failed, robots stand: {self._failure}", values
+                "period", Level.ERROR, f"the loop failed: {self._failure}", values
             )
         if late:
             return self._status(
@@ -145,11 +147,20 @@ class LoopHealth:
             for notice in decision.notices
         ]
 
-    def _inputs(self, refused: Mapping[str, str]) -> DiagnosticStatus:
-        if not refused:
-            return self._status("inputs", Level.OK, "all messages are good", {})
-        message = f"trouble with {', '.join(refused)}"
-        return self._status("inputs", Level.WARN, message, dict(refused))
+    def _inputs(
+        self, refused: Mapping[str, str], unheard: Sequence[tuple[str, str, str]]
+    ) -> DiagnosticStatus:
+        values = dict(refused) | {
+            f"{robot}.{feature}": f"nothing heard of {name!r}, taken for healthy"
+            for robot, feature, name in unheard
+        }
+        if refused:
+            message = f"trouble with {', '.join(refused)}"
+            return self._status("inputs", Level.WARN, message, values)
+        message = "all messages are good"
+        if unheard:
+            message += f"; {len(unheard)} features have no diagnostics"
+        return self._status("inputs", Level.OK, message, values)
 
     def _outputs(self, others: list[str]) -> DiagnosticStatus:
         if not others:
