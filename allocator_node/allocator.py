@@ -18,13 +18,13 @@ from .decision import Decision, Level, Notice, Shortfall
 from .model import Model
 from .observation import MovedGoal, Observation, Orders
 from .program import (
+    Assigner,
     Assignment,
     Control,
     ControlProblem,
     Problem,
     Safety,
     SafetyRows,
-    assign,
     price,
     solve_control,
 )
@@ -60,13 +60,22 @@ class Allocator:
         team: The team with its present task table; :meth:`edit` changes it.
     """
 
-    def __init__(self, team: Team, settings: Settings | None = None, period: float = 0.1) -> None:
+    def __init__(
+        self,
+        team: Team,
+        settings: Settings | None = None,
+        period: float = 0.1,
+        budget: float = np.inf,
+    ) -> None:
         """Begin with nobody heard and nothing assigned.
 
         Args:
             team: The team.
             settings: Weights and times.
             period: Time between two steps, s; used for the first one.
+            budget: Time the search for an assignment may take within a step, s;
+                longer ones go on beside the steps. inf: always within, which makes
+                the decisions independent of the machine's speed.
         """
         self.team = team
         self.period = period
@@ -76,6 +85,7 @@ class Allocator:
         count = len(team.robots)
         self._poses = PoseBelief(count)
         self._guidance = Guidance(count)
+        self._assigner = Assigner(budget)
         self._commands = np.zeros((count, 4))
         self._since = np.full(count, np.nan)
         self._last: tuple[np.ndarray, np.ndarray, Course] | None = None
@@ -118,7 +128,7 @@ class Allocator:
             problem, enough = self._problem(view, goals)
             prices = price(problem)
         with _timed(seconds, "assignment"):
-            found = assign(problem, prices)
+            found = self._assigner.assign(problem, prices)
         situation = self._situation(view, enough, prices)
         before, self._assignment = self._assignment, found.task
         reallocations = self._reasons.explain(
@@ -415,6 +425,7 @@ class Allocator:
             shortfalls=self._shortfalls(found),
             notices=tuple(self._notices(view, enough, control, rows)),
             seconds=seconds,
+            gap=found.gap,
         )
 
     def _shortfalls(self, found: Assignment) -> tuple[Shortfall, ...]:
@@ -487,6 +498,10 @@ class Allocator:
         if task is not None:
             edited = dict(self.team.tasks) | {moved.task: task.moved(moved.at, moved.heading)}
             self.edit(self.team.with_tasks(edited), self._now or 0.0)
+
+    def close(self) -> None:
+        """End what runs beside the steps."""
+        self._assigner.close()
 
     def forget(self) -> None:
         """Set every efficacy back to 1."""

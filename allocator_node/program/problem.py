@@ -6,6 +6,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
+LEVELS = (4, 3, 2, 1, 0)
+"""Priority classes in the order they are served."""
+
 
 @dataclass(frozen=True, kw_only=True)
 class Problem:

@@ -1,0 +1,146 @@
+"""Assignment from period to period: in the loop while that is quick, else beside it."""
+
+from __future__ import annotations
+
+import time
+from concurrent.futures import Future, ThreadPoolExecutor
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from .assignment import Assignment, evaluate, reduced_costs
+from .integers import Integers, OutOfTime
+from .problem import Problem
+from .repair import repair
+from .slots import solve_slots
+
+WORTH_PROVING = 0.25
+"""Share of a mean swap cost from which a possible gain is worth another search."""
+
+LONGEST_SEARCH = 20.0
+"""Time after which a search beside the loop ends with the best it has, s."""
+
+DISCRETE = ("capability", "needs", "least", "most", "priority", "eligible", "pinned")
+"""Parts of a problem a change of which makes an earlier proof worthless."""
+
+
+@dataclass(frozen=True)
+class Proof:
+    """A finished search.
+
+    Attributes:
+        key: The discrete data it holds for.
+        costs: Cost of each α_im = 1 it was made with, Wh, shape (N, M).
+        constant: Swap costs that were added to all of them, Wh.
+        found: The assignment.
+    """
+
+    key: bytes
+    costs: np.ndarray
+    constant: float
+    found: Assignment
+
+    def bound(self, costs: np.ndarray, constant: float) -> float:
+        """Give a lower bound on the optimum under other costs, Wh.
+
+        A robot does at most one task, so the optimum cannot have fallen by more
+        than each robot's greatest fall in cost.
+        """
+        fall = np.minimum((costs - self.costs).min(axis=1), 0.0).sum()
+        return self.found.cost - self.found.gap - self.constant + constant + float(fall)
+
+
+class Assigner:
+    """Decides the assignment of each period and bounds how far it is from the optimum.
+
+    Where only head counts matter, the optimum is found at once. Graded amounts
+    make a true integer program: it is solved in the loop while such searches take
+    less than ``budget`` seconds; otherwise in a thread beside the loop (the
+    solver does not hold the interpreter), and meanwhile the standing assignment
+    stands, re-priced and mended.
+    """
+
+    def __init__(self, budget: float = np.inf) -> None:
+        """Begin without any proof.
+
+        Args:
+            budget: Time a search may take in the loop, s; inf: always in the loop.
+        """
+        self.budget = budget
+        self._lasted = 0.0
+        self._proof: Proof | None = None
+        self._search: Future[tuple[Proof | None, float]] | None = None
+        self._thread: ThreadPoolExecutor | None = None
+
+    def close(self) -> None:
+        """End the thread, if there is one; a search under way is waited for."""
+        if self._thread is not None:
+            self._thread.shutdown(wait=True, cancel_futures=True)
+            self._thread = self._search = None
+
+    def assign(self, problem: Problem, prices: np.ndarray) -> Assignment:
+        """Give this period's assignment."""
+        if not problem.eligible.any():
+            return evaluate(problem, prices, np.full(len(prices), -1), proven=True)
+        task = solve_slots(problem, prices)
+        if task is not None:
+            return evaluate(problem, prices, task, proven=True)
+        if self._lasted <= self.budget and self._search is None:
+            proof, self._lasted = _prove(problem, prices, problem.previous, self.budget)
+            if proof is not None and proof.found.proven:
+                self._proof = proof
+                return proof.found
+            self._lasted = np.inf
+        return self._beside(problem, prices)
+
+    def _beside(self, problem: Problem, prices: np.ndarray) -> Assignment:
+        """Stand by the standing assignment until a better one is proven."""
+        if self._search is not None and self._search.done():
+            proof, self._lasted = self._search.result()
+            self._proof, self._search = proof or self._proof, None
+        candidates = [evaluate(problem, prices, repair(problem, prices, problem.previous))]
+        key = _key(problem)
+        if self._proof is not None:
+            proposed = repair(problem, prices, self._proof.found.task)
+            candidates.append(evaluate(problem, prices, proposed))
+        best = candidates[0]
+        for other in candidates[1:]:
+            best = other if other.better_than(best) else best
+
+        gap = np.inf
+        if self._proof is not None and self._proof.key == key:
+            costs, constant = _costs(problem, prices)
+            same = np.allclose(best.shortfall, self._proof.found.shortfall, atol=1e-6)
+            if same:
+                gap = max(best.cost - self._proof.bound(costs, constant), 0.0)
+        if self._search is None and gap > WORTH_PROVING * problem.swap_cost.mean():
+            if self._thread is None:
+                self._thread = ThreadPoolExecutor(1, thread_name_prefix="assignment")
+            self._search = self._thread.submit(_prove, problem, prices, best.task, LONGEST_SEARCH)
+        return replace(best, proven=gap == 0.0, gap=gap)
+
+
+def _prove(
+    problem: Problem, prices: np.ndarray, start: np.ndarray, time_limit: float = np.inf
+) -> tuple[Proof | None, float]:
+    """Search for the optimum; give it, if there was time, and how long that took, s."""
+    begun = time.perf_counter()
+    hint = repair(problem, prices, start)
+    try:
+        answer = Integers(problem, time_limit).solve(prices, hint)
+    except OutOfTime:
+        return None, time.perf_counter() - begun
+    found = evaluate(problem, prices, *answer)
+    costs, constant = _costs(problem, prices)
+    return Proof(_key(problem), costs, constant, found), time.perf_counter() - begun
+
+
+def _costs(problem: Problem, prices: np.ndarray) -> tuple[np.ndarray, float]:
+    """Give the cost of each eligible α_im = 1, and the swap costs they are counted from."""
+    costs = np.where(problem.eligible, reduced_costs(problem, prices), 0.0)
+    return costs, float(problem.swap_cost[problem.keeps_on.any(axis=1)].sum())
+
+
+def _key(problem: Problem) -> bytes:
+    """Give the discrete data of a problem, as something that can be compared."""
+    return b"".join(getattr(problem, name).tobytes() for name in DISCRETE)

@@ -1,0 +1,29 @@
+"""The fast way to the assignment problem's optimum: by slots, else by integers."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from .assignment import Assignment, evaluate
+from .integers import Integers
+from .problem import Problem
+from .slots import solve_slots
+
+
+def assign(problem: Problem, prices: np.ndarray, time_limit: float = np.inf) -> Assignment:
+    """Solve the assignment problem of the given prices.
+
+    Args:
+        problem: The period's program.
+        prices: κ w_im + e_im, Wh, shape (N, M).
+        time_limit: Time after which the best assignment found is taken, s.
+
+    Returns:
+        The optimum; ``proven`` tells whether the time sufficed to prove it.
+    """
+    if not problem.eligible.any():
+        return evaluate(problem, prices, np.full(len(prices), -1), proven=True)
+    task = solve_slots(problem, prices)
+    if task is not None:
+        return evaluate(problem, prices, task, proven=True)
+    return evaluate(problem, prices, *Integers(problem, time_limit).solve(prices))

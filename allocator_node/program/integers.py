@@ -1,0 +1,319 @@
+"""Assignment with graded amounts: a true integer program, solved by HiGHS."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import dataclass
+
+import highspy
+import numpy as np
+from scipy import sparse
+
+from .assignment import reduced_costs
+from .problem import LEVELS, Problem
+
+INTEGRAL = 1e-6
+"""Distance from 0 or 1 below which a relaxed α counts as integral."""
+
+HELD = 1e-7
+"""How far a level may give way while the next is optimized; far below one shortfall."""
+
+Held = list[tuple[np.ndarray, float]]
+
+
+class OutOfTime(RuntimeError):
+    """The time limit came before any solution."""
+
+
+@dataclass(frozen=True)
+class Found:
+    """Attributes: column values, whether proven optimal, a lower bound on the objective."""
+
+    values: np.ndarray
+    proven: bool
+    bound: float
+
+
+class Integers:
+    """The integer program over the eligible pairs of one period.
+
+    Columns: one α for each eligible pair, one σ for each head count, one for
+    each need. Rows: robots, head counts, needs, and rounding cuts on the needs.
+    """
+
+    def __init__(self, problem: Problem, time_limit: float = np.inf) -> None:
+        """Build the rows.
+
+        Args:
+            problem: The period's program.
+            time_limit: Time after which a search ends with what it has, s.
+        """
+        self.problem = problem
+        self.deadline = time.perf_counter() + time_limit
+        self.robot, self.task = np.nonzero(problem.eligible)
+        self.pairs = len(self.robot)
+        self.counts = np.flatnonzero(problem.least > 0)
+        self.need_task, self.need = np.nonzero(problem.needs > 0)
+        self.columns = self.pairs + len(self.counts) + len(self.need_task)
+        self.level = np.concatenate(
+            [
+                np.full(self.pairs, -1),
+                problem.priority[self.counts],
+                problem.priority[self.need_task],
+            ]
+        )
+        self.weight = np.concatenate(
+            [
+                np.zeros(self.pairs),
+                1.0 / problem.least[self.counts],
+                1.0 / problem.needs[self.need_task, self.need],
+            ]
+        )
+        self.least_missing = np.concatenate([np.zeros(self.pairs), self._unavoidable()])
+        self.low = self.least_missing.copy()
+        self.low[: self.pairs] = problem.pinned[self.robot] == self.task
+        self.high = np.ones(self.columns)
+        self.high[self.pairs :] = np.inf
+        self._build_rows()
+
+    def _unavoidable(self) -> np.ndarray:
+        """Give the σ that a task would have even if it could choose its robots first."""
+        problem = self.problem
+        robots = np.maximum(problem.least - problem.eligible.sum(axis=0), 0)[self.counts]
+        missing = np.zeros(len(self.need))
+        for row, (m, k) in enumerate(zip(self.need_task, self.need, strict=True)):
+            brought = np.sort(problem.capability[problem.eligible[:, m], k])[::-1]
+            best = brought[: self._most()[m]].sum()
+            missing[row] = max(problem.needs[m, k] - best, 0.0)
+            if missing[row] < 1e-9 * problem.needs[m, k]:
+                missing[row] = 0.0
+        return np.concatenate([robots, missing])
+
+    def _most(self) -> np.ndarray:
+        pinned = self.problem.pinned
+        pins = np.bincount(pinned[pinned >= 0], minlength=len(self.problem.most))
+        return np.maximum(self.problem.most, pins)
+
+    def _build_rows(self) -> None:
+        problem, pairs = self.problem, self.pairs
+        robots, tasks = problem.eligible.shape
+        pair = np.arange(pairs)
+        ones = np.ones(pairs)
+        using = sparse.csr_array((ones, (self.robot, pair)), shape=(robots, self.columns))
+        counting = sparse.csr_array((ones, (self.task, pair)), shape=(tasks, self.columns))
+        row = np.full(problem.needs.shape, -1)
+        row[self.need_task, self.need] = np.arange(len(self.need))
+        index, k = np.nonzero(
+            (row[self.task] >= 0) & (problem.capability[self.robot] > 0)
+        )
+        self.entry = (row[self.task[index], k], index, problem.capability[self.robot[index], k])
+        needing = sparse.csr_array(
+            (self.entry[2], (self.entry[0], self.entry[1])), shape=(len(self.need), self.columns)
+        )
+        missing = sparse.eye_array(self.columns, format="csr")[pairs:]
+        self.rows = sparse.vstack(
+            [
+                using,
+                counting,
+                counting[self.counts] + missing[: len(self.counts)],
+                needing + missing[len(self.counts) :],
+            ],
+            format="csr",
+        )
+        self.row_low = np.concatenate(
+            [
+                np.full(robots + tasks, -np.inf),
+                problem.least[self.counts],
+                problem.needs[self.need_task, self.need],
+            ]
+        )
+        self.row_high = np.concatenate(
+            [np.ones(robots), self._most(), np.full(len(self.counts) + len(self.need), np.inf)]
+        )
+
+    def _cuts(self, covered: np.ndarray) -> tuple[sparse.csr_array, np.ndarray]:
+        """Give rounding cuts on the needs whose σ is fixed.
+
+        With amounts c and what must be brought t, any u > 0 gives the valid
+        inequality Σ ⌈u c_i⌉ α_i ≥ ⌈u t⌉ (Chvátal and Gomory); u = j/c for each
+        distinct c makes those that bind.
+
+        Args:
+            covered: Whether the σ of a need (row) is fixed at ``least_missing``.
+        """
+        where, who, what, right = [], [], [], []
+        top = 0
+        amounts_of = [self.entry[2][self.entry[0] == row] for row in range(len(self.need))]
+        pairs_of = [self.entry[1][self.entry[0] == row] for row in range(len(self.need))]
+        fixed = self.least_missing[self.pairs + len(self.counts) :]
+        for row in np.flatnonzero(covered):
+            amounts = amounts_of[row]
+            due = self.row_low[len(self.row_low) - len(self.need) + row] - fixed[row]
+            distinct = np.unique(amounts)
+            if due <= 0 or not len(distinct):
+                continue
+            steps = np.arange(1, 4)
+            multipliers = np.unique(np.outer(1.0 / distinct, steps).ravel())
+            for u in multipliers:
+                coefficient = np.ceil(u * amounts - 1e-9)
+                bound = np.ceil(u * due - 1e-9)
+                where.append(np.full(len(amounts), top))
+                who.append(pairs_of[row])
+                what.append(np.minimum(coefficient, bound))
+                right.append(bound)
+                top += 1
+        if not top:
+            return sparse.csr_array((0, self.columns)), np.zeros(0)
+        cuts = sparse.csr_array(
+            (np.concatenate(what), (np.concatenate(where), np.concatenate(who))),
+            shape=(top, self.columns),
+        )
+        return cuts, np.array(right)
+
+    def solve(self, prices: np.ndarray, start: np.ndarray | None = None) -> tuple:
+        """Solve level by level, then for the least cost.
+
+        Args:
+            prices: κ w_im + e_im, Wh, shape (N, M).
+            start: An assignment to start from, shape (N,).
+
+        Returns:
+            Task of each robot (N,), whether it is proven optimal, a bound on the
+            distance of its cost from the optimum, Wh.
+
+        Raises:
+            OutOfTime: The time limit came before any solution.
+        """
+        cost = np.zeros(self.columns)
+        cost[: self.pairs] = reduced_costs(self.problem, prices)[self.robot, self.task]
+        high = self.high.copy()
+        high[self.pairs :] = self.least_missing[self.pairs :]
+        hint = None if start is None else self._hint(start)
+        found = self._minimize(cost, high, [], hint)
+        if found is None:
+            high, held, proven = self._levels()
+            found = self._minimize(cost, high, held, hint)
+            if found is None:
+                raise RuntimeError("the assignment problem has no solution, which cannot be")
+        else:
+            proven = True
+        task = np.full(len(self.problem.pinned), -1)
+        on = found.values[: self.pairs] > 0.5
+        task[self.robot[on]] = self.task[on]
+        gap = max(float(cost @ found.values) - found.bound, 0.0)
+        return task, found.proven and proven, gap
+
+    def _levels(self) -> tuple[np.ndarray, Held, bool]:
+        """Find what each level must leave uncovered: upper bounds of σ, held sums, proven."""
+        high, held, proven = self.high.copy(), [], True
+        nothing = np.zeros(self.columns)
+        for q in LEVELS:
+            here = self.level == q
+            if not here.any():
+                continue
+            covered = np.where(here, self.least_missing, high)
+            if self._minimize(nothing, covered, held) is not None:
+                high = covered
+                continue
+            objective = np.where(here, self.weight, 0.0)
+            found = self._minimize(objective, high, held)
+            if found is None:
+                raise RuntimeError("a level of the assignment has no solution, which cannot be")
+            held.append((objective, max(float(objective @ found.values), 0.0) + HELD))
+            proven &= found.proven
+        return high, held, proven
+
+    def _hint(self, start: np.ndarray) -> np.ndarray:
+        """Give the columns of an assignment, shape (columns,)."""
+        problem, values = self.problem, np.zeros(self.columns)
+        on = start[self.robot] == self.task
+        values[: self.pairs] = on
+        count = np.bincount(self.task[on], minlength=len(problem.least))
+        brought = self.rows[len(self.row_low) - len(self.need) :][:, : self.pairs] @ on
+        values[self.pairs :] = np.maximum(
+            np.concatenate(
+                [
+                    (problem.least - count)[self.counts],
+                    problem.needs[self.need_task, self.need] - brought,
+                ]
+            ),
+            0.0,
+        )
+        return values
+
+    def _minimize(
+        self,
+        objective: np.ndarray,
+        high: np.ndarray,
+        held: Held,
+        hint: np.ndarray | None = None,
+    ) -> Found | None:
+        """Minimize over the relaxation; over the integers only where it is fractional.
+
+        Returns:
+            What was found; None where there is no solution.
+
+        Raises:
+            OutOfTime: The time limit came before any solution.
+        """
+        solver = quiet_solver()
+        solver.setOptionValue("threads", 1)
+        solver.setOptionValue("mip_rel_gap", 0.0)
+        solver.setOptionValue("mip_abs_gap", 1e-9)
+        if np.isfinite(self.deadline):
+            left = self.deadline - time.perf_counter()
+            solver.setOptionValue("time_limit", max(left, 0.0))
+        solver.passModel(self._model(objective, high, held))
+        solver.run()
+        status = solver.getModelStatus()
+        if status == highspy.HighsModelStatus.kInfeasible:
+            return None
+        if status != highspy.HighsModelStatus.kOptimal:
+            raise OutOfTime
+        values = np.array(solver.getSolution().col_value)
+        alpha = values[: self.pairs]
+        if np.all(np.minimum(alpha, 1 - alpha) < INTEGRAL):
+            return Found(values, True, float(objective @ values))
+        pairs = np.arange(self.pairs, dtype=np.int32)
+        kinds = np.full(self.pairs, highspy.HighsVarType.kInteger)
+        solver.changeColsIntegrality(self.pairs, pairs, kinds)
+        if hint is not None:
+            solution = highspy.HighsSolution()
+            solution.col_value = hint.tolist()
+            solver.setSolution(solution)
+        solver.run()
+        status = solver.getModelStatus()
+        if status == highspy.HighsModelStatus.kInfeasible:
+            return None
+        info = solver.getInfo()
+        if info.primal_solution_status != highspy.SolutionStatus.kSolutionStatusFeasible:
+            raise OutOfTime
+        values = np.array(solver.getSolution().col_value)
+        proven = status == highspy.HighsModelStatus.kOptimal
+        bound = float(objective @ values) if proven else info.mip_dual_bound
+        return Found(values, proven, bound)
+
+    def _model(self, objective: np.ndarray, high: np.ndarray, held: Held) -> highspy.HighsLp:
+        needs = slice(self.pairs + len(self.counts), None)
+        cuts, due = self._cuts(high[needs] <= self.least_missing[needs])
+        blocks = [self.rows, cuts, *(sparse.csr_array(row[None]) for row, _ in held)]
+        rows = sparse.vstack(blocks, format="csr")
+        model = highspy.HighsLp()
+        model.num_col_, model.num_row_ = self.columns, rows.shape[0]
+        model.col_cost_, model.col_lower_, model.col_upper_ = objective, self.low, high
+        model.row_lower_ = np.concatenate([self.row_low, due, np.full(len(held), -np.inf)])
+        model.row_upper_ = np.concatenate(
+            [self.row_high, np.full(len(due), np.inf), [value for _, value in held]]
+        )
+        model.a_matrix_.format_ = highspy.MatrixFormat.kRowwise
+        model.a_matrix_.start_ = rows.indptr
+        model.a_matrix_.index_ = rows.indices
+        model.a_matrix_.value_ = rows.data
+        return model
+
+
+def quiet_solver() -> highspy.Highs:
+    """Give a solver that prints nothing."""
+    solver = highspy.Highs()
+    solver.setOptionValue("output_flag", False)
+    return solver

@@ -1,0 +1,123 @@
+"""Assignment where only head counts matter: a linear assignment of robots to slots."""
+
+from __future__ import annotations
+
+import numpy as np
+from scipy.optimize import linear_sum_assignment
+
+from .assignment import ratio, reduced_costs
+from .problem import LEVELS, Problem
+
+PRECISION = 1e-15
+"""Relative precision of double arithmetic, rounded up."""
+
+FINEST = 5040
+"""Largest common denominator of shortfalls for which levels are told apart by weight."""
+
+
+def solve_slots(problem: Problem, prices: np.ndarray) -> np.ndarray | None:
+    """Solve the assignment problem where robots eligible for a task are alike to it.
+
+    Where all of them bring the same amounts, the shortfall of a task depends on
+    their number only, and every robot more helps less than the one before. So
+    the task is a row of slots, each with a reward for the shortfall it removes,
+    and the whole is a linear assignment problem. Rewards of one level outweigh
+    all below it; where double precision cannot hold such weights, or a task
+    needs graded amounts, this is not the way.
+
+    Args:
+        problem: The period's program.
+        prices: κ w_im + e_im, Wh, shape (N, M).
+
+    Returns:
+        Task of each robot, −1: none, shape (N,); None where this is not the way.
+    """
+    eligible = problem.eligible
+    amounts = _common_amounts(problem)
+    if amounts is None:
+        return None
+    robots, _ = prices.shape
+    count = eligible.sum(axis=0)
+    holding = (problem.keeps_on & eligible).sum(axis=0)
+    pins = np.bincount(problem.pinned[problem.pinned >= 0], minlength=len(count))
+    useful = np.maximum(
+        problem.least, np.ceil(ratio(problem.needs, amounts) - 1e-9).max(axis=1, initial=0)
+    ).astype(int)
+    most = np.maximum(problem.most, pins)
+    slots = np.minimum(np.minimum(np.maximum(useful, holding + pins), most), count)
+
+    task = np.repeat(np.arange(len(slots)), slots)
+    if not len(task):
+        return np.full(robots, -1)
+    number = np.arange(len(task)) - np.repeat(np.cumsum(slots) - slots, slots)
+    gain = _shortfall(problem, amounts, task, number) - _shortfall(
+        problem, amounts, task, number + 1
+    )
+    costs = reduced_costs(problem, prices)
+    weight = _weights(problem, costs, task, gain)
+    if weight is None:
+        return None
+
+    # A robot may stay without a task: one idle column each, at no cost.
+    table = np.full((robots, len(task) + robots), np.inf)
+    table[:, : len(task)] = np.where(
+        eligible[:, task], costs[:, task] - (weight * gain)[None, :], np.inf
+    )
+    idle = np.arange(robots)
+    free = problem.pinned < 0
+    table[idle[free], len(task) + idle[free]] = 0.0
+    for robot in np.flatnonzero(~free):
+        table[robot, : len(task)][task != problem.pinned[robot]] = np.inf
+    _, column = linear_sum_assignment(table)
+    return np.where(column < len(task), task[np.minimum(column, len(task) - 1)], -1)
+
+
+def _common_amounts(problem: Problem) -> np.ndarray | None:
+    """Give what every robot eligible for a task brings to its needs, (M, K), if all bring alike."""
+    wanted = problem.needs > 0
+    if not wanted.any():
+        return np.zeros(problem.needs.shape)
+    amounts = np.zeros(problem.needs.shape)
+    for m, k in np.argwhere(wanted):
+        brought = problem.capability[problem.eligible[:, m], k]
+        if len(brought):
+            amounts[m, k] = brought[0]
+            if np.ptp(brought) > 0:
+                # Whoever brings enough alone brings no more than that.
+                if brought.min() < problem.needs[m, k]:
+                    return None
+                amounts[m, k] = problem.needs[m, k]
+    return amounts
+
+
+def _shortfall(
+    problem: Problem, amounts: np.ndarray, task: np.ndarray, robots: np.ndarray
+) -> np.ndarray:
+    """Give the relative shortfall of tasks (S,) with that many robots (S,)."""
+    least, needs = problem.least[task], problem.needs[task]
+    missing = np.maximum(needs - robots[:, None] * amounts[task], 0)
+    missing[missing < 1e-9 * needs] = 0
+    return ratio(np.maximum(least - robots, 0), least) + ratio(missing, needs).sum(axis=1)
+
+
+def _weights(
+    problem: Problem, costs: np.ndarray, task: np.ndarray, gain: np.ndarray
+) -> np.ndarray | None:
+    """Give the weight of each slot's gain so that levels come before costs, (S,)."""
+    level = problem.priority[task]
+    useful = gain > 1e-12
+    denominator = int(np.lcm.reduce(np.maximum(problem.least, 1), initial=1))
+    shares = gain[useful] * denominator
+    if denominator > FINEST or np.abs(shares - np.round(shares)).max(initial=0) > 1e-9:
+        return None
+    below = 1.0 + float(
+        np.where(problem.eligible, np.abs(costs), 0.0).max(axis=1, initial=0.0).sum()
+    )
+    scale = below
+    weight = np.zeros(len(task))
+    for q in reversed(LEVELS):
+        here = (level == q) & useful
+        if here.any():
+            weight[here] = 2.0 * denominator * below
+            below += float(weight[here] @ gain[here])
+    return weight if below * PRECISION < 1e-7 * scale else None
