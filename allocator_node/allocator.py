@@ -40,11 +40,15 @@ LONGEST_STEP = 1.0
 
 @dataclass(frozen=True)
 class _View:
-    """What is known in one period, before anything is decided."""
+    """What is known in one period, before anything is decided.
+
+    Poses and points are those of ``places``, with zeros for robots never heard.
+    """
 
     now: float
     dt: float
     places: Places
+    poses: np.ndarray
     points: np.ndarray
     jacobians: np.ndarray
     health: np.ndarray
@@ -136,10 +140,11 @@ class Allocator:
         )
         self._take_up(before, view, goals, scenes)
         with _timed(seconds, "control"):
-            course, control, rows = self._control(view, goals)
+            targets = self._targets(goals, view.places.heard)
+            course, control, rows = self._control(view, targets)
         self._remember(view, course, control)
         return self._decision(
-            view, found, goals, enough, problem, reallocations, control, rows, seconds
+            view, found, targets, enough, problem, reallocations, control, rows, seconds
         )
 
     def _believe(self, observation: Observation, now: float) -> _View:
@@ -158,12 +163,13 @@ class Allocator:
         self._energy.update(
             observation, model, self._commands, now, dt, settings.battery_timeout
         )
-        points = model.fleet.control_points(places.poses)
+        poses = np.where(places.known[:, None], places.poses, 0.0)
+        points = model.fleet.control_points(poses)
         self._learn(observation, places, points, now, dt)
         capability = model.capability(health)
         return _View(
-            now, dt, places, points, model.fleet.jacobians(places.poses), health,
-            capability, model.suitability(capability),
+            now, dt, places, poses, points, model.fleet.jacobians(poses), health, capability,
+             model.suitability(capability),
         )  # fmt: skip
 
     def _learn(
@@ -182,9 +188,9 @@ class Allocator:
         expected = (course.to_goal * implied).sum(axis=1) * dt
         measured = (course.to_goal * moved).sum(axis=1)
         counted = (
-            places.heard & np.isfinite(measured) & (course.demand > 0) & self.orders.driving
+            places.heard & (course.demand > 0) & self.orders.driving
         )
-        step = Step(now, expected, np.nan_to_num(measured), counted)
+        step = Step(now, expected, measured, counted)
         self._efficacy.update(step, self._assignment, course.distance, dt, settings)
 
     def _goals(self, view: _View) -> tuple[list[Goals], list[Scene]]:
@@ -208,7 +214,7 @@ class Allocator:
         members = np.flatnonzero((self._assignment == m) & view.places.heard)
         spacing = 2 * self._safety.reach[members].max(initial=0.0) + 1.5 * self._settings.margin
         return Scene(
-            view.now, view.points, view.places.poses[:, 3], model.fleet.ahead,
+            view.now, view.points, view.poses[:, 3], model.fleet.ahead,
             members, spacing, suffices,
         )  # fmt: skip
 
@@ -231,31 +237,23 @@ class Allocator:
         model, settings = self._model, self._settings
         robots, tasks = len(model.robots), len(model.tasks)
         active = self._active()
-        points = np.stack([goal.points for goal in goals], axis=1, dtype=float) if goals else (
-            np.zeros((robots, 0, 3))
-        )
-        velocities = _stacked([goal.velocities for goal in goals], (robots, tasks, 3))
-        path = _stacked([goal.path for goal in goals], (robots, tasks))
-        pace = _stacked([goal.pace for goal in goals], (robots, tasks))
-        tolerance = np.array([goal.tolerance for goal in goals])
-        dwell = np.array([goal.dwell for goal in goals])
+        table = _Table(goals, robots)
+        offset = offsets(model, view.poses, view.points, table.points)
+        distance = np.sqrt((offset**2).sum(axis=2))
+        away = offset / -np.maximum(distance, 1e-9)[:, :, None]
+        cruise = model.fleet.cruise[:, None]
+        closing = table.pace * np.minimum(settings.gamma * distance, cruise)
+        closing[distance <= table.tolerance] = 0.0
+        path = np.where(np.isnan(table.path), distance, table.path)
 
-        offset = offsets(model, view.places.poses, view.points, points)
-        distance = np.linalg.norm(offset, axis=2)
-        away = -offset / np.maximum(distance, 1e-9)[:, :, None]
-        closing = pace * np.minimum(settings.gamma * distance, model.fleet.cruise[:, None])
-        closing[distance <= tolerance] = 0.0
-
-        serving = way_energy(model, path) + model.idle[:, None] * dwell / SECONDS_PER_HOUR
+        serving = way_energy(model, path) + model.idle[:, None] * table.dwell / SECONDS_PER_HOUR
         dearness = self._energy.dearness(model)
         s = view.suitability * self._efficacy.eta
         trusted = self._trusted(view)
-        energy = dearness[:, None] * serving + model.urgency * path / (
-            SECONDS_PER_HOUR * model.fleet.cruise[:, None]
-        )
-        home = np.linalg.norm(points[..., :2] - model.docks[:, None, :2], axis=2)
-        return_energy = way_energy(model, np.nan_to_num(home))
-        enough = serving + return_energy <= self._energy.spendable(model)[:, None]
+        energy = dearness[:, None] * serving + model.urgency * path / (SECONDS_PER_HOUR * cruise)
+        home = table.points[..., :2] - model.docks[:, None, :2]
+        way_home = np.hypot(home[..., 0], home[..., 1]) * model.has_dock[:, None]
+        enough = serving + way_energy(model, way_home) <= self._energy.spendable(model)[:, None]
 
         pinned, banned = self._pairs(self.orders.pins), self._pairs(self.orders.bans)
         eligible = (
@@ -277,12 +275,14 @@ class Allocator:
             pinned=np.where(pins.any(axis=1), pins.argmax(axis=1) if tasks else -1, -1),
             previous=self._assignment,
             swap_cost=dearness * way_energy(model, np.full(robots, settings.swap_distance)),
-            energy=np.nan_to_num(energy / np.maximum(s, settings.s_min)),
+            energy=energy / np.maximum(s, settings.s_min),
             limits=model.fleet.limits,
-            jacobians=np.nan_to_num(view.jacobians),
-            away=np.nan_to_num(away),
-            closing=np.nan_to_num(closing),
-            goal_speed=np.nan_to_num((away * velocities).sum(axis=2)),
+            jacobians=view.jacobians,
+            away=away,
+            closing=closing,
+            goal_speed=(away * table.velocities).sum(axis=2) if table.moving else np.zeros_like(
+                distance
+            ),
             kappa=settings.kappa,
             slack_weight=settings.slack_weight,
         )
@@ -338,36 +338,38 @@ class Allocator:
             self._states[name] = tasks[m].advance(self._states[name], scenes[m])
             goals[m] = tasks[m].goals(self._states[name], scenes[m])
 
-    def _targets(self, goals: list[Goals]) -> Targets:
+    def _targets(self, goals: list[Goals], heard: np.ndarray) -> Targets:
+        """Give the goal of each robot's own task; robots not heard have none now."""
         count = len(self._assignment)
-        busy = self._assignment >= 0
-        robots, tasks = np.flatnonzero(busy), self._assignment[busy]
         points, velocities = np.full((count, 3), np.nan), np.zeros((count, 3))
         facing, pace, tolerance = np.full(count, np.nan), np.ones(count), np.zeros(count)
-        for i, m in zip(robots, tasks, strict=True):
-            points[i], velocities[i] = goals[m].points[i], goals[m].velocities[i]
-            facing[i], pace[i] = goals[m].facing[i], goals[m].pace[i]
-            tolerance[i] = goals[m].tolerance
+        for m in np.unique(self._assignment[self._assignment >= 0]):
+            group, goal = np.flatnonzero(self._assignment == m), goals[m]
+            for part, value in (
+                (points, goal.points),
+                (velocities, goal.velocities),
+                (facing, goal.facing),
+                (pace, goal.pace),
+                (tolerance, goal.tolerance),
+            ):
+                part[group] = np.broadcast_to(value, part.shape)[group]
+        busy = (self._assignment >= 0) & heard
         return Targets(busy, points, velocities, facing, pace, tolerance)
 
-    def _control(self, view: _View, goals: list[Goals]) -> tuple[Course, Control, SafetyRows]:
+    def _control(self, view: _View, targets: Targets) -> tuple[Course, Control, SafetyRows]:
         model, settings, places = self._model, self._settings, view.places
-        poses = np.nan_to_num(places.poses)
-        points = np.where(places.known[:, None], view.points, 0.0)
-        targets = self._targets(goals)
-        targets = replace(targets, busy=targets.busy & places.heard)
-        course = self._guidance.course(model, targets, poses, points, settings)
+        course = self._guidance.course(model, targets, view.poses, view.points, settings)
         lowest, highest = model.fleet.command_box(
-            self._commands, view.dt, poses[:, 2], settings.gamma_s
+            self._commands, view.dt, view.poses[:, 2], settings.gamma_s
         )
         still = ~places.heard | self.orders.hold
         lowest[still] = highest[still] = 0.0
         silent_for = np.where(places.heard, 0.0, np.where(places.known, places.age, 0.0))
         growth = np.minimum(model.fleet.max_speed * silent_for, settings.silent_reach)
-        rows = self._safety.rows(points, places.known, places.heard, growth)
+        rows = self._safety.rows(view.points, places.known, places.heard, growth)
         control = solve_control(
             ControlProblem(
-                jacobians=np.nan_to_num(view.jacobians),
+                jacobians=view.jacobians,
                 limits=model.fleet.limits,
                 lowest=lowest,
                 highest=highest,
@@ -384,7 +386,7 @@ class Allocator:
     def _remember(self, view: _View, course: Course, control: Control) -> None:
         """Keep what the next step's learning compares its poses with."""
         self._commands = control.commands
-        implied = np.matmul(np.nan_to_num(view.jacobians), control.commands[:, :, None])[:, :, 0]
+        implied = np.matmul(view.jacobians, control.commands[:, :, None])[:, :, 0]
         if not self.orders.hold:
             self._guidance.notice(course, implied, view.dt)
         self._last = (view.points, implied, course)
@@ -395,7 +397,7 @@ class Allocator:
         self,
         view: _View,
         found: Assignment,
-        goals: list[Goals],
+        targets: Targets,
         enough: np.ndarray,
         problem: Problem,
         reallocations: tuple,
@@ -404,7 +406,6 @@ class Allocator:
         seconds: Mapping[str, float],
     ) -> Decision:
         model = self._model
-        targets = self._targets(goals)
         return Decision(
             time=view.now,
             robots=model.robots,
@@ -566,8 +567,30 @@ def _same_work(old: Any, new: Any) -> bool:
     return replace(old, **{name: getattr(new, name) for name in common}) == new
 
 
-def _stacked(parts: list[np.ndarray], shape: tuple[int, ...]) -> np.ndarray:
-    return np.stack(parts, axis=1) if parts else np.zeros(shape)
+class _Table:
+    """The goals of all tasks as arrays (N, M, ...).
+
+    Attributes are those of :class:`~.tasks.Goals`; a NaN path is straight to the
+    goal; ``moving`` tells whether any goal moves.
+    """
+
+    def __init__(self, goals: list[Goals], robots: int) -> None:
+        count = len(goals)
+        points = np.empty((count, robots, 3))
+        path = np.full((count, robots), np.nan)
+        pace = np.empty((count, robots))
+        self.moving = any(np.any(goal.velocities) for goal in goals)
+        velocities = np.zeros((count, robots, 3) if self.moving else (count, 1, 3))
+        for m, goal in enumerate(goals):
+            points[m] = goal.points
+            if goal.path is not None:
+                path[m] = goal.path
+            pace[m] = goal.pace
+            velocities[m] = goal.velocities
+        self.points, self.velocities = points.swapaxes(0, 1), velocities.swapaxes(0, 1)
+        self.path, self.pace = path.T, pace.T
+        self.tolerance = np.array([goal.tolerance for goal in goals])
+        self.dwell = np.array([goal.dwell for goal in goals])
 
 
 @contextmanager

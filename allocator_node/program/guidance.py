@@ -93,7 +93,8 @@ def offsets(model: Model, poses: np.ndarray, points: np.ndarray, goals: np.ndarr
         low, high, z, middle = (part[:, None] for part in (low, high, z, middle))
     height = goals[..., 2]
     height = np.where(np.isnan(height), middle, np.clip(height, low, high))
-    offset[..., 2] = np.nan_to_num(height - z)
+    flies = model.fleet.flies[:, None] if wide else model.fleet.flies
+    offset[..., 2] = np.where(flies, height - z, 0.0)
     return offset
 
 

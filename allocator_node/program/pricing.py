@@ -73,15 +73,15 @@ def least_effort(
     return Effort(value, np.copysign(share, reach), given_up)
 
 
-def reach_of(problem: Problem) -> np.ndarray:
-    """Give the closing speed each axis brings at its limit, m/s, shape (N, M, 4)."""
-    return -np.matmul(problem.away, problem.jacobians) * problem.limits[:, None, :]
-
-
 def price(problem: Problem) -> np.ndarray:
-    """Give the price κ w_im + e_im of every pair, Wh, shape (N, M).
+    """Give the price κ w_im + e_im of every eligible pair, Wh, shape (N, M); else 0.
 
     w_im is the optimum of robot i's own control problem under task m alone.
     """
-    effort = least_effort(reach_of(problem), problem.demand, problem.slack_weight)
-    return problem.kappa * effort.value + problem.energy
+    prices = np.zeros(problem.eligible.shape)
+    i, m = np.nonzero(problem.eligible)
+    away, jacobians = problem.away[i, m], problem.jacobians[i]
+    reach = -np.matmul(away[:, None, :], jacobians)[:, 0] * problem.limits[i]
+    effort = least_effort(reach, problem.demand[i, m], problem.slack_weight)
+    prices[i, m] = problem.kappa * effort.value + problem.energy[i, m]
+    return prices

@@ -19,7 +19,7 @@ class Scene:
 
     Attributes:
         now: Time, s.
-        points: Control points of all robots, m, shape (N, 3); NaN where unknown.
+        points: Control points of all robots, m, shape (N, 3); 0 where unknown.
         headings: Headings, rad, shape (N,).
         ahead: Distance of each control point ahead of its axle, m, shape (N,).
         members: Indices of the robots on the task, increasing, shape (n,).
@@ -40,38 +40,26 @@ class Scene:
 class Goals:
     """Where each robot would go if it did the task.
 
+    What is the same for all robots may be given once instead of N times.
+
     Attributes:
-        points: Goal points p*, m, shape (N, 3); a NaN height means "any".
-        path: Way to the place of work, m, shape (N,): what the energy is priced by.
-        velocities: Velocities ṗ* of the goal points, m/s, shape (N, 3).
-        facing: Heading to take at the goal, rad, shape (N,); NaN: any.
-        pace: Share of the cruising speed to travel at, shape (N,).
+        points: Goal points p*, m, shape (3,) or (N, 3); a NaN height means "any".
         tolerance: Distance at which a robot stands, m; 0 for a goal passed through.
         dwell: Time to serve at the goal, s, for a task that ends.
+        path: Way to the place of work, m, shape (N,): what the energy is priced
+            by; None: straight to the goal point.
+        velocities: Velocities ṗ* of the goal points, m/s, shape (3,) or (N, 3).
+        facing: Heading to take at the goal, rad, shape () or (N,); NaN: any.
+        pace: Share of the cruising speed to travel at, shape () or (N,).
     """
 
     points: np.ndarray
-    path: np.ndarray
-    velocities: np.ndarray
-    facing: np.ndarray
-    pace: np.ndarray
     tolerance: float
     dwell: float = 0.0
-
-    @classmethod
-    def at(cls, points: np.ndarray, scene: Scene, tolerance: float, **more: Any) -> Goals:
-        """Give goals at points (N, 3), reached in a straight line; ``more`` overrides."""
-        count = len(points)
-        goals: dict[str, Any] = {
-            "points": points,
-            "velocities": np.zeros((count, 3)),
-            "facing": np.full(count, np.nan),
-            "pace": np.ones(count),
-            "tolerance": tolerance,
-        }
-        if "path" not in more:
-            goals["path"] = distance(points, scene.points)
-        return cls(**(goals | more))
+    path: np.ndarray | None = None
+    velocities: np.ndarray | float = 0.0
+    facing: np.ndarray | float = np.nan
+    pace: np.ndarray | float = 1.0
 
 
 @dataclass(frozen=True, kw_only=True)

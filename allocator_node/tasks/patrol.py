@@ -53,11 +53,12 @@ class Patrol(Task):
     def _nearest(self, points: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Give for points (N, 2) the distance to the loop (N,) and the leg it is on (N,)."""
         corners, legs, _ = self._loop
-        from_corner = points[:, None, :] - corners[None]
-        length2 = np.maximum((legs**2).sum(axis=1), 1e-12)
-        along = np.clip((from_corner * legs).sum(axis=2) / length2, 0.0, 1.0)
-        away = np.linalg.norm(from_corner - along[:, :, None] * legs, axis=2)
-        leg = np.argmin(np.nan_to_num(away, nan=np.inf), axis=1)
+        x, y = points[:, :1] - corners[:, 0], points[:, 1:2] - corners[:, 1]
+        along = x * legs[:, 0] + y * legs[:, 1]
+        along /= np.maximum((legs**2).sum(axis=1), 1e-12)
+        np.clip(along, 0.0, 1.0, out=along)
+        away = np.hypot(x - along * legs[:, 0], y - along * legs[:, 1])
+        leg = away.argmin(axis=1)
         return away[np.arange(len(points)), leg], leg
 
     @property
@@ -90,18 +91,19 @@ class Patrol(Task):
         corners, _, _ = self._loop
         away, legs = self._nearest(scene.points[:, :2])
         following = (legs + 1) % len(corners)
-        pace = np.ones(len(scene.points))
+        pace = 1.0
         if state.next:
             members = list(state.next)
             following[members] = list(state.next.values())
-            pace[members] = self._pace(scene.points[members, :2], following[members])
-        points = np.column_stack([corners[following], np.full(len(following), np.nan)])
-        return Goals.at(points, scene, tolerance=0.0, path=away, pace=pace)
+            if len(members) > 1:
+                pace = np.ones(len(scene.points))
+                pace[members] = self._pace(scene.points[members, :2], following[members])
+        points = np.full((len(following), 3), np.nan)
+        points[:, :2] = corners[following]
+        return Goals(points, tolerance=0.0, path=away, pace=pace)
 
     def _pace(self, points: np.ndarray, following: np.ndarray) -> np.ndarray:
         """Give the pace of members by the gap to the one ahead; shape (n,)."""
-        if len(points) < 2:
-            return np.ones(len(points))
         corners, _, way = self._loop
         length = way[-1]
         left = np.linalg.norm(corners[following] - points, axis=1)

@@ -24,9 +24,10 @@ def places_of(centre: np.ndarray, scene: Scene, before: Mapping[int, int]) -> di
 
 
 def points_of(centre: np.ndarray, scene: Scene, taken: Mapping[int, int]) -> np.ndarray:
-    """Give goal points (N, 3): members their places, everybody else the centre."""
+    """Give goal points: members their places, everybody else the centre; (3,) or (N, 3)."""
+    if len(taken) < 2:
+        return centre
     points = np.repeat(centre[None, :], len(scene.points), axis=0)
-    if taken:
-        places = ring(centre, len(taken), scene.spacing)
-        points[list(taken)] = places[list(taken.values())]
+    places = ring(centre, len(taken), scene.spacing)
+    points[list(taken)] = places[list(taken.values())]
     return points

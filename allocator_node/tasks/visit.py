@@ -69,7 +69,8 @@ class Visit(Task):
     def _there(self, places: Mapping[int, int], scene: Scene, share: float) -> np.ndarray:
         """Tell which members are within a share of the tolerances."""
         members = scene.members
-        goals = points_of(centre_of(self.at), scene, places)[members]
+        points = points_of(centre_of(self.at), scene, places)
+        goals = np.broadcast_to(points, scene.points.shape)[members]
         away = distance(goals, scene.points[members])
         if self.heading is None:
             return away <= share * self.tolerance
@@ -82,13 +83,7 @@ class Visit(Task):
         """Give the members their places and everybody else the point itself."""
         points = points_of(centre_of(self.at), scene, state.places)
         heading = np.nan if self.heading is None else self.heading
-        return Goals.at(
-            points,
-            scene,
-            self.tolerance,
-            facing=np.full(len(points), heading),
-            dwell=self.dwell,
-        )
+        return Goals(points, self.tolerance, self.dwell, facing=heading)
 
     def finished(self, state: Progress) -> bool:
         """Tell whether the dwell is over."""

@@ -39,10 +39,10 @@ class Watch(Task):
     def goals(self, state: Mapping[int, int], scene: Scene) -> Goals:
         """Give the members their places and everybody else the point itself."""
         points = points_of(centre_of(self.at), scene, state)
-        facing = np.full(len(points), np.nan)
-        if self.face is not None:
-            facing = np.arctan2(self.face[1] - points[:, 1], self.face[0] - points[:, 0])
-        return Goals.at(points, scene, self.tolerance, facing=facing)
+        if self.face is None:
+            return Goals(points, self.tolerance)
+        facing = np.arctan2(self.face[1] - points[..., 1], self.face[0] - points[..., 0])
+        return Goals(points, self.tolerance, facing=facing)
 
     def moved(self, at: tuple[float, float, float], heading: float | None) -> Watch:
         """Give the watch at another place; a heading turns what it faces with it."""
