@@ -5,17 +5,18 @@ from __future__ import annotations
 import time
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
 from .belief import EfficacyBelief, EnergyBelief, FeatureBelief, PoseBelief
 from .belief.efficacy import Step
-from .belief.energy import SECONDS_PER_HOUR, way_energy
 from .belief.poses import Places
-from .decision import Decision, Level, Notice, Shortfall
+from .decision import Decision
+from .memory import Memory, remember
 from .model import Model
+from .notices import notices, shortfalls
 from .observation import MovedGoal, Observation, Orders
 from .program import (
     Assigner,
@@ -28,11 +29,13 @@ from .program import (
     price,
     solve_control,
 )
-from .program.guidance import Course, Guidance, Targets, offsets
+from .program.formulate import Known, formulate
+from .program.guidance import Course, Guidance, Targets
 from .reasons import Reasons, Situation
 from .settings import Settings
 from .tasks import Goals, Scene
 from .team import Team
+from .work import Work, scene_of
 
 LONGEST_STEP = 1.0
 """Longest time one step counts for; beyond it the loop was paused, s."""
@@ -61,7 +64,6 @@ class Allocator:
 
     Attributes:
         orders: What the operator asks for; assign another to change it.
-        team: The team with its present task table; :meth:`edit` changes it.
     """
 
     def __init__(
@@ -81,7 +83,6 @@ class Allocator:
                 longer ones go on beside the steps. inf: always within, which makes
                 the decisions independent of the machine's speed.
         """
-        self.team = team
         self.period = period
         self.orders = Orders()
         self._settings = settings or Settings()
@@ -93,7 +94,7 @@ class Allocator:
         self._commands = np.zeros((count, 4))
         self._since = np.full(count, np.nan)
         self._last: tuple[np.ndarray, np.ndarray, Course] | None = None
-        self._states: dict[str, Any] = {name: task.begin() for name, task in team.tasks.items()}
+        self._work = Work(team)
         self._model = Model(team)
         self._assignment = np.full(count, -1)
         self._energy = EnergyBelief(self._model)
@@ -101,6 +102,11 @@ class Allocator:
         self._efficacy = EfficacyBelief(count, len(team.tasks))
         self._reasons = Reasons(self._model, self._say_feature)
         self._safety = Safety(team, self._model, self._settings)
+
+    @property
+    def team(self) -> Team:
+        """The team with its present task table; :meth:`edit` changes it."""
+        return self._work.team
 
     @property
     def settings(self) -> Settings:
@@ -128,8 +134,10 @@ class Allocator:
         with _timed(seconds, "belief"):
             view = self._believe(observation, now)
         with _timed(seconds, "pricing"):
-            goals, scenes = self._goals(view)
-            problem, enough = self._problem(view, goals)
+            goals = [
+                self._work.advance(m, self._scene(view, m)) for m in range(len(view.suitability.T))
+            ]
+            problem, enough = self._formulate(view, goals)
             prices = price(problem)
         with _timed(seconds, "assignment"):
             found = self._assigner.assign(problem, prices)
@@ -138,7 +146,7 @@ class Allocator:
         reallocations = self._reasons.explain(
             situation, before, found.task, problem.swap_cost, now
         )
-        self._take_up(before, view, goals, scenes)
+        self._take_up(before, view, goals)
         with _timed(seconds, "control"):
             targets = self._targets(goals, view.places.heard)
             course, control, rows = self._control(view, targets)
@@ -193,100 +201,32 @@ class Allocator:
         step = Step(now, expected, measured, counted)
         self._efficacy.update(step, self._assignment, course.distance, dt, settings)
 
-    def _goals(self, view: _View) -> tuple[list[Goals], list[Scene]]:
-        """Advance every task and give its goals."""
-        goals, scenes = [], []
-        for m, (name, task) in enumerate(self.team.tasks.items()):
-            scene = self._scene(view, m)
-            self._states[name] = task.advance(self._states[name], scene)
-            scenes.append(scene)
-            goals.append(task.goals(self._states[name], scene))
-        return goals, scenes
-
     def _scene(self, view: _View, m: int) -> Scene:
-        model = self._model
-
-        def suffices(robots: np.ndarray) -> bool:
-            amounts = view.capability[robots].sum(axis=0)
-            enough = (amounts >= model.needs[m] - 1e-9).all()
-            return bool(enough and len(robots) >= max(model.least[m], 1))
-
         members = np.flatnonzero((self._assignment == m) & view.places.heard)
-        spacing = 2 * self._safety.reach[members].max(initial=0.0) + 1.5 * self._settings.margin
-        return Scene(
-            view.now, view.points, view.poses[:, 3], model.fleet.ahead,
-            members, spacing, suffices,
-        )  # fmt: skip
-
-    def _finished(self) -> frozenset[str]:
-        tasks = self.team.tasks
-        return frozenset(name for name in tasks if tasks[name].finished(self._states[name]))
-
-    def _active(self) -> np.ndarray:
-        finished = self._finished()
-        return np.array(
-            [
-                task.active and name not in finished and finished.issuperset(task.after)
-                for name, task in self.team.tasks.items()
-            ],
-            dtype=bool,
+        reach = self._safety.reach[members].max(initial=0.0)
+        spacing = 2 * reach + 1.5 * self._settings.margin
+        return scene_of(
+            self._model, view.now, view.poses, view.points, view.capability, members, m, spacing
         )
 
-    def _problem(self, view: _View, goals: list[Goals]) -> tuple[Problem, np.ndarray]:
-        """Put the period's program into numbers; also where the energy suffices, (N, M)."""
-        model, settings = self._model, self._settings
-        robots, tasks = len(model.robots), len(model.tasks)
-        active = self._active()
-        table = _Table(goals, robots)
-        offset = offsets(model, view.poses, view.points, table.points)
-        distance = np.sqrt((offset**2).sum(axis=2))
-        away = offset / -np.maximum(distance, 1e-9)[:, :, None]
-        cruise = model.fleet.cruise[:, None]
-        closing = table.pace * np.minimum(settings.gamma * distance, cruise)
-        closing[distance <= table.tolerance] = 0.0
-        path = np.where(np.isnan(table.path), distance, table.path)
-
-        serving = way_energy(model, path) + model.idle[:, None] * table.dwell / SECONDS_PER_HOUR
-        dearness = self._energy.dearness(model)
-        s = view.suitability * self._efficacy.eta
-        trusted = self._trusted(view)
-        energy = dearness[:, None] * serving + model.urgency * path / (SECONDS_PER_HOUR * cruise)
-        home = table.points[..., :2] - model.docks[:, None, :2]
-        way_home = np.hypot(home[..., 0], home[..., 1]) * model.has_dock[:, None]
-        enough = serving + way_energy(model, way_home) <= self._energy.spendable(model)[:, None]
-
-        pinned, banned = self._pairs(self.orders.pins), self._pairs(self.orders.bans)
-        eligible = (
-            (view.suitability > 0)
-            & trusted
-            & view.places.heard[:, None]
-            & enough
-            & ~banned
-            & active
-        )
-        pins = pinned & eligible
-        problem = Problem(
-            capability=view.capability,
-            needs=np.where(active[:, None], model.needs, 0.0),
-            least=np.where(active, model.least, 0),
-            most=model.most,
-            priority=model.priority,
-            eligible=eligible,
-            pinned=np.where(pins.any(axis=1), pins.argmax(axis=1) if tasks else -1, -1),
-            previous=self._assignment,
-            swap_cost=dearness * way_energy(model, np.full(robots, settings.swap_distance)),
-            energy=energy / np.maximum(s, settings.s_min),
-            limits=model.fleet.limits,
+    def _formulate(self, view: _View, goals: list[Goals]) -> tuple[Problem, np.ndarray]:
+        known = Known(
+            poses=view.poses,
+            points=view.points,
             jacobians=view.jacobians,
-            away=away,
-            closing=closing,
-            goal_speed=(away * table.velocities).sum(axis=2) if table.moving else np.zeros_like(
-                distance
-            ),
-            kappa=settings.kappa,
-            slack_weight=settings.slack_weight,
+            heard=view.places.heard,
+            capability=view.capability,
+            suitability=view.suitability,
+            efficacy=self._efficacy.eta,
+            trusted=self._trusted(view),
+            spendable=self._energy.spendable(self._model),
+            dearness=self._energy.dearness(self._model),
+            active=self._work.active(),
+            pinned=self._pairs(self.orders.pins),
+            banned=self._pairs(self.orders.bans),
+            previous=self._assignment,
         )
-        return problem, enough
+        return formulate(self._model, self._settings, known, goals)
 
     def _trusted(self, view: _View) -> np.ndarray:
         """Tell where the specialization suffices, or would but for the features, (N, M)."""
@@ -314,14 +254,12 @@ class Allocator:
             prices=prices,
             pinned=self._pairs(self.orders.pins),
             banned=self._pairs(self.orders.bans),
-            active=self._active(),
+            active=self._work.active(),
             tasks=tuple(self.team.tasks.values()),
-            finished=self._finished(),
+            finished=self._work.finished(),
         )
 
-    def _take_up(
-        self, before: np.ndarray, view: _View, goals: list[Goals], scenes: list[Scene]
-    ) -> None:
+    def _take_up(self, before: np.ndarray, view: _View, goals: list[Goals]) -> None:
         """Hand the changed robots their new tasks, and these their new groups."""
         changed = np.flatnonzero(before != self._assignment)
         if not len(changed):
@@ -329,14 +267,8 @@ class Allocator:
         self._since[changed] = view.now
         self._guidance.restart(changed)
         self._efficacy.reassigned(changed, before[changed], view.now, self._settings)
-        tasks = list(self.team.tasks.values())
-        for m in set(before[changed]) | set(self._assignment[changed]) - {-1}:
-            if m < 0:
-                continue
-            name = self._model.tasks[m]
-            scenes[m] = self._scene(view, m)
-            self._states[name] = tasks[m].advance(self._states[name], scenes[m])
-            goals[m] = tasks[m].goals(self._states[name], scenes[m])
+        for m in (set(before[changed]) | set(self._assignment[changed])) - {-1}:
+            goals[m] = self._work.advance(int(m), self._scene(view, m))
 
     def _targets(self, goals: list[Goals], heard: np.ndarray) -> Targets:
         """Give the goal of each robot's own task; robots not heard have none now."""
@@ -421,44 +353,13 @@ class Allocator:
             efficacy=self._efficacy.eta.copy(),
             charge=self._energy.charge.copy(),
             charge_estimated=self._energy.estimated.copy(),
-            finished=self._finished(),
+            finished=self._work.finished(),
             reallocations=reallocations,
-            shortfalls=self._shortfalls(found),
-            notices=tuple(self._notices(view, enough, control, rows)),
+            shortfalls=shortfalls(model, found),
+            notices=tuple(notices(model, view.places, enough, control, rows)),
             seconds=seconds,
             gap=found.gap,
         )
-
-    def _shortfalls(self, found: Assignment) -> tuple[Shortfall, ...]:
-        model = self._model
-        robots = [
-            Shortfall(model.tasks[m], float(found.missing_robots[m]))
-            for m in np.flatnonzero(found.missing_robots)
-        ]
-        needs = [
-            Shortfall(model.tasks[m], float(found.missing_needs[m, k]), model.capabilities[k])
-            for m, k in np.argwhere(found.missing_needs > 0)
-        ]
-        return tuple(robots + needs)
-
-    def _notices(
-        self, view: _View, enough: np.ndarray, control: Control, rows: SafetyRows
-    ) -> Iterator[Notice]:
-        names, places = self._model.robots, view.places
-        for i in np.flatnonzero(~places.heard):
-            text = f"not heard for {places.age[i]:.1f} s" if places.known[i] else "never heard"
-            yield Notice(names[i], Level.WARN, text)
-        for i in np.flatnonzero(places.heard & ~enough.any(axis=1) & bool(enough.shape[1])):
-            yield Notice(names[i], Level.WARN, "too little energy for any task")
-        for i in np.flatnonzero(control.stopped):
-            yield Notice(names[i], Level.ERROR, "stopped: no safe command could be found")
-        seen = set()
-        for i, other in zip(rows.first[rows.violated], rows.obstacle[rows.violated], strict=True):
-            if (i, other) in seen or (other >= 0 and not places.heard[other]):
-                continue
-            seen.add((i, other))
-            what = names[other] if other >= 0 else "the boundary or a keep-out area"
-            yield Notice(names[i], Level.ERROR, f"nearer to {what} than the margin allows")
 
     def _say_feature(self, robot: int, feature: int) -> str:
         return self._features.says(robot, feature, self._now or 0.0, self._settings)
@@ -478,19 +379,14 @@ class Allocator:
         model = Model(team)
         old = {name: m for m, name in enumerate(self._model.tasks)}
         kept = np.array([old.get(name, -1) for name in model.tasks], dtype=int)
-        self._states = {
-            name: self._states[name]
-            if name in old and _same_work(self.team.tasks[name], task)
-            else task.begin()
-            for name, task in team.tasks.items()
-        }
+        self._work.edit(team)
         self._efficacy.retable(kept)
         self._reasons.retable(model, kept)
         position = {former: m for m, former in enumerate(kept) if former >= 0}
         self._assignment = np.array(
             [position.get(int(m), -1) for m in self._assignment], dtype=int
         )
-        self.team, self._model = team, model
+        self._model = model
         self._safety = Safety(team, model, self._settings)
         self._last = None
 
@@ -510,87 +406,25 @@ class Allocator:
 
     def memory(self) -> dict[str, Any]:
         """Give what should survive a restart, as plain JSON-able data."""
-        model = self._model
-        robots, tasks = np.nonzero((self._efficacy.eta < 0.999) | (self._efficacy.failures > 0))
-        return {
-            "efficacy": [
-                {
-                    "robot": model.robots[i],
-                    "task": model.tasks[m],
-                    "value": float(self._efficacy.eta[i, m]),
-                    "failures": int(self._efficacy.failures[i, m]),
-                    "barred": bool(self._efficacy.barred[i, m]),
-                }
-                for i, m in zip(robots, tasks, strict=True)
-            ],
-            "finished": sorted(self._finished()),
-            "assignment": {
-                model.robots[i]: model.tasks[m] for i, m in enumerate(self._assignment) if m >= 0
-            },
-        }
+        return remember(self._model, self._efficacy, self._work.finished(), self._assignment)
 
-    def recall(self, memory: Mapping[str, Any]) -> None:
+    def recall(self, data: Mapping[str, Any]) -> None:
         """Take up what an earlier run left; names that no longer exist are passed over.
 
         Raises:
-            ValueError: The memory is not of the form :meth:`memory` gives.
+            ValueError: The data is not of the form :meth:`memory` gives.
         """
-        model = self._model
-        robot_of = {name: i for i, name in enumerate(model.robots)}
-        task_of = {name: m for m, name in enumerate(model.tasks)}
-        try:
-            learned = [
-                (entry["robot"], entry["task"], float(entry["value"]), int(entry["failures"]),
-                 bool(entry["barred"]))
-                for entry in memory["efficacy"]
-            ]  # fmt: skip
-            finished = [str(name) for name in memory["finished"]]
-            assignment = {str(robot): str(task) for robot, task in memory["assignment"].items()}
-        except (KeyError, TypeError, ValueError, AttributeError) as error:
-            raise ValueError(f"not an allocator's memory: {error!r}") from error
-        for robot, task, value, failures, barred in learned:
-            if robot in robot_of and task in task_of and 0 <= value <= 1:
+        memory = Memory.read(data)
+        robot_of = {name: i for i, name in enumerate(self._model.robots)}
+        task_of = {name: m for m, name in enumerate(self._model.tasks)}
+        for robot, task, value, failures, barred in memory.learned:
+            if robot in robot_of and task in task_of:
                 self._efficacy.recall(robot_of[robot], task_of[task], value, failures, barred)
-        for name in finished:
-            if name in task_of:
-                self._states[name] = self.team.tasks[name].ended()
-        for robot, task in assignment.items():
+        for name in memory.finished:
+            self._work.end(name)
+        for robot, task in memory.assignment.items():
             if robot in robot_of and task in task_of:
                 self._assignment[robot_of[robot]] = task_of[task]
-
-
-def _same_work(old: Any, new: Any) -> bool:
-    """Tell whether two tasks are the same but for who may do them and when."""
-    if type(old) is not type(new):
-        return False
-    common = ("needs", "each", "robots", "priority", "urgency", "after", "active")
-    return replace(old, **{name: getattr(new, name) for name in common}) == new
-
-
-class _Table:
-    """The goals of all tasks as arrays (N, M, ...).
-
-    Attributes are those of :class:`~.tasks.Goals`; a NaN path is straight to the
-    goal; ``moving`` tells whether any goal moves.
-    """
-
-    def __init__(self, goals: list[Goals], robots: int) -> None:
-        count = len(goals)
-        points = np.empty((count, robots, 3))
-        path = np.full((count, robots), np.nan)
-        pace = np.empty((count, robots))
-        self.moving = any(np.any(goal.velocities) for goal in goals)
-        velocities = np.zeros((count, robots, 3) if self.moving else (count, 1, 3))
-        for m, goal in enumerate(goals):
-            points[m] = goal.points
-            if goal.path is not None:
-                path[m] = goal.path
-            pace[m] = goal.pace
-            velocities[m] = goal.velocities
-        self.points, self.velocities = points.swapaxes(0, 1), velocities.swapaxes(0, 1)
-        self.path, self.pace = path.T, pace.T
-        self.tolerance = np.array([goal.tolerance for goal in goals])
-        self.dwell = np.array([goal.dwell for goal in goals])
 
 
 @contextmanager

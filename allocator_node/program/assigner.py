@@ -9,7 +9,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from .assignment import Assignment, evaluate, reduced_costs
-from .integers import Integers, OutOfTime
+from .integers import Integers, SearchFailed
 from .problem import Problem
 from .repair import repair
 from .slots import solve_slots
@@ -128,7 +128,7 @@ def _prove(
     hint = repair(problem, prices, start)
     try:
         answer = Integers(problem, time_limit).solve(prices, hint)
-    except OutOfTime:
+    except SearchFailed:
         return None, time.perf_counter() - begun
     found = evaluate(problem, prices, *answer)
     costs, constant = _costs(problem, prices)

@@ -21,8 +21,8 @@ HELD = 1e-7
 Held = list[tuple[np.ndarray, float]]
 
 
-class OutOfTime(RuntimeError):
-    """The time limit came before any solution."""
+class SearchFailed(RuntimeError):
+    """No solution was found: the time ran out, or the solver failed."""
 
 
 @dataclass(frozen=True)
@@ -182,26 +182,30 @@ class Integers:
             distance of its cost from the optimum, Wh.
 
         Raises:
-            OutOfTime: The time limit came before any solution.
+            SearchFailed: The time ran out before any solution, or the solver failed.
         """
         cost = np.zeros(self.columns)
         cost[: self.pairs] = reduced_costs(self.problem, prices)[self.robot, self.task]
         high = self.high.copy()
         high[self.pairs :] = self.least_missing[self.pairs :]
-        hint = None if start is None else self._hint(start)
+        hint = None if start is None else self._columns_of(start)
         found = self._minimize(cost, high, [], hint)
         if found is None:
             high, held, proven = self._levels()
             found = self._minimize(cost, high, held, hint)
             if found is None:
-                raise RuntimeError("the assignment problem has no solution, which cannot be")
+                raise SearchFailed
         else:
             proven = True
-        task = np.full(len(self.problem.pinned), -1)
-        on = found.values[: self.pairs] > 0.5
-        task[self.robot[on]] = self.task[on]
         gap = max(float(cost @ found.values) - found.bound, 0.0)
-        return task, found.proven and proven, gap
+        return self._task_of(found.values), found.proven and proven, gap
+
+    def _task_of(self, values: np.ndarray) -> np.ndarray:
+        """Give the assignment in column values, shape (N,)."""
+        task = np.full(len(self.problem.pinned), -1)
+        on = values[: self.pairs] > 0.5
+        task[self.robot[on]] = self.task[on]
+        return task
 
     def _levels(self) -> tuple[np.ndarray, Held, bool]:
         """Find what each level must leave uncovered: upper bounds of σ, held sums, proven."""
@@ -218,12 +222,14 @@ class Integers:
             objective = np.where(here, self.weight, 0.0)
             found = self._minimize(objective, high, held)
             if found is None:
-                raise RuntimeError("a level of the assignment has no solution, which cannot be")
-            held.append((objective, max(float(objective @ found.values), 0.0) + HELD))
+                raise SearchFailed
+            # Rounded, so that the sum held is one that whole robots attain.
+            rounded = self._columns_of(self._task_of(found.values))
+            held.append((objective, float(objective @ rounded) + HELD))
             proven &= found.proven
         return high, held, proven
 
-    def _hint(self, start: np.ndarray) -> np.ndarray:
+    def _columns_of(self, start: np.ndarray) -> np.ndarray:
         """Give the columns of an assignment, shape (columns,)."""
         problem, values = self.problem, np.zeros(self.columns)
         on = start[self.robot] == self.task
@@ -254,7 +260,7 @@ class Integers:
             What was found; None where there is no solution.
 
         Raises:
-            OutOfTime: The time limit came before any solution.
+            SearchFailed: The time ran out before any solution, or the solver failed.
         """
         solver = quiet_solver()
         solver.setOptionValue("threads", 1)
@@ -269,7 +275,7 @@ class Integers:
         if status == highspy.HighsModelStatus.kInfeasible:
             return None
         if status != highspy.HighsModelStatus.kOptimal:
-            raise OutOfTime
+            raise SearchFailed
         values = np.array(solver.getSolution().col_value)
         alpha = values[: self.pairs]
         if np.all(np.minimum(alpha, 1 - alpha) < INTEGRAL):
@@ -287,7 +293,7 @@ class Integers:
             return None
         info = solver.getInfo()
         if info.primal_solution_status != highspy.SolutionStatus.kSolutionStatusFeasible:
-            raise OutOfTime
+            raise SearchFailed
         values = np.array(solver.getSolution().col_value)
         proven = status == highspy.HighsModelStatus.kOptimal
         bound = float(objective @ values) if proven else info.mip_dual_bound

@@ -1,0 +1,55 @@
+"""What a person should know about a decision: shortfalls, silent robots, dangers."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+import numpy as np
+
+from .belief.poses import Places
+from .decision import Level, Notice, Shortfall
+from .model import Model
+from .program import Assignment, Control, SafetyRows
+
+
+def shortfalls(model: Model, found: Assignment) -> tuple[Shortfall, ...]:
+    """Name what active tasks lack: robots first, then amounts of capabilities."""
+    robots = [
+        Shortfall(model.tasks[m], float(found.missing_robots[m]))
+        for m in np.flatnonzero(found.missing_robots)
+    ]
+    needs = [
+        Shortfall(model.tasks[m], float(found.missing_needs[m, k]), model.capabilities[k])
+        for m, k in np.argwhere(found.missing_needs > 0)
+    ]
+    return tuple(robots + needs)
+
+
+def notices(
+    model: Model, places: Places, enough: np.ndarray, control: Control, rows: SafetyRows
+) -> Iterator[Notice]:
+    """Name robots that are silent, short of energy, stopped or too near to something.
+
+    Args:
+        model: The team.
+        places: Where the robots are.
+        enough: Where the energy suffices, shape (N, M).
+        control: The commands and what the rows did to them.
+        rows: The safety rows.
+    """
+    names = model.robots
+    for i in np.flatnonzero(~places.heard):
+        text = f"not heard for {places.age[i]:.1f} s" if places.known[i] else "never heard"
+        yield Notice(names[i], Level.WARN, text)
+    if enough.shape[1]:
+        for i in np.flatnonzero(places.heard & ~enough.any(axis=1)):
+            yield Notice(names[i], Level.WARN, "too little energy for any task")
+    for i in np.flatnonzero(control.stopped):
+        yield Notice(names[i], Level.ERROR, "stopped: no safe command could be found")
+    seen = set()
+    for i, other in zip(rows.first[rows.violated], rows.obstacle[rows.violated], strict=True):
+        if (i, other) in seen or (other >= 0 and not places.heard[other]):
+            continue
+        seen.add((i, other))
+        what = names[other] if other >= 0 else "the boundary or a keep-out area"
+        yield Notice(names[i], Level.ERROR, f"nearer to {what} than the margin allows")

@@ -1,0 +1,138 @@
+"""From beliefs and goals to the numbers of one period's program."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..belief.energy import SECONDS_PER_HOUR, way_energy
+from ..model import Model
+from ..settings import Settings
+from ..tasks import Goals
+from .guidance import offsets
+from .problem import Problem
+
+
+class GoalTable:
+    """The goals of all tasks as arrays (N, M, ...).
+
+    Attributes are those of :class:`~allocator_node.tasks.Goals`; a NaN path is
+    straight to the goal; ``moving`` tells whether any goal moves.
+    """
+
+    def __init__(self, goals: list[Goals], robots: int) -> None:
+        count = len(goals)
+        points = np.empty((count, robots, 3))
+        path = np.full((count, robots), np.nan)
+        pace = np.empty((count, robots))
+        self.moving = any(np.any(goal.velocities) for goal in goals)
+        velocities = np.zeros((count, robots if self.moving else 1, 3))
+        for m, goal in enumerate(goals):
+            points[m] = goal.points
+            if goal.path is not None:
+                path[m] = goal.path
+            pace[m] = goal.pace
+            velocities[m] = goal.velocities
+        self.points, self.velocities = points.swapaxes(0, 1), velocities.swapaxes(0, 1)
+        self.path, self.pace = path.T, pace.T
+        self.tolerance = np.array([goal.tolerance for goal in goals])
+        self.dwell = np.array([goal.dwell for goal in goals])
+
+
+@dataclass(frozen=True, kw_only=True)
+class Known:
+    """What the program is made of beside the goals.
+
+    Attributes:
+        poses, points, jacobians: As in the period's view; (N, 4), (N, 3), (N, 3, 4).
+        heard: Robots heard from, shape (N,).
+        capability, suitability, efficacy: c (N, K), a (N, M), η (N, M).
+        trusted: Where the efficacy allows the pair, shape (N, M).
+        spendable: Energy above the reserve, Wh, shape (N,).
+        dearness: λ, shape (N,).
+        active: Tasks to be done now, shape (M,).
+        pinned, banned: The operator's orders, shape (N, M).
+        previous: Task each robot has, −1: none, shape (N,).
+    """
+
+    poses: np.ndarray
+    points: np.ndarray
+    jacobians: np.ndarray
+    heard: np.ndarray
+    capability: np.ndarray
+    suitability: np.ndarray
+    efficacy: np.ndarray
+    trusted: np.ndarray
+    spendable: np.ndarray
+    dearness: np.ndarray
+    active: np.ndarray
+    pinned: np.ndarray
+    banned: np.ndarray
+    previous: np.ndarray
+
+
+def formulate(
+    model: Model, settings: Settings, known: Known, goals: list[Goals]
+) -> tuple[Problem, np.ndarray]:
+    """Put the period's program into numbers.
+
+    Energy to reach the goal and serve there, E = (idle + drive) · path / c + idle ·
+    dwell, becomes a price e = (λ E + urgency · path / (3600 c)) / s; a robot is
+    eligible only where it could do that and still reach its dock with its reserve.
+
+    Returns:
+        The program, and where the energy suffices, shape (N, M).
+    """
+    robots, _ = known.suitability.shape
+    table = GoalTable(goals, robots)
+    offset = offsets(model, known.poses, known.points, table.points)
+    distance = np.sqrt((offset**2).sum(axis=2))
+    away = offset / -np.maximum(distance, 1e-9)[:, :, None]
+    cruise = model.fleet.cruise[:, None]
+    closing = table.pace * np.minimum(settings.gamma * distance, cruise)
+    closing[distance <= table.tolerance] = 0.0
+    path = np.where(np.isnan(table.path), distance, table.path)
+
+    serving = way_energy(model, path) + model.idle[:, None] * table.dwell / SECONDS_PER_HOUR
+    home = table.points[..., :2] - model.docks[:, None, :2]
+    way_home = np.hypot(home[..., 0], home[..., 1]) * model.has_dock[:, None]
+    enough = serving + way_energy(model, way_home) <= known.spendable[:, None]
+
+    s = known.suitability * known.efficacy
+    dearness = known.dearness[:, None]
+    urgent = model.urgency * path / (SECONDS_PER_HOUR * cruise)
+    eligible = (
+        (known.suitability > 0)
+        & known.trusted
+        & known.heard[:, None]
+        & enough
+        & ~known.banned
+        & known.active
+    )
+    pins = known.pinned & eligible
+    pinned = np.full(robots, -1)
+    ordered = pins.any(axis=1)
+    pinned[ordered] = pins[ordered].argmax(axis=1)
+    swapped = way_energy(model, np.full(robots, settings.swap_distance))
+    speed = (away * table.velocities).sum(axis=2) if table.moving else np.zeros(distance.shape)
+    problem = Problem(
+        capability=known.capability,
+        needs=np.where(known.active[:, None], model.needs, 0.0),
+        least=np.where(known.active, model.least, 0),
+        most=model.most,
+        priority=model.priority,
+        eligible=eligible,
+        pinned=pinned,
+        previous=known.previous,
+        swap_cost=known.dearness * swapped,
+        energy=(dearness * serving + urgent) / np.maximum(s, settings.s_min),
+        limits=model.fleet.limits,
+        jacobians=known.jacobians,
+        away=away,
+        closing=closing,
+        goal_speed=speed,
+        kappa=settings.kappa,
+        slack_weight=settings.slack_weight,
+    )
+    return problem, enough
