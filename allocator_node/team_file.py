@@ -8,14 +8,12 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
-from .document import Document, Place, parse_document, read_document
 from .drives import known_drives
-from .form import BROKEN, Draft, read_fields
-from .free_space import FreeSpace
-from .plugins import PluginError
-from .tasks import Task, known_kinds
-from .team import Robot, Team, Way
-from .team_checks import (
+from .files.document import Document, Place, parse_document, read_document
+from .files.form import BROKEN, Draft, read_fields
+from .files.free_space import FreeSpace
+from .files.plugins import PluginError
+from .files.team_checks import (
     check_distinct,
     check_frame,
     check_keep_out,
@@ -27,7 +25,9 @@ from .team_checks import (
     check_starts,
     check_task,
 )
-from .wording import described, one_of
+from .files.wording import described, one_of
+from .tasks import Task, known_kinds
+from .team import Robot, Team, Way
 
 PARTS = ("capabilities", "robots", "tasks")
 """Keys of a team file whose entries have names of the user's."""

@@ -8,8 +8,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from allocator_node import plugins
-from allocator_node.document import DEEPEST, LARGEST_FILE, MOST_VALUES, FileError
+from allocator_node.files import plugins
+from allocator_node.files.document import DEEPEST, LARGEST_FILE, MOST_VALUES, FileError
 from allocator_node.sim.world_file import World, parse_world, read_world
 from allocator_node.tasks import Visit
 from allocator_node.team import Team

@@ -10,10 +10,11 @@ import yaml
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from allocator_node import plugins
-from allocator_node.document import parse_document
 from allocator_node.drives import Aerial, Differential, Holonomic
-from allocator_node.free_space import overlap
+from allocator_node.files import plugins
+from allocator_node.files.document import parse_document
+from allocator_node.files.free_space import overlap
+from allocator_node.files.team_checks import LONGEST_TOPIC, TOPIC
 from allocator_node.sim.world_file import (
     BatteryEvent,
     FeatureEvent,
@@ -35,7 +36,6 @@ from allocator_node.team import (
     PoseSource,
     Way,
 )
-from allocator_node.team_checks import LONGEST_TOPIC, TOPIC
 from allocator_node.team_file import merge_tasks, parse_team, read_team
 
 FARM = """\

@@ -16,7 +16,7 @@ from rich.console import Console
 from rich.live import Live
 from rich.progress import BarColumn, Progress, TextColumn
 
-from ..document import FileError
+from ..files.document import FileError
 from ..sim.world_file import read_world
 from ..team_file import read_team
 from .board import Board

@@ -11,7 +11,7 @@ from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 from rich.table import Table
 
-from ..document import FileError
+from ..files.document import FileError
 from ..sim.record import Rehearsal, write_run
 from ..sim.rehearsal import rehearse
 from ..sim.world_file import World, read_world

@@ -7,7 +7,7 @@ import sys
 from collections.abc import Sequence
 from pathlib import Path
 
-from ..document import FileError
+from ..files.document import FileError
 from ..sim.world_file import World, read_world
 from ..team_file import read_team
 from .allocator import split

@@ -2,7 +2,7 @@
 
 from collections.abc import Mapping
 
-from ..plugins import extended
+from ..files.plugins import extended
 from .aerial import Aerial
 from .base import AXES, Drive
 from .differential import Differential

@@ -17,7 +17,7 @@ from rclpy.signals import SignalHandlerOptions
 from std_srvs.srv import SetBool, Trigger
 
 from ..allocator import Allocator
-from ..document import FileError
+from ..files.document import FileError
 from ..team import Team
 from ..team_file import merge_tasks, read_team
 from . import parameters

@@ -9,12 +9,12 @@ from typing import Annotated, Any, Literal
 
 from annotated_types import MinLen
 
-from ..document import Document, Place, parse_document, read_document
-from ..form import BROKEN, Draft, read_fields
-from ..free_space import FreeSpace
+from ..files.document import Document, Place, parse_document, read_document
+from ..files.form import BROKEN, Draft, read_fields
+from ..files.free_space import FreeSpace
+from ..files.team_checks import check_distinct, check_inside, points_of
+from ..files.wording import described, one_of
 from ..team import Checked, Name, NonNegative, Point, Positive, Share, Team
-from ..team_checks import check_distinct, check_inside, points_of
-from ..wording import described, one_of
 
 
 @dataclass(frozen=True)

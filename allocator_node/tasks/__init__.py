@@ -2,7 +2,7 @@
 
 from collections.abc import Mapping
 
-from ..plugins import extended
+from ..files.plugins import extended
 from .base import Goals, Scene, Task, distance
 from .patrol import Patrol
 from .visit import Visit
