@@ -11,6 +11,9 @@ from scipy import sparse
 
 TOLERANCE = 1e-8
 
+GAP = 1e-12
+"""Duality gap: small beside the price of violated rows, so that small commands come out right."""
+
 
 class SolverFailure(RuntimeError):
     """No solver gave an answer."""
@@ -60,6 +63,8 @@ def solve_with_piqp(
     solver = piqp.SparseSolver()
     solver.settings.eps_abs = TOLERANCE
     solver.settings.eps_rel = TOLERANCE
+    solver.settings.eps_duality_gap_abs = GAP
+    solver.settings.eps_duality_gap_rel = GAP
     solver.settings.compute_timings = False
     unbounded = np.full(len(bound), -np.inf)
     hessian = sparse.csc_matrix(sparse.diags_array(quadratic))
@@ -87,7 +92,8 @@ def solve_with_clarabel(
     right = np.concatenate([bound, highest[above], -lowest[below]])
     settings = clarabel.DefaultSettings()
     settings.verbose = False
-    settings.tol_gap_abs = settings.tol_gap_rel = settings.tol_feas = TOLERANCE
+    settings.tol_gap_abs = settings.tol_gap_rel = GAP
+    settings.tol_feas = TOLERANCE
     solver = clarabel.DefaultSolver(
         sparse.csc_matrix(sparse.diags_array(quadratic)),
         linear,
