@@ -36,20 +36,20 @@ def solve_slots(problem: Problem, prices: np.ndarray) -> np.ndarray | None:
     amounts = _common_amounts(problem)
     if amounts is None:
         return None
-    robots, _ = prices.shape
-    count = eligible.sum(axis=0)
-    holding = (problem.keeps_on & eligible).sum(axis=0)
-    pins = np.bincount(problem.pinned[problem.pinned >= 0], minlength=len(count))
+    pinned = problem.pinned
+    pins = np.bincount(pinned[pinned >= 0], minlength=len(problem.most))
     useful = np.maximum(
         problem.least, np.ceil(ratio(problem.needs, amounts) - 1e-9).max(axis=1, initial=0)
     ).astype(int)
-    most = np.maximum(problem.most, pins)
-    slots = np.minimum(np.minimum(np.maximum(useful, holding + pins), most), count)
-
+    holding = problem.keeps_on.sum(axis=0) + pins
+    most = np.minimum(np.maximum(problem.most, pins), eligible.sum(axis=0))
+    # Pinned robots take the first slots of their tasks; the others choose among the rest.
+    slots = np.maximum(np.minimum(np.maximum(useful, holding), most) - pins, 0)
+    found = pinned.copy()
     task = np.repeat(np.arange(len(slots)), slots)
     if not len(task):
-        return np.full(robots, -1)
-    number = np.arange(len(task)) - np.repeat(np.cumsum(slots) - slots, slots)
+        return found
+    number = np.arange(len(task)) - np.repeat(np.cumsum(slots) - slots - pins, slots)
     gain = _shortfall(problem, amounts, task, number) - _shortfall(
         problem, amounts, task, number + 1
     )
@@ -58,18 +58,15 @@ def solve_slots(problem: Problem, prices: np.ndarray) -> np.ndarray | None:
     if weight is None:
         return None
 
-    # A robot may stay without a task: one idle column each, at no cost.
-    table = np.full((robots, len(task) + robots), np.inf)
-    table[:, : len(task)] = np.where(
-        eligible[:, task], costs[:, task] - (weight * gain)[None, :], np.inf
-    )
-    idle = np.arange(robots)
-    free = problem.pinned < 0
-    table[idle[free], len(task) + idle[free]] = 0.0
-    for robot in np.flatnonzero(~free):
-        table[robot, : len(task)][task != problem.pinned[robot]] = np.inf
-    _, column = linear_sum_assignment(table)
-    return np.where(column < len(task), task[np.minimum(column, len(task) - 1)], -1)
+    # What costs is left undone: an entry 0 stands for idling. It takes a slot nobody
+    # misses, since another robot could have it in exchange for a slot no better.
+    free = np.flatnonzero(pinned < 0)
+    costs = np.where(eligible, costs, np.inf)[free]
+    table = np.minimum(costs[:, task] - weight * gain, 0.0)
+    robot, slot = linear_sum_assignment(table)
+    busy = table[robot, slot] < 0
+    found[free[robot[busy]]] = task[slot[busy]]
+    return found
 
 
 def _common_amounts(problem: Problem) -> np.ndarray | None:
