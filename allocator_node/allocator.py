@@ -64,6 +64,7 @@ class Allocator:
 
     Attributes:
         orders: What the operator asks for; assign another to change it.
+        assigner: What finds the assignment; its ``budget`` may be changed while running.
     """
 
     def __init__(
@@ -90,7 +91,7 @@ class Allocator:
         count = len(team.robots)
         self._poses = PoseBelief(count)
         self._guidance = Guidance(count)
-        self._assigner = Assigner(budget)
+        self.assigner = Assigner(budget)
         self._commands = np.zeros((count, 4))
         self._since = np.full(count, np.nan)
         self._last: tuple[np.ndarray, np.ndarray, Course] | None = None
@@ -140,7 +141,7 @@ class Allocator:
             problem, enough = self._formulate(view, goals)
             prices = price(problem)
         with _timed(seconds, "assignment"):
-            found = self._assigner.assign(problem, prices)
+            found = self.assigner.assign(problem, prices)
         situation = self._situation(view, enough, prices)
         before, self._assignment = self._assignment, found.task
         reallocations = self._reasons.explain(
@@ -398,7 +399,7 @@ class Allocator:
 
     def close(self) -> None:
         """End what runs beside the steps."""
-        self._assigner.close()
+        self.assigner.close()
 
     def forget(self) -> None:
         """Set every efficacy back to 1."""

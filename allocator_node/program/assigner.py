@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import threading
 import time
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, replace
@@ -16,6 +17,9 @@ from .slots import solve_slots
 
 WORTH_PROVING = 0.25
 """Share of a mean swap cost from which a possible gain is worth another search."""
+
+PAIR_TAKES = 5e-5
+"""Time a search takes for each eligible pair, s: a guess while there is no experience."""
 
 LONGEST_SEARCH = 20.0
 """Time after which a search beside the loop ends with the best it has, s."""
@@ -67,15 +71,18 @@ class Assigner:
             budget: Time a search may take in the loop, s; inf: always in the loop.
         """
         self.budget = budget
-        self._lasted = 0.0
+        self._lasted: float | None = None
         self._proof: Proof | None = None
         self._search: Future[tuple[Proof | None, float]] | None = None
         self._thread: ThreadPoolExecutor | None = None
+        self._closing = threading.Event()
 
     def close(self) -> None:
-        """End the thread, if there is one; a search under way is waited for."""
+        """End the thread, if there is one, and the search under way in it."""
         if self._thread is not None:
+            self._closing.set()
             self._thread.shutdown(wait=True, cancel_futures=True)
+            self._closing.clear()
             self._thread = self._search = None
 
     def assign(self, problem: Problem, prices: np.ndarray) -> Assignment:
@@ -85,8 +92,11 @@ class Assigner:
         task = solve_slots(problem, prices)
         if task is not None:
             return evaluate(problem, prices, task, proven=True)
-        if self._lasted <= self.budget and self._search is None:
-            proof, self._lasted = _prove(problem, prices, problem.previous, self.budget)
+        lasts = self._lasted
+        if lasts is None:
+            lasts = PAIR_TAKES * np.count_nonzero(problem.eligible)
+        if lasts <= self.budget and self._search is None:
+            proof, self._lasted = self._prove(problem, prices, problem.previous, self.budget)
             if proof is not None and proof.found.proven:
                 self._proof = proof
                 return proof.found
@@ -96,8 +106,9 @@ class Assigner:
     def _beside(self, problem: Problem, prices: np.ndarray) -> Assignment:
         """Stand by the standing assignment until a better one is proven."""
         if self._search is not None and self._search.done():
-            proof, self._lasted = self._search.result()
-            self._proof, self._search = proof or self._proof, None
+            search, self._search = self._search, None
+            proof, self._lasted = search.result()
+            self._proof = proof or self._proof
         candidates = [evaluate(problem, prices, repair(problem, prices, problem.previous))]
         key = _key(problem)
         if self._proof is not None:
@@ -116,23 +127,25 @@ class Assigner:
         if self._search is None and gap > WORTH_PROVING * problem.swap_cost.mean():
             if self._thread is None:
                 self._thread = ThreadPoolExecutor(1, thread_name_prefix="assignment")
-            self._search = self._thread.submit(_prove, problem, prices, best.task, LONGEST_SEARCH)
+            self._search = self._thread.submit(
+                self._prove, problem, prices, best.task, LONGEST_SEARCH
+            )
         return replace(best, proven=gap == 0.0, gap=gap)
 
-
-def _prove(
-    problem: Problem, prices: np.ndarray, start: np.ndarray, time_limit: float = np.inf
-) -> tuple[Proof | None, float]:
-    """Search for the optimum; give it, if there was time, and how long that took, s."""
-    begun = time.perf_counter()
-    hint = repair(problem, prices, start)
-    try:
-        answer = Integers(problem, time_limit).solve(prices, hint)
-    except SearchFailed:
-        return None, time.perf_counter() - begun
-    found = evaluate(problem, prices, *answer)
-    costs, constant = _costs(problem, prices)
-    return Proof(_key(problem), costs, constant, found), time.perf_counter() - begun
+    def _prove(
+        self, problem: Problem, prices: np.ndarray, start: np.ndarray, time_limit: float
+    ) -> tuple[Proof | None, float]:
+        """Search for the optimum; give it, if there was time, and how long that took, s."""
+        begun = time.perf_counter()
+        hint = repair(problem, prices, start)
+        try:
+            search = Integers(problem, time_limit, self._closing.is_set)
+            found = evaluate(problem, prices, *search.solve(prices, hint))
+        except SearchFailed:
+            return None, time.perf_counter() - begun
+        costs, constant = _costs(problem, prices)
+        proof = Proof(_key(problem), costs, constant, found)
+        return proof, time.perf_counter() - begun
 
 
 def _costs(problem: Problem, prices: np.ndarray) -> tuple[np.ndarray, float]:

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import time
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import highspy
 import numpy as np
+from highspy.highs import HighsCallbackEvent
 from scipy import sparse
 
 from .assignment import reduced_costs
@@ -41,14 +43,21 @@ class Integers:
     each need. Rows: robots, head counts, needs, and rounding cuts on the needs.
     """
 
-    def __init__(self, problem: Problem, time_limit: float = np.inf) -> None:
+    def __init__(
+        self,
+        problem: Problem,
+        time_limit: float = np.inf,
+        stop: Callable[[], bool] = lambda: False,
+    ) -> None:
         """Build the rows.
 
         Args:
             problem: The period's program.
             time_limit: Time after which a search ends with what it has, s.
+            stop: Asked now and then while a search goes on; True ends it at once.
         """
         self.problem = problem
+        self._stop = stop
         self.deadline = time.perf_counter() + time_limit
         self.robot, self.task = np.nonzero(problem.eligible)
         self.pairs = len(self.robot)
@@ -269,6 +278,8 @@ class Integers:
         if np.isfinite(self.deadline):
             left = self.deadline - time.perf_counter()
             solver.setOptionValue("time_limit", max(left, 0.0))
+        solver.cbSimplexInterrupt += self._interrupt
+        solver.cbMipInterrupt += self._interrupt
         solver.passModel(self._model(objective, high, held))
         solver.run()
         status = solver.getModelStatus()
@@ -298,6 +309,10 @@ class Integers:
         proven = status == highspy.HighsModelStatus.kOptimal
         bound = float(objective @ values) if proven else info.mip_dual_bound
         return Found(values, proven, bound)
+
+    def _interrupt(self, event: HighsCallbackEvent) -> None:
+        if self._stop():
+            event.interrupt()
 
     def _model(self, objective: np.ndarray, high: np.ndarray, held: Held) -> highspy.HighsLp:
         needs = slice(self.pairs + len(self.counts), None)

@@ -40,6 +40,9 @@ TELL_EVERY = 1.0
 SET_BACK = 1.0
 """A clock set back further than this belongs to another run, s."""
 
+SEARCH_SHARE = 0.25
+"""Share of a period that the search for an assignment may take; longer ones go on beside."""
+
 STOP_REPEATS = 3
 """The last command is sent so often: a robot may listen with best effort."""
 
@@ -75,8 +78,7 @@ class Loop:
         self._make = make_allocator
         self._options = options
         self.active = False
-        self.allocator = make_allocator(team, settings, 1 / options.rate)
-        self.allocator.orders = orders
+        self.allocator = self._made(team, settings, orders)
         self._inbox = Inbox(node, team)
         self._outbox = Outbox(node, team)
         self._board = MarkerBoard(team)
@@ -132,6 +134,7 @@ class Loop:
         self._node.destroy_publisher(self._diagnostics)
         if self._state is not None:
             self._state.close()
+        self.allocator.close()
 
     # What the operator asks for
 
@@ -224,9 +227,15 @@ class Loop:
     def _renew(self) -> None:
         """Start beliefs about the present anew; keep what was learned, orders and tasks."""
         old = self.allocator
-        self.allocator = self._make(old.team, old.settings, 1 / self._options.rate)
-        self.allocator.orders = old.orders
+        self.allocator = self._made(old.team, old.settings, old.orders)
         self.allocator.recall(old.memory())
+        old.close()
+
+    def _made(self, team: Team, settings: Settings, orders: Orders) -> Any:
+        period = 1 / self._options.rate
+        allocator = self._make(team, settings, period, SEARCH_SHARE * period)
+        allocator.orders = orders
+        return allocator
 
     def _report(self) -> None:
         self._inbox.notice_publishers()
@@ -308,6 +317,7 @@ class Loop:
         self._health.period = 1 / self._options.rate
         self._health.pause()
         self.allocator.period = 1 / self._options.rate
+        self.allocator.assigner.budget = SEARCH_SHARE / self._options.rate
         if self.active:
             self._set_timer()
 

@@ -123,8 +123,14 @@ class LoopHealth:
 
     def _solvers(self, decision: Decision) -> DiagnosticStatus:
         values = {f"{part}_ms": 1e3 * float(s) for part, s in decision.seconds.items()}
-        values["gap_wh"] = f"{decision.gap:.6f}"
-        return self._status("solvers", Level.OK, "decided", values)
+        proven = np.isfinite(decision.gap)
+        values["gap_wh"] = f"{decision.gap:.6f}" if proven else "not yet proven"
+        message = "the assignment stands until a better one is proven"
+        if decision.gap == 0.0:
+            message = "the assignment is optimal"
+        elif proven:
+            message = f"the assignment is at most {decision.gap:.2g} Wh from the optimum"
+        return self._status("solvers", Level.OK, message, values)
 
     def _robots(self, decision: Decision, silent: Mapping[str, str]) -> DiagnosticStatus:
         values = {"heard": int(np.sum(decision.heard)), "robots": len(decision.robots)} | silent

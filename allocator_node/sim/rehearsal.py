@@ -8,6 +8,7 @@ from dataclasses import replace
 from time import perf_counter
 
 from ..allocator import Allocator
+from ..program import Assigner
 from ..settings import Settings
 from ..team import Team
 from .record import Recorder, Rehearsal
@@ -27,6 +28,7 @@ def rehearse(
     settings: Settings | None = None,
     period: float = 0.1,
     on_progress: Callable[[float], None] | None = None,
+    assigner: Assigner | None = None,
 ) -> Rehearsal:
     """Rehearse a team's work.
 
@@ -38,12 +40,15 @@ def rehearse(
         settings: Weights and times; default as in :class:`Settings`.
         period: Time between two decisions, s.
         on_progress: Called with the simulated time, s, after every period.
+        assigner: What finds the assignments; None: the optimum in every period.
 
     Returns:
         What happened.
     """
     settings = settings or Settings()
     allocator = Allocator(team, settings=settings, period=period)
+    if assigner is not None:
+        allocator.assigner = assigner
     simulated = SimulatedTeam(team, world, seed)
     recorder = Recorder(team, Site(team, settings.height_clearance))
     substeps = math.ceil(period / SUBSTEP - 1e-9)
