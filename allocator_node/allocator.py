@@ -31,6 +31,7 @@ from .program import (
 )
 from .program.formulate import Known, formulate
 from .program.guidance import Course, Guidance, Targets
+from .program.ways import Ways
 from .reasons import Reasons, Situation
 from .settings import Settings
 from .tasks import Goals, Scene
@@ -102,7 +103,12 @@ class Allocator:
         self._features = FeatureBelief(team, self._model.features, self._model.declared)
         self._efficacy = EfficacyBelief(count, len(team.tasks))
         self._reasons = Reasons(self._model, self._say_feature)
-        self._safety = Safety(team, self._model, self._settings)
+        self._survey()
+
+    def _survey(self) -> None:
+        """Look at the site anew: its areas, and the distances to keep."""
+        self._safety = Safety(self.team, self._model, self._settings)
+        self._ways = Ways(self.team, self._safety.reach + self._settings.margin)
 
     @property
     def team(self) -> Team:
@@ -117,7 +123,7 @@ class Allocator:
     @settings.setter
     def settings(self, settings: Settings) -> None:
         self._settings = settings
-        self._safety = Safety(self.team, self._model, settings)
+        self._survey()
 
     # -- one period ---------------------------------------------------------------
 
@@ -227,7 +233,7 @@ class Allocator:
             banned=self._pairs(self.orders.bans),
             previous=self._assignment,
         )
-        return formulate(self._model, self._settings, known, goals)
+        return formulate(self._model, self._settings, known, goals, self._ways)
 
     def _trusted(self, view: _View) -> np.ndarray:
         """Tell where the specialization suffices, or would but for the features, (N, M)."""
@@ -291,7 +297,8 @@ class Allocator:
 
     def _control(self, view: _View, targets: Targets) -> tuple[Course, Control, SafetyRows]:
         model, settings, places = self._model, self._settings, view.places
-        course = self._guidance.course(model, targets, view.poses, view.points, settings)
+        lead = self._ways.lead(view.points, targets.points[:, None], targets.busy[:, None])
+        course = self._guidance.course(model, targets, view.poses, view.points, lead, settings)
         lowest, highest = model.fleet.command_box(
             self._commands, view.dt, view.poses[:, 2], settings.gamma_s
         )
@@ -388,7 +395,6 @@ class Allocator:
             [position.get(int(m), -1) for m in self._assignment], dtype=int
         )
         self._model = model
-        self._safety = Safety(team, model, self._settings)
         self._last = None
 
     def _move(self, moved: MovedGoal) -> None:

@@ -12,6 +12,7 @@ from ..settings import Settings
 from ..tasks import Goals
 from .guidance import offsets
 from .problem import Problem
+from .ways import Ways
 
 
 class GoalTable:
@@ -73,7 +74,7 @@ class Known:
 
 
 def formulate(
-    model: Model, settings: Settings, known: Known, goals: list[Goals]
+    model: Model, settings: Settings, known: Known, goals: list[Goals], ways: Ways
 ) -> tuple[Problem, np.ndarray]:
     """Put the period's program into numbers.
 
@@ -81,14 +82,29 @@ def formulate(
     dwell, becomes a price e = (λ E + urgency · path / (3600 c)) / s; a robot is
     eligible only where it could do that and still reach its dock with its reserve.
 
+    Args:
+        model: The team.
+        settings: Weights and times.
+        known: What is known.
+        goals: Goals of each task.
+        ways: Ways around the site's areas; a pair with none is not eligible.
+
     Returns:
         The program, and where the energy suffices, shape (N, M).
     """
     robots, _ = known.suitability.shape
     table = GoalTable(goals, robots)
-    offset = offsets(model, known.poses, known.points, table.points)
-    distance = np.sqrt((offset**2).sum(axis=2))
-    away = offset / -np.maximum(distance, 1e-9)[:, :, None]
+    may = (
+        (known.suitability > 0)
+        & known.trusted
+        & known.heard[:, None]
+        & ~known.banned
+        & known.active
+    )
+    lead = ways.outlook(known.points, table.points, may)
+    offset = offsets(model, known.poses, known.points, lead.steer)
+    distance = np.hypot(lead.length, offset[..., 2])
+    away = offset / -np.maximum(np.sqrt((offset**2).sum(axis=2)), 1e-9)[:, :, None]
     cruise = model.fleet.cruise[:, None]
     closing = table.pace * np.minimum(settings.gamma * distance, cruise)
     closing[distance <= table.tolerance] = 0.0
@@ -102,14 +118,7 @@ def formulate(
     s = known.suitability * known.efficacy
     dearness = known.dearness[:, None]
     urgent = model.urgency * path / (SECONDS_PER_HOUR * cruise)
-    eligible = (
-        (known.suitability > 0)
-        & known.trusted
-        & known.heard[:, None]
-        & enough
-        & ~known.banned
-        & known.active
-    )
+    eligible = may & enough
     pins = known.pinned & eligible
     pinned = np.full(robots, -1)
     ordered = pins.any(axis=1)
@@ -126,7 +135,8 @@ def formulate(
         pinned=pinned,
         previous=known.previous,
         swap_cost=known.dearness * swapped,
-        energy=(dearness * serving + urgent) / np.maximum(s, settings.s_min),
+        energy=np.where(eligible, dearness * serving + urgent, 0.0)
+        / np.maximum(s, settings.s_min),
         limits=model.fleet.limits,
         jacobians=known.jacobians,
         away=away,

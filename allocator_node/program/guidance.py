@@ -8,6 +8,7 @@ import numpy as np
 
 from ..model import Model
 from ..settings import Settings
+from .ways import Lead
 
 TURN_GAIN = 2.0
 """Turn rate for each radian off the heading demanded, 1/s."""
@@ -59,8 +60,8 @@ class Course:
         away: Unit vector from where to steer to the robot, shape (N, 3).
         demand: Closing speed demanded, m/s, shape (N,); 0: no task row.
         preferred: Preferred commands, shape (N, 4).
-        to_goal: Unit vector from the robot to its goal, shape (N, 3).
-        distance: Distance to the goal, m, shape (N,); 0 without one.
+        to_goal: Unit vector from the robot along its way to the goal, shape (N, 3).
+        distance: Way to the goal, m, shape (N,); 0 without one.
     """
 
     away: np.ndarray
@@ -124,14 +125,15 @@ class Guidance:
         targets: Targets,
         poses: np.ndarray,
         points: np.ndarray,
+        lead: Lead,
         settings: Settings,
     ) -> Course:
-        """Give what each robot should do now, safety aside."""
+        """Give what each robot should do now, safety aside; ``lead`` of shape (N, 1)."""
         fleet = model.fleet
-        offset = offsets(model, poses, points, targets.points)
+        offset = offsets(model, poses, points, lead.steer[:, 0])
         offset[~targets.busy] = 0.0
-        distance = np.linalg.norm(offset, axis=1)
-        to_goal = offset / np.maximum(distance, 1e-9)[:, None]
+        distance = np.where(targets.busy, np.hypot(lead.length[:, 0], offset[:, 2]), 0.0)
+        to_goal = offset / np.maximum(np.linalg.norm(offset, axis=1), 1e-9)[:, None]
 
         turning = np.where(np.isfinite(targets.facing), 2 * fleet.ahead, 0.0)
         limit = np.where(self.standing, 1.5 * targets.tolerance + turning, targets.tolerance)
