@@ -52,6 +52,17 @@ def test_fast_path_and_undivided_statement_agree(seed):
     assert fast.proven
 
 
+@pytest.mark.parametrize("seed", [2583, 2586, 2660, 2966, 3432, 3437, 4457])
+def test_programs_that_once_went_wrong(seed):
+    """Seven of 3000, which HiGHS mistook when it went on from the relaxation's basis."""
+    random = np.random.default_rng(seed)
+    problem = random_problem(random, robots=random.integers(4, 13), tasks=random.integers(2, 6))
+    fast = assign(problem, price(problem))
+    stated = solve_statement(problem)
+    np.testing.assert_allclose(fast.shortfall, stated.shortfall, rtol=1e-6, atol=1e-6)
+    assert fast.cost == pytest.approx(stated.cost, rel=1e-6, abs=1e-9)
+
+
 @pytest.mark.campaign(slice=20, whole=200)
 def test_they_agree_where_only_heads_are_counted(seed):
     random = np.random.default_rng(1000 + seed)

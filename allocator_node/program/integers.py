@@ -291,6 +291,8 @@ class Integers:
         alpha = values[: self.pairs]
         if np.all(np.minimum(alpha, 1 - alpha) < INTEGRAL):
             return Found(values, True, float(objective @ values))
+        # Begun from the relaxation's basis, HiGHS 1.16 at times calls optimal what is not.
+        solver.clearSolver()
         pairs = np.arange(self.pairs, dtype=np.int32)
         kinds = np.full(self.pairs, highspy.HighsVarType.kInteger)
         solver.changeColsIntegrality(self.pairs, pairs, kinds)
