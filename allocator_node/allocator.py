@@ -29,6 +29,7 @@ from .program import (
     price,
     solve_control,
 )
+from .program.courtesy import make_way
 from .program.formulate import Known, formulate
 from .program.guidance import Course, Guidance, Targets
 from .program.ways import Ways
@@ -299,6 +300,14 @@ class Allocator:
         model, settings, places = self._model, self._settings, view.places
         lead = self._ways.lead(view.points, targets.points[:, None], targets.busy[:, None])
         course = self._guidance.course(model, targets, view.poses, view.points, lead, settings)
+        course = make_way(
+            course,
+            view.points,
+            places.heard & ~targets.busy,
+            model.fleet.cruise,
+            self._safety.reach + settings.margin / 2,
+            settings.height_clearance,
+        )
         lowest, highest = model.fleet.command_box(
             self._commands, view.dt, view.poses[:, 2], settings.gamma_s
         )
@@ -318,10 +327,17 @@ class Allocator:
                 demand=np.where(still, 0.0, course.demand),
                 preferred=course.preferred,
                 rows=rows,
-                slack_weight=settings.slack_weight,
+                slack_weight=settings.slack_weight * self._insistence(),
             )
         )
         return course, control, rows
+
+    def _insistence(self) -> np.ndarray:
+        """Give how much each robot insists on its way: double for each priority class, (N,)."""
+        busy = self._assignment >= 0
+        priority = np.zeros(len(busy), dtype=int)
+        priority[busy] = self._model.priority[self._assignment[busy]]
+        return 2.0 ** (priority - 2)
 
     def _remember(self, view: _View, course: Course, control: Control) -> None:
         """Keep what the next step's learning compares its poses with."""

@@ -21,7 +21,7 @@ TRUSTED = 0.6
 FREE = 0.7
 """Share of the expected progress from which a robot that was stuck moves freely again."""
 
-LEAVING = 60.0
+LEAVING = 30.0
 """Time after which it is judged at its next task even if it does not, s."""
 
 

@@ -36,7 +36,7 @@ class ControlProblem:
         preferred: Commands preferred to standing still, only in axes and for
             robots that no task row uses, shape (N, 4).
         rows: Safety rows.
-        slack_weight: ℓ, s²/m².
+        slack_weight: ℓ_i, s²/m², shape (N,): who gives up less where two meet.
     """
 
     jacobians: np.ndarray
@@ -48,7 +48,7 @@ class ControlProblem:
     demand: np.ndarray
     preferred: np.ndarray
     rows: SafetyRows
-    slack_weight: float
+    slack_weight: np.ndarray
 
 
 @dataclass(frozen=True)
@@ -157,7 +157,7 @@ def _coupled(problem: ControlProblem, robots: np.ndarray, used: np.ndarray) -> n
     quadratic = np.concatenate(
         [
             np.full(shares, 2.0),
-            np.full(moving.sum(), 2.0 * problem.slack_weight),
+            2.0 * problem.slack_weight[robots][moving],
             np.full(eased.sum(), 2.0),
         ]
     )

@@ -16,13 +16,13 @@ TURN_GAIN = 2.0
 FACING_DEADBAND = 0.05
 """Heading error that is left alone, rad."""
 
-HELD_BELOW = 0.35
+HELD_BELOW = 0.6
 """Share of the closing speed demanded below which a robot counts as held back."""
 
-PATIENCE = 1.0
+PATIENCE = 0.3
 """How long a robot is held back before it turns aside, s."""
 
-TURN_ASIDE = np.radians(40)
+TURN_ASIDE = np.radians(60)
 """How fast it turns aside then, rad/s."""
 
 MOST_ASIDE = np.radians(110)
@@ -61,6 +61,7 @@ class Course:
         demand: Closing speed demanded, m/s, shape (N,); 0: no task row.
         preferred: Preferred commands, shape (N, 4).
         to_goal: Unit vector from the robot along its way to the goal, shape (N, 3).
+        to_corner: Distance to where to steer now, m, shape (N,).
         distance: Way to the goal, m, shape (N,); 0 without one.
     """
 
@@ -68,6 +69,7 @@ class Course:
     demand: np.ndarray
     preferred: np.ndarray
     to_goal: np.ndarray
+    to_corner: np.ndarray
     distance: np.ndarray
 
 
@@ -133,7 +135,8 @@ class Guidance:
         offset = offsets(model, poses, points, lead.steer[:, 0])
         offset[~targets.busy] = 0.0
         distance = np.where(targets.busy, np.hypot(lead.length[:, 0], offset[:, 2]), 0.0)
-        to_goal = offset / np.maximum(np.linalg.norm(offset, axis=1), 1e-9)[:, None]
+        to_corner = np.linalg.norm(offset, axis=1)
+        to_goal = offset / np.maximum(to_corner, 1e-9)[:, None]
 
         turning = np.where(np.isfinite(targets.facing), 2 * fleet.ahead, 0.0)
         limit = np.where(self.standing, 1.5 * targets.tolerance + turning, targets.tolerance)
@@ -144,7 +147,8 @@ class Guidance:
         demand = np.where(targets.busy & ~self.standing, np.maximum(demand, 0.0), 0.0)
 
         away = -_turned(to_goal, -self.aside)
-        return Course(away, demand, self._turning(model, targets, poses), to_goal, distance)
+        preferred = self._turning(model, targets, poses)
+        return Course(away, demand, preferred, to_goal, to_corner, distance)
 
     def _turning(self, model: Model, targets: Targets, poses: np.ndarray) -> np.ndarray:
         """Prefer to turn to the facing demanded, standing or able to while moving."""

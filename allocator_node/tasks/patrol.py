@@ -81,7 +81,11 @@ class Patrol(Task):
             upcoming = {i: (int(leg) + 1) % count for i, leg in zip(joined, legs, strict=True)}
         for robot in map(int, scene.members):
             corner = upcoming.get(robot, state.next.get(robot, 0))
-            if np.linalg.norm(scene.points[robot, :2] - corners[corner]) <= REACHED:
+            away = np.linalg.norm(scene.points[:, :2] - corners[corner], axis=1)
+            own, away[robot] = away[robot], np.inf
+            # Where somebody stands on the waypoint, coming up beside it must do.
+            taken = away.min() < scene.spacing / 2
+            if own <= REACHED + (scene.spacing if taken else 0.0):
                 corner, passed = (corner + 1) % count, passed + 1
             upcoming[robot] = corner
         return Round(upcoming, passed)
