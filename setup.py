@@ -87,6 +87,7 @@ setup(
         "dev": [
             "colcon-common-extensions>=0.3",
             "hypothesis>=6.90",
+            "jsonschema>=4.10",
             "pyscipopt>=5.0",
             "pytest>=7.4",
             "pytest-timeout>=2.2",
