@@ -66,6 +66,7 @@ setup(
         "annotated-types>=0.6",
         "clarabel>=0.9",
         "cvxpy>=1.5",
+        "daqp>=0.5",
         "highspy>=1.8",
         "matplotlib>=3.6",
         "mcap>=1.1",

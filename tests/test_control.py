@@ -95,7 +95,7 @@ def scene(seed: int) -> ControlProblem:
         demand=np.where(heard, demand, 0.0),
         preferred=preferred,
         rows=rows,
-        slack_weight=100.0,
+        slack_weight=random.choice([100.0, 300.0], COUNT),
     )
 
 
@@ -118,7 +118,7 @@ def dense(
     eased = np.flatnonzero(rows.violated)
     P = np.diag(
         np.concatenate(
-            [2 * R.ravel(), np.full(count, 2 * p.slack_weight), np.full(len(eased), 2.0)]
+            [2 * R.ravel(), 2 * p.slack_weight, np.full(len(eased), 2.0)]
         )
     )
     q = np.concatenate(
@@ -253,7 +253,7 @@ def face_to_face(apart: float) -> ControlProblem:
         demand=np.ones(2),
         preferred=np.zeros((2, 4)),
         rows=rows,
-        slack_weight=100.0,
+        slack_weight=np.full(2, 100.0),
     )
 
 
@@ -276,11 +276,12 @@ def broken(*_):
     raise solvers.SolverFailure("broken on purpose")
 
 
+@pytest.mark.parametrize("next_one", [solvers.solve_with_piqp, solvers.solve_with_clarabel])
 @pytest.mark.parametrize("seed", range(10))
-def test_the_second_solver_takes_over(seed, monkeypatch):
+def test_the_next_solver_takes_over(seed, next_one, monkeypatch):
     problem = scene(seed)
     first = solve_control(problem)
-    monkeypatch.setattr(solvers, "SOLVERS", (broken, solvers.solve_with_clarabel))
+    monkeypatch.setattr(solvers, "SOLVERS", (broken, next_one))
     second = solve_control(problem)
     np.testing.assert_allclose(second.commands, first.commands, atol=5e-5)
     assert not second.stopped.any()
@@ -301,6 +302,7 @@ def test_an_answer_that_is_no_number_is_not_taken(monkeypatch):
         def result(self):
             return type("Result", (), {"x": np.full_like(self._solver.result.x, np.nan)})
 
+    monkeypatch.setattr(solvers, "SOLVERS", (solvers.solve_with_piqp, solvers.solve_with_clarabel))
     real = solvers.piqp.SparseSolver
     monkeypatch.setattr(solvers.piqp, "SparseSolver", Spoilt)
     np.testing.assert_allclose(solve_control(problem).commands, expected, atol=2e-6)
@@ -312,7 +314,7 @@ def test_where_every_solver_fails_those_concerned_stand_and_are_named(monkeypatc
     three = {
         name: np.concatenate([getattr(near, name), getattr(near, name)[:1]])
         for name in ("jacobians", "limits", "lowest", "highest", "round_limit", "away", "demand",
-                     "preferred")
+                     "preferred", "slack_weight")
     }  # fmt: skip
     monkeypatch.setattr(solvers, "SOLVERS", (broken, broken))
     control = solve_control(replace(near, **three))
@@ -325,8 +327,8 @@ def test_a_false_answer_moves_nobody(monkeypatch):
     """A solver that says it solved the QP but did not: full speed at each other."""
     problem = face_to_face(apart=1.3)
 
-    def lying(quadratic, linear, matrix, bound, lowest, highest):
-        answer = np.zeros(len(linear))
+    def lying(qp):
+        answer = np.zeros(len(qp.linear))
         answer[[0, 3]] = 1.0, -1.0
         return answer
 

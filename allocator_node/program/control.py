@@ -5,12 +5,10 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy import sparse
-from scipy.sparse.csgraph import connected_components
 
 from .pricing import least_effort
 from .safety import SafetyRows
-from .solvers import SolverFailure, solve_qp
+from .solvers import QP, SolverFailure, solve_qp
 
 TOO_NEAR = 1e3
 """Price of each m/s by which a row that is violated already is missed."""
@@ -86,20 +84,20 @@ def solve_control(problem: ControlProblem) -> Control:
     if not len(rows):
         return Control(free, free, solved, solved.copy())
     broken = rows.slackness(_velocities(problem, free)) < -1e-9
-    group = _groups(count, rows)
-    solved = np.isin(group, group[rows.first[broken]])
+    solved = _bound_to(rows, rows.first[broken], count)
     commands, stopped = free.copy(), np.zeros(count, dtype=bool)
     if solved.any():
         robots = np.flatnonzero(solved)
+        program = joint(problem, robots)
         try:
-            commands[robots] = _coupled(problem, robots, solved[rows.first])
+            commands[robots] = program.commands(solve_qp(program.qp))
         except SolverFailure:
             commands[robots] = 0.0
             stopped = solved.copy()
     kept = rows.slackness(_velocities(problem, commands)) >= -KEPT
     missed = rows.first[~kept & ~rows.violated]
     if len(missed):
-        stopped |= np.isin(group, group[missed])
+        stopped |= _bound_to(rows, missed, count)
         commands[stopped] = 0.0
     return Control(commands, free, solved, stopped)
 
@@ -125,22 +123,45 @@ def _free(problem: ControlProblem) -> np.ndarray:
     return command
 
 
-def _groups(count: int, rows: SafetyRows) -> np.ndarray:
-    """Label robots bound together by rows with the same number, shape (N,)."""
+def _bound_to(rows: SafetyRows, robots: np.ndarray, count: int) -> np.ndarray:
+    """Tell which robots rows bind to any of the given ones, directly or by others, (N,)."""
+    bound = np.zeros(count, dtype=bool)
+    bound[robots] = True
     pair = rows.second >= 0
-    links = sparse.coo_array(
-        (np.ones(pair.sum()), (rows.first[pair], rows.second[pair])), shape=(count, count)
-    )
-    return connected_components(links, directed=False)[1]
+    first, second = rows.first[pair], rows.second[pair]
+    while len(split := np.flatnonzero(bound[first] != bound[second])):
+        bound[first[split]] = bound[second[split]] = True
+    return bound
 
 
-def _coupled(problem: ControlProblem, robots: np.ndarray, used: np.ndarray) -> np.ndarray:
-    """Solve the QP of some robots and the used rows; shape (n, 4).
+@dataclass(frozen=True)
+class Joint:
+    """The QP of a group of robots; n robots.
 
-    Unknowns, in this order: the commands as shares u = v/limit of the axes a
-    robot has, δ of the robots with a task row, one slack for each row that is
-    violated already.
+    Attributes:
+        qp: The QP. Its unknowns, in this order: the commands as shares u = v/limit of
+            the axes a robot has, δ of the robots with a task row, one slack for each
+            row that is violated already.
+        has: The axes each robot has, shape (n, 4).
+        limits: Greatest size of each command axis, shape (n, 4).
     """
+
+    qp: QP
+    has: np.ndarray
+    limits: np.ndarray
+
+    def commands(self, answer: np.ndarray) -> np.ndarray:
+        """Give the commands in an answer, shape (n, 4)."""
+        shares = int(self.has.sum())
+        commands = np.zeros(self.has.shape)
+        commands[self.has] = np.clip(
+            answer[:shares], self.qp.lowest[:shares], self.qp.highest[:shares]
+        )
+        return commands * self.limits
+
+
+def joint(problem: ControlProblem, robots: np.ndarray) -> Joint:
+    """Give the QP of some robots (n,) with all rows on them; no row binds them to others."""
     count = len(robots)
     limits = problem.limits[robots]
     has = limits > 0
@@ -148,10 +169,10 @@ def _coupled(problem: ControlProblem, robots: np.ndarray, used: np.ndarray) -> n
     shares = int(has.sum())
     moving = problem.demand[robots] > 0
     rows = problem.rows
-    index = np.flatnonzero(used)
-    eased = rows.violated[index]
     position = np.full(len(problem.limits), -1)
     position[robots] = np.arange(count)
+    index = np.flatnonzero(position[rows.first] >= 0)
+    eased = rows.violated[index]
 
     size = shares + int(moving.sum()) + int(eased.sum())
     quadratic = np.concatenate(
@@ -221,9 +242,6 @@ def _coupled(problem: ControlProblem, robots: np.ndarray, used: np.ndarray) -> n
         right.append(np.full(2 * len(who), np.cos(np.pi / 8)))
 
     parts = [np.concatenate(part) for part in zip(*entries, strict=True)]
-    bound = np.concatenate(right)
-    matrix = sparse.csc_array((parts[2], (parts[0], parts[1])), shape=(len(bound), size))
-    answer = solve_qp(quadratic, linear, matrix, bound, lowest, highest)
-    commands = np.zeros((count, 4))
-    commands[has] = np.clip(answer[:shares], lowest[:shares], highest[:shares])
-    return commands * limits
+    return Joint(
+        QP(quadratic, linear, *parts, np.concatenate(right), lowest, highest), has, limits
+    )
