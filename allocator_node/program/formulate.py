@@ -92,7 +92,7 @@ def formulate(
     Returns:
         The program, and where the energy suffices, shape (N, M).
     """
-    robots, _ = known.suitability.shape
+    robots, tasks = known.suitability.shape
     table = GoalTable(goals, robots)
     may = (
         (known.suitability > 0)
@@ -121,8 +121,9 @@ def formulate(
     eligible = may & enough
     pins = known.pinned & eligible
     pinned = np.full(robots, -1)
-    ordered = pins.any(axis=1)
-    pinned[ordered] = pins[ordered].argmax(axis=1)
+    if tasks:
+        ordered = pins.any(axis=1)
+        pinned[ordered] = pins[ordered].argmax(axis=1)
     swapped = way_energy(model, np.full(robots, settings.swap_distance))
     speed = (away * table.velocities).sum(axis=2) if table.moving else np.zeros(distance.shape)
     problem = Problem(
