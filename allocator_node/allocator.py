@@ -10,7 +10,7 @@ from typing import Any
 
 import numpy as np
 
-from .belief import EfficacyBelief, EnergyBelief, FeatureBelief, PoseBelief
+from .belief import EfficacyBelief, EnergyBelief, FeatureBelief, PoseBelief, TargetBelief
 from .belief.efficacy import Step
 from .belief.poses import Places
 from .decision import Decision
@@ -37,7 +37,7 @@ from .reasons import Reasons, Situation
 from .settings import Settings
 from .tasks import Goals, Scene
 from .team import Team
-from .work import Work, scene_of
+from .work import Whereabouts, Work, scene_of
 
 LONGEST_STEP = 1.0
 """Longest time one step counts for; beyond it the loop was paused, s."""
@@ -59,6 +59,7 @@ class _View:
     health: np.ndarray
     capability: np.ndarray
     suitability: np.ndarray
+    topics: Mapping[str, tuple[np.ndarray, np.ndarray]]
 
 
 class Allocator:
@@ -92,6 +93,7 @@ class Allocator:
         self._now: float | None = None
         count = len(team.robots)
         self._poses = PoseBelief(count)
+        self._topics = TargetBelief()
         self._guidance = Guidance(count)
         self.assigner = Assigner(budget)
         self._commands = np.zeros((count, 4))
@@ -185,7 +187,8 @@ class Allocator:
         capability = model.capability(health)
         return _View(
             now, dt, places, poses, points, model.fleet.jacobians(poses), health, capability,
-             model.suitability(capability),
+            model.suitability(capability),
+            self._topics.update(observation.targets, now, settings.pose_timeout),
         )  # fmt: skip
 
     def _learn(
@@ -213,9 +216,14 @@ class Allocator:
         members = np.flatnonzero((self._assignment == m) & view.places.heard)
         reach = self._safety.reach[members].max(initial=0.0)
         spacing = 2 * reach + 1.5 * self._settings.margin
+        where = Whereabouts(
+            self._model, view.poses, view.places.velocities, view.places.known,
+            self._assignment, view.topics,
+        )  # fmt: skip
         return scene_of(
-            self._model, view.now, view.poses, view.points, view.capability, members, m, spacing
-        )
+            self._model, view.now, view.poses, view.points, view.capability, members, m, spacing,
+            where.find,
+        )  # fmt: skip
 
     def _formulate(self, view: _View, goals: list[Goals]) -> tuple[Problem, np.ndarray]:
         known = Known(
@@ -275,7 +283,8 @@ class Allocator:
         self._since[changed] = view.now
         self._guidance.restart(changed)
         self._efficacy.reassigned(changed, before[changed], view.now, self._settings)
-        for m in (set(before[changed]) | set(self._assignment[changed])) - {-1}:
+        groups = (set(before[changed]) | set(self._assignment[changed])) - {-1}
+        for m in groups | self._work.keeping_to(groups):
             goals[m] = self._work.advance(int(m), self._scene(view, m))
 
     def _targets(self, goals: list[Goals], heard: np.ndarray) -> Targets:
@@ -324,7 +333,7 @@ class Allocator:
                 highest=highest,
                 round_limit=model.fleet.round_limit,
                 away=course.away,
-                demand=np.where(still, 0.0, course.demand),
+                demand=np.where(still | course.exact, 0.0, course.demand),
                 preferred=course.preferred,
                 rows=rows,
                 slack_weight=settings.slack_weight * self._insistence(),
@@ -378,6 +387,7 @@ class Allocator:
             charge=self._energy.charge.copy(),
             charge_estimated=self._energy.estimated.copy(),
             finished=self._work.finished(),
+            progress=self._work.progress(),
             reallocations=reallocations,
             shortfalls=shortfalls(model, found),
             notices=tuple(notices(model, view.places, enough, control, rows)),

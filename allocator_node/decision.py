@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from enum import Enum
 
 import numpy as np
@@ -101,6 +101,9 @@ class Decision:
         notices: What a person should know now; empty when all is well.
         seconds: Part of the step to the time it took, s.
         gap: Bound on how far the standing assignment is from the optimum, Wh.
+        progress: Share done of the tasks that have such a thing.
+        activity: What each robot does: "working", "idle", "to dock", "queueing",
+            "charging", "held" or "silent".
     """
 
     time: float
@@ -123,6 +126,8 @@ class Decision:
     notices: tuple[Notice, ...]
     seconds: Mapping[str, float]
     gap: float = 0.0
+    progress: Mapping[str, float] = field(default_factory=dict)
+    activity: tuple[str, ...] = ()
 
     @property
     def specialization(self) -> np.ndarray:

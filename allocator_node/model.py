@@ -28,6 +28,7 @@ class Model:
         docks: Docks, m, shape (N, 2); 0 without one.
         has_dock: Which robots have one, shape (N,).
         fleet: The drives.
+        itself: Where a task keeps to that very robot, shape (N, M).
     """
 
     def __init__(self, team: Team) -> None:
@@ -72,6 +73,10 @@ class Model:
         self.docks = np.array([robot.dock or (0.0, 0.0) for robot in robots]).reshape(-1, 2)
         self.has_dock = np.array([robot.dock is not None for robot in robots])
         self.fleet = Fleet([robot.drive for robot in robots])
+        targets = [getattr(task.target, "robot", None) for task in tasks]
+        self.itself = np.array(
+            [[name == target for target in targets] for name in self.robots], dtype=bool
+        ).reshape(len(robots), len(tasks))
 
     def capability(self, health: np.ndarray) -> np.ndarray:
         """Give c_ik = max over ways w of k: g_w · min over f in w of φ_if.
@@ -92,8 +97,8 @@ class Model:
     def suitability(self, capability: np.ndarray) -> np.ndarray:
         """Give a_im = Σ_k T_mk c_ik / Σ_k T_mk, capped at 1; 1 where m needs nothing.
 
-        It is 0 if some ``each`` capability of m has c_ik = 0, or if m has needs
-        and robot i contributes to none of them.
+        It is 0 if some ``each`` capability of m has c_ik = 0, if m has needs
+        and robot i contributes to none of them, or if m keeps to robot i itself.
 
         Args:
             capability: c_ik, shape (N, K).
@@ -108,5 +113,5 @@ class Model:
             capability @ self.needs[needy].T / total[needy], 1.0
         )
         lacking = (capability <= 0).astype(int) @ self.each.T.astype(int)
-        suitability[lacking > 0] = 0.0
+        suitability[(lacking > 0) | self.itself] = 0.0
         return suitability

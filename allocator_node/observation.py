@@ -27,6 +27,19 @@ class MovedGoal:
 
 
 @dataclass(frozen=True)
+class TargetPose:
+    """The newest pose on a topic that a task keeps to.
+
+    Attributes:
+        pose: x, y, z (m) and heading (rad), shape (4,); a NaN heading is not known.
+        time: When it held, s.
+    """
+
+    pose: np.ndarray
+    time: float
+
+
+@dataclass(frozen=True)
 class Observation:
     """All that was heard since the last decision, robots in the team's order.
 
@@ -41,6 +54,7 @@ class Observation:
         health: Diagnostic statuses that arrived since the last observation.
         goals: Goals moved since the last observation.
         quality: (robot, task) to a measured quality 0..1 that arrived since then.
+        targets: Topic to the newest pose on it, for topics that tasks keep to.
     """
 
     poses: np.ndarray
@@ -51,6 +65,7 @@ class Observation:
     health: tuple[HealthReport, ...] = ()
     goals: tuple[MovedGoal, ...] = ()
     quality: Mapping[tuple[str, str], float] = field(default_factory=dict)
+    targets: Mapping[str, TargetPose] = field(default_factory=dict)
 
     @classmethod
     def nothing(cls, count: int) -> Observation:

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from collections.abc import Callable, Iterable, Mapping
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 
 from .model import Model
-from .tasks import Goals, Scene, Task
+from .tasks import Goals, Located, Scene, Target, Task
 from .team import Team
 
 
@@ -29,6 +30,23 @@ class Work:
         name, task = list(self.team.tasks.items())[m]
         self._states[name] = task.advance(self._states[name], scene)
         return task.goals(self._states[name], scene)
+
+    def progress(self) -> dict[str, float]:
+        """Give the share that is done of the tasks that have such a thing."""
+        shares = {
+            name: task.progress(self._states[name]) for name, task in self.team.tasks.items()
+        }
+        return {name: share for name, share in shares.items() if share is not None}
+
+    def keeping_to(self, tasks: Iterable[int]) -> set[int]:
+        """Give the tasks that keep to whoever does one of these."""
+        names = list(self.team.tasks)
+        looked_at = {names[m] for m in tasks}
+        return {
+            m
+            for m, task in enumerate(self.team.tasks.values())
+            if isinstance(task.target, Target) and task.target.task in looked_at
+        }
 
     def finished(self) -> frozenset[str]:
         """Give the names of the tasks that have come to their end."""
@@ -63,6 +81,47 @@ class Work:
             self._states[name] = self.team.tasks[name].ended()
 
 
+@dataclass(frozen=True)
+class Whereabouts:
+    """Where everything is that a task may keep to.
+
+    Attributes:
+        model: The team.
+        poses: Poses of the robots, shape (N, 4).
+        velocities: Their velocities in the site frame, shape (N, 4).
+        known: Robots ever heard, shape (N,).
+        assignment: Task of each robot, −1: none, shape (N,).
+        topics: Topic to pose and velocity, each (4,).
+    """
+
+    model: Model
+    poses: np.ndarray
+    velocities: np.ndarray
+    known: np.ndarray
+    assignment: np.ndarray
+    topics: Mapping[str, tuple[np.ndarray, np.ndarray]]
+
+    def find(self, target: Target) -> Located | None:
+        """Give where a target is; None where it is not known, or nobody does the task."""
+        if target.topic is not None:
+            if target.topic not in self.topics:
+                return None
+            pose, velocity = self.topics[target.topic]
+            # A heading nobody told is that of the site's axes.
+            return Located(pose[:3], float(np.nan_to_num(pose[3])), velocity)
+        if target.robot is not None:
+            robots = np.array([self.model.robots.index(target.robot)])
+        else:
+            robots = np.flatnonzero(self.assignment == self.model.tasks.index(target.task))
+        robots = robots[self.known[robots]]
+        if not len(robots):
+            return None
+        poses = self.poses[robots]
+        heading = np.angle(np.exp(1j * poses[:, 3]).sum())
+        at = np.array([*poses[:, :2].mean(axis=0), np.nan])
+        return Located(at, float(heading), self.velocities[robots].mean(axis=0))
+
+
 def scene_of(
     model: Model,
     now: float,
@@ -72,6 +131,7 @@ def scene_of(
     members: np.ndarray,
     m: int,
     spacing: float,
+    find: Callable[[Target], Located | None],
 ) -> Scene:
     """Give what task m sees of the team.
 
@@ -84,13 +144,17 @@ def scene_of(
         members: Indices of the robots on the task, shape (n,).
         m: Index of the task.
         spacing: Distance to leave between two places of a group, m.
+        find: Where a target is.
     """
 
     def suffices(robots: np.ndarray) -> bool:
         enough = (capability[robots].sum(axis=0) >= model.needs[m] - 1e-9).all()
         return bool(enough and len(robots) >= max(model.least[m], 1))
 
-    return Scene(now, points, poses[:, 3], model.fleet.ahead, members, spacing, suffices)
+    fleet = model.fleet
+    return Scene(
+        now, points, poses[:, 3], fleet.ahead, members, spacing, suffices, fleet.cruise, find
+    )
 
 
 def _same_work(old: Task, new: Task) -> bool:

@@ -1,8 +1,9 @@
-"""What is known now: poses, features, energy, efficacy."""
+"""What is known now: poses, targets, features, energy, efficacy."""
 
 from .efficacy import EfficacyBelief
 from .energy import EnergyBelief
 from .features import FeatureBelief
 from .poses import PoseBelief
+from .targets import TargetBelief
 
-__all__ = ["EfficacyBelief", "EnergyBelief", "FeatureBelief", "PoseBelief"]
+__all__ = ["EfficacyBelief", "EnergyBelief", "FeatureBelief", "PoseBelief", "TargetBelief"]

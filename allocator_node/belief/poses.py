@@ -21,12 +21,14 @@ class Places:
         known: Robots ever heard, shape (N,).
         heard: Robots heard within the timeout, shape (N,).
         age: Age of the last pose, s, shape (N,); inf: never heard.
+        velocities: m/s three times, rad/s, shape (N, 4); 0 for robots not heard.
     """
 
     poses: np.ndarray
     known: np.ndarray
     heard: np.ndarray
     age: np.ndarray
+    velocities: np.ndarray
 
 
 class PoseBelief:
@@ -60,7 +62,8 @@ class PoseBelief:
         ahead = np.where(heard, np.where(known, age, 0.0), 0.0)[:, None]
         carried = self.poses + ahead * self.velocities
         carried[:, 3] = np.angle(np.exp(1j * carried[:, 3]))
-        return Places(carried, known, heard, age)
+        velocities = np.where(heard[:, None], self.velocities, 0.0)
+        return Places(carried, known, heard, age, velocities)
 
     def _learn_velocity(
         self, observation: Observation, times: np.ndarray, fresh: np.ndarray

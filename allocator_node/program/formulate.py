@@ -26,18 +26,18 @@ class GoalTable:
         count = len(goals)
         points = np.empty((count, robots, 3))
         path = np.full((count, robots), np.nan)
-        pace = np.empty((count, robots))
+        pace, tolerance = np.empty((count, robots)), np.empty((count, robots))
         self.moving = any(np.any(goal.velocities) for goal in goals)
         velocities = np.zeros((count, robots if self.moving else 1, 3))
         for m, goal in enumerate(goals):
             points[m] = goal.points
             if goal.path is not None:
                 path[m] = goal.path
-            pace[m] = goal.pace
-            velocities[m] = goal.velocities
+            pace[m], tolerance[m] = goal.pace, goal.tolerance
+            if self.moving:
+                velocities[m] = goal.velocities
         self.points, self.velocities = points.swapaxes(0, 1), velocities.swapaxes(0, 1)
-        self.path, self.pace = path.T, pace.T
-        self.tolerance = np.array([goal.tolerance for goal in goals])
+        self.path, self.pace, self.tolerance = path.T, pace.T, tolerance.T
         self.dwell = np.array([goal.dwell for goal in goals])
 
 

@@ -30,6 +30,12 @@ MOST_ASIDE = np.radians(110)
 TURN_BACK = 2.5
 """Time constant with which it turns back once it moves, s."""
 
+MOVING = 0.1
+"""Speed from which a goal is kept up with; slower ones are caught up with, m/s."""
+
+HORIZON = 2.0
+"""A robot that keeps up with a goal needs its way free for so long, s."""
+
 
 @dataclass(frozen=True)
 class Targets:
@@ -63,6 +69,8 @@ class Course:
         to_goal: Unit vector from the robot along its way to the goal, shape (N, 3).
         to_corner: Distance to where to steer now, m, shape (N,).
         distance: Way to the goal, m, shape (N,); 0 without one.
+        exact: Robots that keep up with a moving goal, shape (N,): their preferred
+            commands already are the way demanded, so no task row is needed.
     """
 
     away: np.ndarray
@@ -71,6 +79,7 @@ class Course:
     to_goal: np.ndarray
     to_corner: np.ndarray
     distance: np.ndarray
+    exact: np.ndarray
 
 
 def offsets(model: Model, poses: np.ndarray, points: np.ndarray, goals: np.ndarray) -> np.ndarray:
@@ -146,9 +155,24 @@ class Guidance:
         demand = closing + (to_goal * targets.velocities).sum(axis=1)
         demand = np.where(targets.busy & ~self.standing, np.maximum(demand, 0.0), 0.0)
 
+        exact = self.standing & (np.linalg.norm(targets.velocities, axis=1) > MOVING)
+        if exact.any():
+            wanted = targets.velocities[exact] + settings.gamma * offset[exact]
+            wanted[:, 2] *= fleet.flies[exact]
+            demand[exact] = np.linalg.norm(wanted, axis=1)
+            to_goal[exact] = wanted / np.maximum(demand[exact], 1e-9)[:, None]
+            to_corner[exact] = HORIZON * demand[exact]
+
         away = -_turned(to_goal, -self.aside)
         preferred = self._turning(model, targets, poses)
-        return Course(away, demand, preferred, to_goal, to_corner, distance)
+        if exact.any():
+            preferred[exact] = _commands(
+                fleet.jacobians(poses)[exact],
+                fleet.limits[exact],
+                -demand[exact, None] * away[exact],
+                preferred[exact],
+            )
+        return Course(away, demand, preferred, to_goal, to_corner, distance, exact)
 
     def _turning(self, model: Model, targets: Targets, poses: np.ndarray) -> np.ndarray:
         """Prefer to turn to the facing demanded, standing or able to while moving."""
@@ -170,6 +194,27 @@ class Guidance:
         impatient = self.held > PATIENCE
         self.aside[impatient] = np.minimum(self.aside[impatient] + TURN_ASIDE * dt, MOST_ASIDE)
         self.aside[~held] *= np.exp(-dt / TURN_BACK)
+
+
+def _commands(
+    jacobians: np.ndarray, limits: np.ndarray, wanted: np.ndarray, turning: np.ndarray
+) -> np.ndarray:
+    """Give the commands of least effort with G v = wanted, slower where limits demand it.
+
+    With R = diag(1/limit²), v = R⁻¹ Gᵀ (G R⁻¹ Gᵀ)⁺ wanted. Axes that do not
+    move the control point turn as asked.
+
+    Args:
+        jacobians: G, shape (n, 3, 4).
+        limits: Greatest size of each command axis, shape (n, 4).
+        wanted: Velocities, m/s, shape (n, 3).
+        turning: Commands for the other axes, shape (n, 4).
+    """
+    speed = jacobians * limits[:, None, :]
+    shares = np.matmul(np.linalg.pinv(speed), wanted[:, :, None])[:, :, 0]
+    # All axes slow down alike: the direction stays.
+    shares /= np.maximum(np.abs(shares).max(axis=1, keepdims=True), 1.0)
+    return np.where(np.abs(speed).max(axis=1) > 0, shares * limits, turning)
 
 
 def _turned(vectors: np.ndarray, angles: np.ndarray) -> np.ndarray:

@@ -4,11 +4,20 @@ from collections.abc import Mapping
 
 from ..files.plugins import extended
 from .base import Goals, Scene, Task, distance
+from .cover import Cover
+from .encircle import Encircle
+from .follow import Follow
+from .formation import Formation
 from .patrol import Patrol
+from .sweep import Sweep
+from .target import Located, Target
 from .visit import Visit
 from .watch import Watch
 
-KINDS: dict[str, type[Task]] = {kind.kind: kind for kind in (Visit, Patrol, Watch)}
+KINDS: dict[str, type[Task]] = {
+    kind.kind: kind
+    for kind in (Visit, Patrol, Watch, Sweep, Cover, Encircle, Follow, Formation)
+}
 """Name in a team file to kind; other packages add theirs by the entry point
 ``allocator_node.tasks``."""
 
@@ -24,9 +33,16 @@ def known_kinds() -> Mapping[str, type[Task]]:
 
 __all__ = [
     "KINDS",
+    "Cover",
+    "Encircle",
+    "Follow",
+    "Formation",
     "Goals",
+    "Located",
     "Patrol",
     "Scene",
+    "Sweep",
+    "Target",
     "Task",
     "Visit",
     "Watch",

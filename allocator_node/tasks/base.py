@@ -10,7 +10,8 @@ from typing import Annotated, Any, ClassVar
 import numpy as np
 from annotated_types import Ge, Le
 
-from ..team import Checked, HeadCount, Name, NonNegative, Positive
+from ..team import Checked, HeadCount, Name, NonNegative, Point, Positive
+from .target import Located, Target
 
 
 @dataclass(frozen=True)
@@ -25,6 +26,8 @@ class Scene:
         members: Indices of the robots on the task, increasing, shape (n,).
         spacing: Distance to leave between two places of a group, m.
         suffices: Whether robots with these indices meet head count and needs.
+        cruise: Cruising speeds, m/s, shape (N,).
+        find: Where a target is now; None where that is not known.
     """
 
     now: float
@@ -34,6 +37,12 @@ class Scene:
     members: np.ndarray
     spacing: float
     suffices: Callable[[np.ndarray], bool]
+    cruise: np.ndarray
+    find: Callable[[Target], Located | None]
+
+    def locate(self, target: Point | Target) -> Located | None:
+        """Give where a target or a point of the site is; None where that is not known."""
+        return self.find(target) if isinstance(target, Target) else Located.fixed(target)
 
 
 @dataclass(frozen=True)
@@ -44,7 +53,8 @@ class Goals:
 
     Attributes:
         points: Goal points p*, m, shape (3,) or (N, 3); a NaN height means "any".
-        tolerance: Distance at which a robot stands, m; 0 for a goal passed through.
+        tolerance: Distance at which a robot stands, m, shape () or (N,); 0 for a goal
+            passed through. Within it a robot keeps up with a goal that moves.
         dwell: Time to serve at the goal, s, for a task that ends.
         path: Way to the place of work, m, shape (N,): what the energy is priced
             by; None: straight to the goal point.
@@ -54,7 +64,7 @@ class Goals:
     """
 
     points: np.ndarray
-    tolerance: float
+    tolerance: np.ndarray | float
     dwell: float = 0.0
     path: np.ndarray | None = None
     velocities: np.ndarray | float = 0.0
@@ -97,6 +107,11 @@ class Task(Checked, abc.ABC):
         """Whether it comes to an end of its own, so that others may wait for it."""
         return False
 
+    @property
+    def target(self) -> Point | Target | None:
+        """What it keeps to, where that may move."""
+        return None
+
     @abc.abstractmethod
     def begin(self) -> Any:
         """Give the state before anything is done."""
@@ -117,9 +132,18 @@ class Task(Checked, abc.ABC):
         """Tell whether the task has come to its end; standing tasks never do."""
         return False
 
+    def progress(self, state: Any) -> float | None:
+        """Give the share 0..1 that is done; None where there is no such thing."""
+        return None
+
     def ended(self) -> Any:
         """Give the state of a task that has come to its end; standing tasks begin anew."""
         return self.begin()
+
+
+def hold(scene: Scene) -> Goals:
+    """Let every robot stay where it is: what the task keeps to is not known."""
+    return Goals(scene.points.copy(), tolerance=np.inf, path=np.zeros(len(scene.points)))
 
 
 def distance(points: np.ndarray, others: np.ndarray) -> np.ndarray:

@@ -1,0 +1,264 @@
+"""Cover an area once, in lanes as wide as the tool."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+from typing import Annotated
+
+import numpy as np
+import shapely
+from annotated_types import Ge, Le
+from scipy.optimize import linear_sum_assignment
+
+from ..team import Polygon, Positive
+from .base import Goals, Scene, Task
+from .lanes import Lanes, lanes_of
+
+NEAR = 0.1
+"""Distance at which a robot is at the beginning of a lane, m; it begins and ends so
+far outside the area, so that nothing is left there."""
+
+ASTRAY = 0.1
+"""Share of the tool's width a robot may be beside its lane for its work to count."""
+
+GAP = 0.5
+"""Length of lane a robot may leave out before it has to go back, m."""
+
+ON_LANE = 0.5
+"""Distance from its lane within which a robot is led along it, m."""
+
+SLOWEST = 0.15
+"""Speed at the end of a lane, m/s."""
+
+PATIENCE = 20.0
+"""Time without progress after which another lane is tried first, s."""
+
+
+@dataclass(frozen=True)
+class Pass:
+    """What one member does.
+
+    Attributes:
+        lane: Index of the lane.
+        forward: Whether it goes from the lane's first point to its last.
+        working: Whether it is on the lane; else on the way there.
+        at: Where it is along the lane, m.
+        since: When it last made progress, s.
+        nearest: Least distance so far to where it begins, m.
+    """
+
+    lane: int
+    forward: bool
+    since: float
+    working: bool = False
+    at: float = 0.0
+    nearest: float = np.inf
+
+
+@dataclass(frozen=True)
+class Swept:
+    """What is done, and who does what.
+
+    Attributes:
+        left: Part of each lane still to do, from and to, m along it; empty: done.
+        passes: Member to what it does; None: nothing is left for it.
+        shares: Member to its lanes.
+        upward: Whether everybody goes through its share from the first lane on.
+        put_off: Lanes on which somebody could not go on; they are tried again last.
+    """
+
+    left: tuple[tuple[float, float], ...]
+    passes: Mapping[int, Pass | None] = field(default_factory=dict)
+    shares: Mapping[int, tuple[int, ...]] = field(default_factory=dict)
+    upward: bool = True
+    put_off: frozenset[int] = frozenset()
+
+    def todo(self) -> list[int]:
+        """Give the lanes that are not done."""
+        return [lane for lane, (low, high) in enumerate(self.left) if high > low]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Sweep(Task):
+    """Finishes when every lane is done; what is done stays done, whoever did it.
+
+    The group shares out the lanes that are left in blocks of equal length, anew
+    whenever somebody joins, leaves, or has nothing left to do.
+
+    Attributes:
+        area: Area to cover, m; lanes run along its longest side.
+        lane_width: Width of the tool, which is at the robot's control point, m.
+        overlap: Least share of the width that neighbouring lanes have in common.
+    """
+
+    kind = "sweep"
+
+    area: Polygon
+    lane_width: Positive
+    overlap: Annotated[float, Ge(0), Le(0.9)] = 0.1
+
+    @property
+    def ends(self) -> bool:
+        """A sweep ends."""
+        return True
+
+    @cached_property
+    def lanes(self) -> Lanes:
+        """The lanes."""
+        return lanes_of(self.area, self.lane_width, self.overlap)
+
+    def begin(self) -> Swept:
+        """Give the state with everything to do."""
+        return Swept(tuple((-NEAR, float(length) + NEAR) for length in self.lanes.length))
+
+    def ended(self) -> Swept:
+        """Give the state with nothing left to do."""
+        return Swept(((0.0, 0.0),) * len(self.lanes.length))
+
+    def finished(self, state: Swept) -> bool:
+        """Tell whether every lane is done."""
+        return not state.todo()
+
+    def progress(self, state: Swept) -> float:
+        """Give the share of the lanes' length that is done."""
+        left = sum(high - low for low, high in state.left)
+        return 1.0 - left / float((self.lanes.length + 2 * NEAR).sum())
+
+    def advance(self, state: Swept, scene: Scene) -> Swept:
+        """Take off what was swept since, and give whoever is free the next lane."""
+        left, passes, put_off = list(state.left), {}, set(state.put_off)
+        for robot in map(int, scene.members):
+            before = state.passes.get(robot)
+            passes[robot] = before and self._worked(before, left, scene, robot)
+            if before and passes[robot] and scene.now - passes[robot].since > PATIENCE:
+                passes[robot] = None
+                put_off.add(before.lane)
+        state = replace(state, left=tuple(left), passes=passes, put_off=frozenset(put_off))
+        if set(state.shares) != set(passes):
+            state = self._shared_out(state, scene)
+        state = self._next(state, scene)
+        begun = {done.lane for done in state.passes.values() if done}
+        if None in state.passes.values() and set(state.todo()) - begun:
+            state = self._next(self._shared_out(state, scene), scene)
+        return state
+
+    def _worked(
+        self, before: Pass, left: list[tuple[float, float]], scene: Scene, robot: int
+    ) -> Pass | None:
+        """Go on with a pass, taking off what is done of its lane; None when that is all."""
+        low, high = left[before.lane]
+        at, beside = self.lanes.seen(before.lane, scene.points[robot, :2])
+        ahead = at - low if before.forward else high - at
+        working, since, nearest = before.working, before.since, before.nearest
+        if not working:
+            away = float(np.hypot(ahead, beside))
+            working = away <= min(NEAR, self._astray)
+            if away < nearest - NEAR / 2:
+                since, nearest = scene.now, away
+        elif abs(beside) <= self._astray and 0 < ahead <= GAP:
+            low, high = (at, high) if before.forward else (low, at)
+            since = scene.now
+        if high <= low:
+            low = high = 0.0
+        left[before.lane] = (low, high)
+        after = replace(before, working=working, at=at, since=since, nearest=nearest)
+        return after if high > low else None
+
+    @property
+    def _astray(self) -> float:
+        """Distance beside a lane from which work does not count, m."""
+        return ASTRAY * self.lane_width
+
+    def _next(self, state: Swept, scene: Scene) -> Swept:
+        """Give members without a lane the next of their own share."""
+        passes, todo, put_off = dict(state.passes), set(state.todo()), state.put_off
+        for robot, done in passes.items():
+            mine = [lane for lane in state.shares[robot] if lane in todo]
+            if done is None and mine:
+                fresh = [lane for lane in mine if lane not in put_off]
+                put_off = put_off if fresh else put_off - set(mine)
+                lane = (fresh or mine)[0 if state.upward else -1]
+                forward = self._forward(state, lane, scene.points[robot, :2])
+                passes[robot] = Pass(lane, forward, scene.now)
+        return replace(state, passes=passes, put_off=put_off)
+
+    def _forward(self, state: Swept, lane: int, point: np.ndarray) -> bool:
+        """Tell whether a lane's first end is the nearer one."""
+        away = np.linalg.norm(self._ends(state, lane) - point, axis=1)
+        return bool(away[0] <= away[1])
+
+    def _ends(self, state: Swept, lane: int) -> np.ndarray:
+        """Give both ends of what is left of a lane, m, shape (2, 2)."""
+        return self.lanes.start[lane] + np.outer(state.left[lane], self.lanes.along)
+
+    def _shared_out(self, state: Swept, scene: Scene) -> Swept:
+        """Share the lanes that are left out anew; whoever is on a lane of its share stays."""
+        members, todo = list(state.passes), state.todo()
+        if not members or not todo:
+            return replace(state, shares={robot: () for robot in members})
+        blocks = self._blocks(state, todo, len(members))
+        best = None
+        for upward in (True, False):
+            cost = np.array(
+                [[self._way(state, robot, b, upward, scene) for b in blocks] for robot in members]
+            )
+            rows, columns = linear_sum_assignment(cost)
+            total = cost[rows, columns].sum()
+            if best is None or total < best[0]:
+                taken = {members[r]: blocks[c] for r, c in zip(rows, columns, strict=True)}
+                best = total, upward, taken
+        _, upward, shares = best
+        passes = {
+            robot: done if done and done.lane in shares[robot] else None
+            for robot, done in state.passes.items()
+        }
+        return replace(state, passes=passes, shares=shares, upward=upward)
+
+    def _blocks(self, state: Swept, todo: list[int], count: int) -> list[tuple[int, ...]]:
+        """Part lanes into blocks of neighbours of about equal length; some may be empty."""
+        length = np.array([state.left[lane][1] - state.left[lane][0] for lane in todo])
+        middle = np.cumsum(length) - length / 2
+        part = np.minimum((middle * count / length.sum()).astype(int), count - 1)
+        return [tuple(np.array(todo)[part == k].tolist()) for k in range(count)]
+
+    def _way(
+        self, state: Swept, robot: int, block: tuple[int, ...], upward: bool, scene: Scene
+    ) -> float:
+        """Give a robot's way to the first lane of a block, m; none to a lane it is on."""
+        done = state.passes[robot]
+        if not block or (done and done.lane in block):
+            return 0.0
+        ends = self._ends(state, block[0] if upward else block[-1])
+        return float(np.linalg.norm(ends - scene.points[robot, :2], axis=1).min())
+
+    def goals(self, state: Swept, scene: Scene) -> Goals:
+        """Lead members on a lane along it, others to the end they begin at."""
+        count = len(scene.points)
+        points, velocities = np.full((count, 3), np.nan), np.zeros((count, 3))
+        tolerance = np.zeros(count)
+        lanes = state.todo() or range(len(state.left))
+        ends = np.concatenate([self._ends(state, lane) for lane in lanes])
+        apart = scene.points[:, None, :2] - ends[None]
+        points[:, :2] = ends[np.linalg.norm(apart, axis=2).argmin(axis=1)]
+        for robot, done in state.passes.items():
+            if done is None:
+                points[robot, :2] = scene.points[robot, :2]
+                continue
+            low, high = state.left[done.lane]
+            begin, end, sign = (low, high, 1.0) if done.forward else (high, low, -1.0)
+            points[robot, :2] = self.lanes.at(done.lane, begin)
+            if done.working and sign * (done.at - begin) <= GAP:
+                speed = min(sign * (end - done.at) + SLOWEST, scene.cruise[robot])
+                points[robot, :2] = self.lanes.at(done.lane, done.at)
+                velocities[robot, :2] = sign * max(speed, SLOWEST) * self.lanes.along
+                tolerance[robot] = ON_LANE
+        away = shapely.distance(shapely.Polygon(self.area), shapely.points(scene.points[:, :2]))
+        return Goals(points, tolerance, path=away, velocities=velocities)
+
+    def moved(self, at: tuple[float, float, float], heading: float | None) -> Sweep:
+        """Give the same area with its middle at another place, with everything to do."""
+        middle = shapely.Polygon(self.area).centroid
+        dx, dy = at[0] - middle.x, at[1] - middle.y
+        return replace(self, area=tuple((x + dx, y + dy) for x, y in self.area))
