@@ -169,6 +169,8 @@ class Reasons:
                 reason, task = own.get(m) or shared, self.model.tasks[m]
                 changes.append(Reallocation(time, task, *groups, reason.cause, reason.detail))
             decided = decided.updated(now, robots, tasks)
+        # Robots without a task are decided upon anew in every period.
+        decided = decided.updated(now, np.flatnonzero(after < 0), ())
         self.chosen, self.last = decided, now
         return tuple(changes)
 
