@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import ast
 import re
+import subprocess
 import sys
 import xml.etree.ElementTree as ElementTree
 from importlib.metadata import packages_distributions
@@ -15,7 +16,7 @@ ROOT = Path(__file__).parents[1]
 SETUP = (ROOT / "setup.py").read_text("utf-8")
 PACKAGE = ElementTree.parse(ROOT / "package.xml").getroot()
 
-OWN = {"allocator_node", *(path.stem for path in (ROOT / "tests").rglob("*.py"))}
+OWN = {"allocator_node", *(path.stem for path in (ROOT / "tests").rglob("*"))}
 
 WITH_ROS = {
     "ament_index_python", "launch", "launch_ros", "launch_testing", "rclpy", "tf2_ros",
@@ -100,3 +101,15 @@ def test_both_files_say_the_same_version_and_licence() -> None:
 
     assert PACKAGE.findtext("version") == __version__
     assert f'license="{PACKAGE.findtext("license")}"' in SETUP
+
+
+def test_no_library_prints_into_our_output() -> None:
+    """Standard output belongs to the commands, such as tables and JSON."""
+    rehearse = (
+        "from allocator_node import read_team, rehearse\n"
+        "rehearse(read_team('config/solar_farm.yaml'), None, seconds=1.0)"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", rehearse], capture_output=True, text=True, cwd=ROOT, check=True
+    )
+    assert done.stdout == ""

@@ -76,9 +76,11 @@ def command(name: str, *arguments: object) -> Iterator[subprocess.Popen]:
     try:
         yield process
     finally:
-        process.send_signal(signal.SIGINT)
+        # A keyboard interrupt reaches a launched process twice: from terminal and launch.
+        for _ in range(2):
+            process.send_signal(signal.SIGINT)
         try:
-            process.wait(10)
+            assert process.wait(10) == 0
         finally:
             process.kill()
 

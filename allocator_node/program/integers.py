@@ -271,7 +271,7 @@ class Integers:
         Raises:
             SearchFailed: The time ran out before any solution, or the solver failed.
         """
-        solver = quiet_solver()
+        solver = Quiet()
         solver.setOptionValue("threads", 1)
         solver.setOptionValue("mip_rel_gap", 0.0)
         solver.setOptionValue("mip_abs_gap", 1e-9)
@@ -335,8 +335,10 @@ class Integers:
         return model
 
 
-def quiet_solver() -> highspy.Highs:
-    """Give a solver that prints nothing."""
-    solver = highspy.Highs()
-    solver.setOptionValue("output_flag", False)
-    return solver
+class Quiet(highspy.Highs):
+    """HiGHS that prints nothing, not even the banner that comes with its callbacks."""
+
+    def enableCallbacks(self) -> None:
+        """Switch the output off first."""
+        self.setOptionValue("output_flag", False)
+        super().enableCallbacks()

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import functools
-import signal
 import traceback
 from collections.abc import Callable
 from typing import Any
@@ -21,14 +20,9 @@ from ..files.document import FileError
 from ..team import Team
 from ..team_file import merge_tasks, read_team
 from . import parameters
+from .ending import LISTEN, Ending
 from .loop import Loop, Occupied
 from .parameters import ParameterError
-
-LISTEN = 0.2
-"""How often a request to end is looked for where no message wakes the node, s."""
-
-ENDING = ("SIGINT", "SIGTERM", "SIGHUP")
-"""Signals that ask the node to end; not every platform has all of them."""
 
 
 def told(transition: Callable) -> Callable:
@@ -187,19 +181,6 @@ class AllocatorNode(LifecycleNode):
         )
         self.get_logger().info(response.message)
         return response
-
-
-class Ending:
-    """Whether a signal asked this process to end."""
-
-    def __init__(self) -> None:
-        self.asked = False
-        for name in ENDING:
-            if hasattr(signal, name):
-                signal.signal(getattr(signal, name), self._ask)
-
-    def _ask(self, number: int, frame: object) -> None:
-        self.asked = True
 
 
 def run(team_file: str | None, autostart: bool, arguments: list[str]) -> int:

@@ -89,6 +89,7 @@ class Loop:
         self._commands: CommandTopics | None = None
         self._timer: Timer | None = None
         self._decision: Decision | None = None
+        self._trace = ""
         self._last = -np.inf
         self._due = {"report": 0.0, "markers": 0.0, "save": 0.0}
         self._recall()
@@ -189,13 +190,19 @@ class Loop:
             act()
         except Exception as error:  # the loop must go on whatever happens
             self._health.fail(error)
-            self._log.error(
-                f"the loop failed ({self._health.failures} times so far), robots are told to "
-                f"stand:\n{traceback.format_exc()}",
-                throttle_duration_sec=TELL_EVERY,
-            )
+            self._tell_failure(traceback.format_exc())
             return False
         return True
+
+    def _tell_failure(self, trace: str) -> None:
+        """Log where the loop failed, in full only where it is news."""
+        failed = f"the loop failed ({self._health.failures} times so far), robots are told to stand"
+        if trace != self._trace:
+            self._trace = trace
+            self._log.error(f"{failed}:\n{trace}")
+        else:
+            again = f"{failed}: {trace.splitlines()[-1]}"
+            self._log.error(again, throttle_duration_sec=TELL_EVERY)
 
     def _decide(self) -> None:
         now = self._now()

@@ -21,9 +21,10 @@ from geometry_msgs.msg import (
 from nav_msgs.msg import Odometry
 from rcl_interfaces.msg import Parameter, ParameterType, ParameterValue
 from rcl_interfaces.srv import SetParameters
-from rclpy.executors import ExternalShutdownException
+from rclpy.executors import SingleThreadedExecutor
 from rclpy.node import Node
 from rclpy.publisher import Publisher
+from rclpy.signals import SignalHandlerOptions
 from sensor_msgs.msg import BatteryState
 from std_msgs.msg import Header
 
@@ -44,6 +45,7 @@ from .conversions import (
     velocity_of,
     wrapped,
 )
+from .ending import LISTEN, Ending
 from .poses import POSE_TYPES
 from .qos import COMMANDS
 
@@ -279,12 +281,15 @@ def run(
     team: Team, world: World, seed: int, speed: float, allocator: str, arguments: list[str]
 ) -> int:
     """Simulate until a signal ends the process; give its exit status."""
-    rclpy.init(args=arguments)
+    rclpy.init(args=arguments, signal_handler_options=SignalHandlerOptions.NO)
+    ending = Ending()
+    executor = SingleThreadedExecutor()
+    node = SimNode(team, world, seed, speed, allocator)
     try:
-        node = SimNode(team, world, seed, speed, allocator)
-        rclpy.spin(node)
-    except (KeyboardInterrupt, ExternalShutdownException):
-        pass
+        executor.add_node(node)
+        while not ending.asked:
+            executor.spin_once(timeout_sec=LISTEN)
     finally:
+        node.destroy_node()
         rclpy.try_shutdown()
     return 0
