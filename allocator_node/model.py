@@ -73,7 +73,7 @@ class Model:
         self.docks = np.array([robot.dock or (0.0, 0.0) for robot in robots]).reshape(-1, 2)
         self.has_dock = np.array([robot.dock is not None for robot in robots])
         self.fleet = Fleet([robot.drive for robot in robots])
-        targets = [getattr(task.target, "robot", None) for task in tasks]
+        targets = [getattr(task.keeps_to, "robot", None) for task in tasks]
         self.itself = np.array(
             [[name == target for target in targets] for name in self.robots], dtype=bool
         ).reshape(len(robots), len(tasks))

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Collection, Mapping
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -23,6 +23,7 @@ from .files.team_checks import (
     check_polygon,
     check_robot,
     check_starts,
+    check_targets,
     check_task,
 )
 from .files.wording import described, one_of
@@ -74,7 +75,7 @@ def merge_tasks(team: Team, yaml_text: str, name: str = "task_edit") -> Team:
             found = "a task to take out that is not there"
             document.refuse((task,), found, one_of(team.tasks, task))
     space = FreeSpace.of(team.boundary, team.keep_out)
-    tasks = _checked_tasks(document, (), drafts, team.capabilities, space, edits)
+    tasks = _checked_tasks(document, (), drafts, team.capabilities, team.robots, space, edits)
     document.finish()
     kept = {name: task for name, task in team.tasks.items() if name not in edits}
     return team.with_tasks({name: kept.get(name, task) for name, task in tasks.items()})
@@ -93,7 +94,8 @@ def _team(document: Document) -> Team:
     drafts = {
         name: _read_task(document, ("tasks", name), data, kinds) for name, data in table.items()
     }
-    tasks = _checked_tasks(document, ("tasks",), drafts, capabilities, space, table)
+    names = _mapping(document, ("robots",))
+    tasks = _checked_tasks(document, ("tasks",), drafts, capabilities, names, space, table)
     document.finish()
     built = {name: robot for name, (robot, _) in robots.items()}
     missing = [name for name, (_, draft) in robots.items() if "start" not in draft.values]
@@ -206,6 +208,7 @@ def _checked_tasks(
     root: Place,
     drafts: Mapping[str, Draft],
     capabilities: Mapping[str, Any],
+    robots: Collection[str],
     space: FreeSpace,
     read: Mapping[str, Any],
 ) -> dict[str, Task]:
@@ -214,6 +217,7 @@ def _checked_tasks(
         if name in read:
             check_task(document, (*root, name), draft, capabilities, space)
     check_order(document, root, drafts)
+    check_targets(document, root, drafts, robots)
     return {
         name: draft.build(document, (*root, name), name=name) for name, draft in drafts.items()
     }

@@ -45,7 +45,7 @@ class Work:
         return {
             m
             for m, task in enumerate(self.team.tasks.values())
-            if isinstance(task.target, Target) and task.target.task in looked_at
+            if isinstance(task.keeps_to, Target) and task.keeps_to.task in looked_at
         }
 
     def finished(self) -> frozenset[str]:

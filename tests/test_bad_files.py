@@ -15,6 +15,8 @@ from allocator_node.tasks import Visit
 from allocator_node.team import Team
 from allocator_node.team_file import merge_tasks, parse_team, read_team
 
+KINDS = "cover, encircle, follow, formation, patrol, sweep, visit, watch"
+
 TEAM = '''\
 frame: site
 boundary: [[0, 0], [80, 0], [80, 50], [0, 50]]
@@ -276,10 +278,10 @@ BAD_TEAMS = [
     ("feature: camera}", "feature: camra}",
      '21: robots.rover_1.health[0].feature: found the text "camra"; must be one of camera, '
      "gimbal (did you mean camera?)"),
-    ("kind: patrol", "kind: sweep",
-     '27: tasks.rows.kind: found the text "sweep"; must be one of patrol, visit, watch'),
+    ("kind: patrol", "kind: guard",
+     f'27: tasks.rows.kind: found the text "guard"; must be one of {KINDS}'),
     ("    kind: patrol\n", "",
-     "26: tasks.rows.kind: found nothing; must be one of patrol, visit, watch"),
+     f"26: tasks.rows.kind: found nothing; must be one of {KINDS}"),
     ("[[10, 40], [70, 40]]", "[[10, 40]]",
      "28: tasks.rows.waypoints: found a list with 1 entry; must have at least 2 entries"),
     ("[[10, 40], [70, 40]]", "[[10, 40], [10, 40]]",
@@ -334,7 +336,7 @@ BAD_TEAMS = [
      "look?)"),
     ("after: [look]", "after: [rows]",
      "38: tasks.guard.after[0]: found rows, which never ends; must be a task that ends: a "
-     "visit, or a patrol with laps"),
+     "visit, a sweep, or a patrol with laps"),
     ("after: [look]", "after: [look, look]",
      '38: tasks.guard.after[1]: found the text "look"; must be there once (entry [0] is the '
      "same)"),
@@ -433,9 +435,52 @@ BAD_EDITS = [
     ("look: null",
      '1: guard.after[0]: found the text "look"; must be rows, the only one there is'),
     ("new: {at: [1, 2]}",
-     "1: new.kind: found nothing; must be one of patrol, visit, watch"),
+     f"1: new.kind: found nothing; must be one of {KINDS}"),
+    ("new: {kind: covr, at: [1, 2]}",
+     f'1: new.kind: found the text "covr"; must be one of {KINDS} (did you mean cover?)'),
     ("new: {kind: cover, at: [1, 2]}",
-     '1: new.kind: found the text "cover"; must be one of patrol, visit, watch'),
+     "1: new.at: found an unknown key; must be one of active, after, area, density, each, kind, "
+     "needs, priority, robots, urgency",
+     "1: new.area: found nothing; must be given"),
+    ("new: {kind: cover, area: [[1, 1], [9, 9], [9, 1], [1, 9]]}",
+     "1: new.area: found corners that make no simple polygon (self-intersection at [5 5]); must "
+     "be in order along an edge that does not cross itself"),
+    ("new: {kind: cover, area: [[1, 1], [90, 1], [9, 9]], density: [{at: [1, 1], spread: 0}]}",
+     "1: new.density[0].spread: found 0; must be greater than 0",
+     "1: new.area: found an area partly outside the boundary; must be inside the boundary and "
+     "outside keep-out areas"),
+    ("new: {kind: sweep, area: [[29, 19], [40, 19], [40, 30]], lane_width: 1, overlap: 1}",
+     "1: new.overlap: found 1; must be at most 0.9",
+     "1: new.area: found an area partly in the keep-out area shed; must be inside the boundary "
+     "and outside keep-out areas"),
+    ("new: {kind: encircle, around: 3, radius: 0, face: sideways}",
+     "1: new.around: found 3; must be [x, y] or a mapping",
+     "1: new.radius: found 0; must be greater than 0",
+     '1: new.face: found the text "sideways"; must be one of inward, outward'),
+    ("new: {kind: encircle, around: {task: look, robot: rover_1}, radius: 3, face: [1, 2, 3]}",
+     "1: new.around: found values that do not fit together; must be changed: give exactly one "
+     "of task, robot and topic",
+     "1: new.face: found a list with 3 entries; must be outward, inward or [x, y]"),
+    ("new: {kind: encircle, around: {task: loook}, radius: 3}",
+     '1: new.around.task: found the text "loook"; must be one of guard, look, rows (did you '
+     "mean look?)"),
+    ("new: {kind: follow, target: {robot: rover_9}, offset: [-2, 0]}",
+     '1: new.target.robot: found the text "rover_9"; must be one of drone_1, rover_1 (did you '
+     "mean rover_1?)"),
+    ("new: {kind: follow, target: {topic: a b}, offset: [-2]}",
+     "1: new.offset: found a list with 1 entry; must have 2 entries",
+     '1: new.target.topic: found the text "a b"; must be a topic name: letters, digits and '
+     "underscores in parts divided by single slashes, no part starting with a digit"),
+    ("new: {kind: follow, target: {task: new}, offset: [-2, 0]}",
+     "1: new.target.task: found a circle: new around new; must keep to something that does not "
+     "keep to it"),
+    ("new: {kind: follow, target: {task: old}, offset: [-2, 0]}\n"
+     "old: {kind: encircle, around: {task: new}, radius: 3}",
+     "1: new.target.task: found a circle: new around old around new; must keep to something "
+     "that does not keep to it"),
+    ("new: {kind: formation, at: [9, 9], offsets: [[0, 0]], robots: {min: 2}}",
+     "1: new: found values that do not fit together; must be changed: there may be as many "
+     "robots as offsets, which are 1"),
     ("new: {kind: visit, at: [99, 2]}",
      "1: new.at: found [99, 2] outside the boundary; must be inside the boundary and outside "
      "keep-out areas"),
@@ -444,8 +489,8 @@ BAD_EDITS = [
     ("rows: {kind: visit}",
      "1: rows.at: found nothing; must be given"),
     ("look: {after: [guard]}",
-     "1: look.after[0]: found guard, which never ends; must be a task that ends: a visit, or a "
-     "patrol with laps",
+     "1: look.after[0]: found guard, which never ends; must be a task that ends: a visit, a "
+     "sweep, or a patrol with laps",
      "1: look.after: found a circle: look after guard after look; must let one of them come "
      "first"),
     ("rows: 3",
@@ -463,8 +508,8 @@ BAD_EDITS = [
      '1: new-task: found the name "new-task"; must be letters, digits and underscores, not '
      "starting with a digit"),
     ("look: {kind: patrol, waypoints: [[1, 1], [9, 9]]}",
-     "1: guard.after[0]: found look, which never ends; must be a task that ends: a visit, or a "
-     "patrol with laps"),
+     "1: guard.after[0]: found look, which never ends; must be a task that ends: a visit, a "
+     "sweep, or a patrol with laps"),
 ]
 
 

@@ -118,6 +118,8 @@ def read_value(document: Document, place: Place, data: Any, hint: Any) -> Any:
     inner = _without_none(hint)
     if data is None and inner is not hint:
         return None
+    if (form := _dataclass_choice(inner)) is not None and isinstance(data, Mapping):
+        inner = form
     if dataclasses.is_dataclass(inner):
         return read_fields(document, place, data, inner).build(document, place)
     if (item := _dataclass_item(inner)) is not None:
@@ -181,6 +183,14 @@ def _without_none(hint: Any) -> Any:
     return hint
 
 
+def _dataclass_choice(hint: Any) -> type | None:
+    """Give T for a union with one dataclass T: what a mapping is read as."""
+    if typing.get_origin(hint) in (typing.Union, types.UnionType):
+        forms = [part for part in typing.get_args(hint) if dataclasses.is_dataclass(part)]
+        return forms[0] if len(forms) == 1 else None
+    return None
+
+
 def _dataclass_item(hint: Any) -> type | None:
     """Give T for ``tuple[T, ...]`` of a dataclass."""
     if typing.get_origin(hint) is tuple:
@@ -198,7 +208,11 @@ def _explained(error: ValidationError, data: Any) -> Iterator[tuple[Place, str, 
         place, label = _located(one["loc"], data)
         (branches[label] if label else plain).append((place, one))
     if branches:
-        fitting = [errors for errors in branches.values() if not any(map(_of_shape, errors))]
+        fitting = [
+            errors
+            for errors in branches.values()
+            if not any(_of_shape(located, data) for located in errors)
+        ]
         if fitting:
             plain += min(fitting, key=len)
         else:
@@ -237,14 +251,20 @@ def _at(data: Any, place: Place) -> Any:
 
 def _shape(label: str) -> str:
     """Write the label of a union's branch as a reader would: ``[x, y]`` for two numbers."""
-    if not label.startswith("tuple"):
-        return label
-    return f"[{', '.join('xyz'[: label.count(',') + 1])}]"
+    if label.startswith("tuple"):
+        return f"[{', '.join('xyz'[: label.count(',') + 1])}]"
+    if label.startswith("literal"):
+        return label.removeprefix("literal[").removesuffix("]").replace("'", "").replace(",", ", ")
+    return "a mapping" if label[:1].isupper() else label
 
 
-def _of_shape(located: tuple[Place, dict]) -> bool:
+def _of_shape(located: tuple[Place, dict], data: Any) -> bool:
+    """Tell whether an error of a union's branch says that the branch is not what was meant."""
     place, one = located
-    return one["type"] in ("tuple_type", "missing", "too_long") and len(place) <= 1
+    if one["type"] == "literal_error":
+        return not isinstance(data, str)
+    wrong = ("tuple_type", "missing", "too_long", "dataclass_type")
+    return one["type"] in wrong and len(place) <= 1
 
 
 def _worded(one: dict, value: Any) -> tuple[str, str]:

@@ -69,6 +69,16 @@ class FreeSpace:
                 return f"partly in the keep-out area {name}"
         return None
 
+    def area_objection(self, corners: Sequence[Sequence[float]]) -> str | None:
+        """Say where an area of work must not be; None where it may be."""
+        area = Polygon(corners)
+        if self.boundary is not None and not self.boundary.covers(area):
+            return "partly outside the boundary"
+        for name, polygon in self.keep_out:
+            if polygon.intersection(area).area > 0:
+                return f"partly in the keep-out area {name}"
+        return None
+
     def row(self, radii: Iterable[float], taken: Iterable[Disc]) -> list[Disc | None]:
         """Put discs in rows along x, the first at the lowest corner of the site.
 

@@ -12,6 +12,7 @@ from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 import shapely
 from shapely import Polygon
 
+from ..tasks.target import Target
 from ..team import KeepOut, Robot
 from .document import Document, Place
 from .form import Draft
@@ -218,6 +219,11 @@ def check_task(
         document.refuse((*place, "robots"), found, "must have min at most max")
     for steps, point in points_of(draft):
         check_inside(document, (*place, *steps), space, point)
+    area = draft.get("area")
+    if area and check_polygon(document, (*place, "area"), area):
+        if objection := space.area_objection(area):
+            allowed = "must be inside the boundary and outside keep-out areas"
+            document.refuse((*place, "area"), f"an area {objection}", allowed)
     waypoints = draft.get("waypoints")
     if waypoints and len(set(waypoints)) == 1:
         document.refuse((*place, "waypoints"), "the same point again", "must lead somewhere")
@@ -246,7 +252,7 @@ def check_order(document: Document, root: Place, drafts: Mapping[str, Draft]) ->
                 allowed = one_of(set(drafts) - {name}, earlier)
                 document.refuse((*place, index), described(earlier), allowed)
             elif not _can_end(earlier, drafts[earlier]):
-                allowed = "must be a task that ends: a visit, or a patrol with laps"
+                allowed = "must be a task that ends: a visit, a sweep, or a patrol with laps"
                 document.refuse((*place, index), f"{earlier}, which never ends", allowed)
     for circle in _circles(before):
         found = f"a circle: {' after '.join((*circle, circle[0]))}"
@@ -257,7 +263,37 @@ def _can_end(name: str, draft: Draft) -> bool:
     """Tell whether a task ends; one that cannot be built gets the benefit of the doubt."""
     if draft.form is None or draft.broken:
         return True
-    return draft.form(name=name, **draft.values).ends
+    try:
+        return draft.form(name=name, **draft.values).ends
+    except ValueError:
+        return True
+
+
+def check_targets(
+    document: Document, root: Place, drafts: Mapping[str, Draft], robots: Collection[str]
+) -> None:
+    """Check that what tasks keep to exists, and that no task keeps to itself in the end."""
+    kept_to: dict[str, list[str]] = {name: [] for name in drafts}
+    keys = {}
+    for name, draft in drafts.items():
+        for key, target in draft.values.items():
+            if not isinstance(target, Target):
+                continue
+            place, keys[name] = (*root, name, key), key
+            if target.topic is not None:
+                check_topic(document, (*place, "topic"), target.topic)
+            elif target.robot is not None and target.robot not in robots:
+                allowed = one_of(robots, target.robot)
+                document.refuse((*place, "robot"), described(target.robot), allowed)
+            elif target.task is not None and target.task not in drafts:
+                allowed = one_of(set(drafts) - {name}, target.task)
+                document.refuse((*place, "task"), described(target.task), allowed)
+            elif target.task is not None:
+                kept_to[name].append(target.task)
+    for circle in _circles(kept_to):
+        found = f"a circle: {' around '.join((*circle, circle[0]))}"
+        place = (*root, circle[0], keys[circle[0]], "task")
+        document.refuse(place, found, "must keep to something that does not keep to it")
 
 
 def _circles(before: Mapping[str, Iterable[str]]) -> Iterator[list[str]]:

@@ -108,7 +108,7 @@ class Task(Checked, abc.ABC):
         return False
 
     @property
-    def target(self) -> Point | Target | None:
+    def keeps_to(self) -> Point | Target | None:
         """What it keeps to, where that may move."""
         return None
 

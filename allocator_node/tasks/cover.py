@@ -4,11 +4,9 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 from functools import cached_property
-from typing import Annotated
 
 import numpy as np
 import shapely
-from annotated_types import MinLen
 from scipy.spatial import cKDTree
 
 from ..team import Checked, Point, Polygon, Positive
@@ -75,7 +73,7 @@ class Cover(Task):
     kind = "cover"
 
     area: Polygon
-    density: Annotated[tuple[Bump, ...], MinLen(1)] | None = None
+    density: tuple[Bump, ...] = ()
 
     @cached_property
     def _cells(self) -> Cells:
@@ -118,7 +116,7 @@ class Cover(Task):
         """Give the same area and density with the area's middle at another place."""
         middle = shapely.Polygon(self.area).centroid
         dx, dy = at[0] - middle.x, at[1] - middle.y
-        bumps = self.density and tuple(
+        bumps = tuple(
             replace(bump, at=(bump.at[0] + dx, bump.at[1] + dy)) for bump in self.density
         )
         return replace(self, area=tuple((x + dx, y + dy) for x, y in self.area), density=bumps)

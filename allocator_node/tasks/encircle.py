@@ -46,7 +46,7 @@ class Encircle(Task):
     tolerance: Positive = 0.2
 
     @property
-    def target(self) -> Point | Target:
+    def keeps_to(self) -> Point | Target:
         """The middle of the ring."""
         return self.around
 

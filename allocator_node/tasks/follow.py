@@ -29,6 +29,11 @@ class Follow(Task):
     offset: Point
     tolerance: Positive = 0.3
 
+    @property
+    def keeps_to(self) -> Point | Target:
+        """What is followed."""
+        return self.target
+
     def begin(self) -> Mapping[int, int]:
         """Give the state before anybody is there."""
         return {}

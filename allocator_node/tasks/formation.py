@@ -73,7 +73,7 @@ class Formation(Task):
         count = len(self.offsets)
         robots = self.robots or HeadCount(count, count)
         if robots.min > count or (robots.max or 0) > count:
-            raise ValueError(f"{count} offsets are places for at most {count} robots")
+            raise ValueError(f"there may be as many robots as offsets, which are {count}")
         object.__setattr__(self, "robots", replace(robots, max=robots.max or count))
 
     def begin(self) -> March:
