@@ -25,6 +25,7 @@ LEVELS = (
     {"allocator"},
     {"sim"},
     {"report"},
+    {"preflight"},
     {"ros"},
     {"commands"},
 )

@@ -158,7 +158,7 @@ class Recorder:
                 self._active[name] += period
                 self._covered[name] += period * (name not in lacking)
         self.shortfalls.note(now, {
-            (s.task, s.capability): {"task": s.task, "text": str(s)} for s in decision.shortfalls
+            (s.task, str(s)): {"task": s.task, "text": str(s)} for s in decision.shortfalls
         })
         self.notices.note(now, {
             (n.about, n.level): {"about": n.about, "level": n.level.name.lower(), "text": n.text}

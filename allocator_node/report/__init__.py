@@ -1,0 +1,1 @@
+"""After a run: one page and pictures that show what happened."""
