@@ -47,7 +47,7 @@ def bar(share: float, width: int = BAR) -> str:
 
 def percent(share: float) -> str:
     """Give a share as whole per cent, or a dash."""
-    return "–" if math.isnan(share) else f"{100 * share:.0f} %"
+    return "–" if math.isnan(share) else f"{100 * share:.0f}\N{NO-BREAK SPACE}%"
 
 
 def team_table(rows: Sequence[Row], width: int = WIDTH) -> Table:
