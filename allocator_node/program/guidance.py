@@ -22,12 +22,12 @@ HELD_BELOW = 0.6
 PATIENCE = 0.3
 """How long a robot is held back before it turns aside, s."""
 
-TURN_ASIDE = np.radians(60)
+TURN_ASIDE = np.radians(90)
 """How fast it turns aside then, rad/s."""
 
-MOST_ASIDE = np.radians(110)
+MOST_ASIDE = np.radians(100)
 
-TURN_BACK = 2.5
+TURN_BACK = 1.5
 """Time constant with which it turns back once it moves, s."""
 
 MOVING = 0.1
