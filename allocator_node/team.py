@@ -167,6 +167,28 @@ class HeadCount(Checked):
 
 
 @dataclass(frozen=True)
+class Target(Checked):
+    """Something a task keeps to that may move; exactly one of the three is given.
+
+    Attributes:
+        task: Name of a task: the middle of the robots that do it.
+        robot: Name of a robot.
+        topic: Topic of geometry_msgs/msg/PoseStamped in the site frame.
+
+    Raises:
+        ValueError: None or several are given.
+    """
+
+    task: Name | None = None
+    robot: Name | None = None
+    topic: Name | None = None
+
+    def __post_init__(self) -> None:
+        if sum(part is not None for part in (self.task, self.robot, self.topic)) != 1:
+            raise ValueError("give exactly one of task, robot and topic")
+
+
+@dataclass(frozen=True)
 class KeepOut(Checked):
     """An area no robot may enter: a simple polygon, m."""
 

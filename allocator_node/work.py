@@ -9,8 +9,8 @@ from typing import Any
 import numpy as np
 
 from .model import Model
-from .tasks import Goals, Located, Scene, Target, Task
-from .team import Team
+from .tasks import Goals, Located, Scene, Task
+from .team import Target, Team
 
 
 class Work:

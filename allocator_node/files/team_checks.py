@@ -12,8 +12,7 @@ from collections.abc import Collection, Iterable, Iterator, Mapping, Sequence
 import shapely
 from shapely import Polygon
 
-from ..tasks.target import Target
-from ..team import KeepOut, Robot
+from ..team import KeepOut, Robot, Target
 from .document import Document, Place
 from .form import Draft
 from .free_space import FreeSpace, overlap

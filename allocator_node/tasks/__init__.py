@@ -10,7 +10,7 @@ from .follow import Follow
 from .formation import Formation
 from .patrol import Patrol
 from .sweep import Sweep
-from .target import Located, Target
+from .target import Located
 from .visit import Visit
 from .watch import Watch
 
@@ -42,7 +42,6 @@ __all__ = [
     "Patrol",
     "Scene",
     "Sweep",
-    "Target",
     "Task",
     "Visit",
     "Watch",

@@ -10,8 +10,8 @@ from typing import Annotated, Any, ClassVar
 import numpy as np
 from annotated_types import Ge, Le
 
-from ..team import Checked, HeadCount, Name, NonNegative, Point, Positive
-from .target import Located, Target
+from ..team import Checked, HeadCount, Name, NonNegative, Point, Positive, Target
+from .target import Located
 
 
 @dataclass(frozen=True)

@@ -8,10 +8,10 @@ from typing import Literal
 
 import numpy as np
 
-from ..team import Point, Positive
+from ..team import Point, Positive, Target
 from .base import Goals, Scene, Task, hold
 from .places import share_out
-from .target import Located, Target
+from .target import Located
 
 
 @dataclass(frozen=True)

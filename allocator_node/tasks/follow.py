@@ -7,10 +7,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from ..team import Point, Positive
+from ..team import Point, Positive, Target
 from .base import Goals, Scene, Task, hold
 from .station import places_of, points_of
-from .target import Target
 
 
 @dataclass(frozen=True, kw_only=True)

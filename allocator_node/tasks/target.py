@@ -1,4 +1,4 @@
-"""What a task keeps to: a point, whoever does another task, a robot, or a pose topic."""
+"""Where something is that a task keeps to, and how it carries what is beside it."""
 
 from __future__ import annotations
 
@@ -6,29 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..team import Checked, Name, Point
-
-
-@dataclass(frozen=True)
-class Target(Checked):
-    """Something that may move; exactly one of the three is given.
-
-    Attributes:
-        task: Name of a task: the middle of the robots that do it.
-        robot: Name of a robot.
-        topic: Topic of geometry_msgs/msg/PoseStamped in the site frame.
-
-    Raises:
-        ValueError: None or several are given.
-    """
-
-    task: Name | None = None
-    robot: Name | None = None
-    topic: Name | None = None
-
-    def __post_init__(self) -> None:
-        if sum(part is not None for part in (self.task, self.robot, self.topic)) != 1:
-            raise ValueError("give exactly one of task, robot and topic")
+from ..team import Point
 
 
 @dataclass(frozen=True)
