@@ -13,6 +13,7 @@ import numpy as np
 from .belief import EfficacyBelief, EnergyBelief, FeatureBelief, PoseBelief, TargetBelief
 from .belief.efficacy import Step
 from .belief.poses import Places
+from .charging import Charging, Crew, Errands
 from .decision import Decision
 from .memory import Memory, remember
 from .model import Model
@@ -105,6 +106,7 @@ class Allocator:
         self._energy = EnergyBelief(self._model)
         self._features = FeatureBelief(team, self._model.features, self._model.declared)
         self._efficacy = EfficacyBelief(count, len(team.tasks))
+        self._charging = Charging(self._model)
         self._reasons = Reasons(self._model, self._say_feature)
         self._survey()
 
@@ -157,12 +159,13 @@ class Allocator:
             situation, before, found.task, problem.swap_cost, now
         )
         self._take_up(before, view, goals)
+        errands = self._charge(view, enough)
         with _timed(seconds, "control"):
-            targets = self._targets(goals, view.places.heard)
+            targets = self._targets(goals, errands, view.places.heard)
             course, control, rows = self._control(view, targets)
         self._remember(view, course, control)
         return self._decision(
-            view, found, targets, enough, problem, reallocations, control, rows, seconds
+            view, found, targets, enough, problem, reallocations, control, rows, seconds, errands
         )
 
     def _believe(self, observation: Observation, now: float) -> _View:
@@ -178,11 +181,11 @@ class Allocator:
         model = self._model
         places = self._poses.update(observation, now, settings.pose_timeout)
         health = self._features.update(observation.health, now, settings)
-        self._energy.update(
-            observation, model, self._commands, now, dt, settings.battery_timeout
-        )
         poses = np.where(places.known[:, None], places.poses, 0.0)
         points = model.fleet.control_points(poses)
+        self._energy.update(
+            observation, model, self._commands, points, now, dt, settings.battery_timeout
+        )
         self._learn(observation, places, points, now, dt)
         capability = model.capability(health)
         return _View(
@@ -238,6 +241,7 @@ class Allocator:
             spendable=self._energy.spendable(self._model),
             dearness=self._energy.dearness(self._model),
             active=self._work.active(),
+            charging=self._charging.on,
             pinned=self._pairs(self.orders.pins),
             banned=self._pairs(self.orders.bans),
             previous=self._assignment,
@@ -265,7 +269,7 @@ class Allocator:
             suitability=view.suitability,
             efficacy=self._efficacy.eta.copy(),
             trusted=self._trusted(view),
-            enough=enough,
+            enough=enough & ~self._charging.on[:, None],
             dearness=self._energy.dearness(self._model),
             prices=prices,
             pinned=self._pairs(self.orders.pins),
@@ -287,8 +291,25 @@ class Allocator:
         for m in groups | self._work.keeping_to(groups):
             goals[m] = self._work.advance(int(m), self._scene(view, m))
 
-    def _targets(self, goals: list[Goals], heard: np.ndarray) -> Targets:
-        """Give the goal of each robot's own task; robots not heard have none now."""
+    def _charge(self, view: _View, enough: np.ndarray) -> Errands:
+        """Send robots without a task to their docks where their energy is low."""
+        pinned = self._pairs(self.orders.pins)
+        wanted = (view.suitability > 0) & self._work.active()
+        crew = Crew(
+            now=view.now,
+            points=view.points,
+            known=view.places.known,
+            heard=view.places.heard,
+            charge=self._energy.charge,
+            spare=self._assignment < 0,
+            exhausted=wanted.any(axis=1) & ~(wanted & enough).any(axis=1),
+            called=(pinned & wanted & enough).any(axis=1),
+            reach=self._safety.reach,
+        )
+        return self._charging.update(crew, self._settings, self._safety.clear)
+
+    def _targets(self, goals: list[Goals], errands: Errands, heard: np.ndarray) -> Targets:
+        """Give the goal of each robot's own task or errand; robots not heard have none now."""
         count = len(self._assignment)
         points, velocities = np.full((count, 3), np.nan), np.zeros((count, 3))
         facing, pace, tolerance = np.full(count, np.nan), np.ones(count), np.zeros(count)
@@ -302,7 +323,9 @@ class Allocator:
                 (tolerance, goal.tolerance),
             ):
                 part[group] = np.broadcast_to(value, part.shape)[group]
-        busy = (self._assignment >= 0) & heard
+        sent = (self._assignment < 0) & np.isfinite(errands.points[:, 0])
+        points[sent], tolerance[sent] = errands.points[sent], errands.tolerance[sent]
+        busy = ((self._assignment >= 0) | sent) & heard
         return Targets(busy, points, velocities, facing, pace, tolerance)
 
     def _control(self, view: _View, targets: Targets) -> tuple[Course, Control, SafetyRows]:
@@ -369,6 +392,7 @@ class Allocator:
         control: Control,
         rows: SafetyRows,
         seconds: Mapping[str, float],
+        errands: Errands,
     ) -> Decision:
         model = self._model
         return Decision(
@@ -388,12 +412,25 @@ class Allocator:
             charge_estimated=self._energy.estimated.copy(),
             finished=self._work.finished(),
             progress=self._work.progress(),
+            activity=self._activity(view, errands),
             reallocations=reallocations,
             shortfalls=shortfalls(model, found),
-            notices=tuple(notices(model, view.places, enough, control, rows)),
+            notices=tuple(notices(model, view.places, enough, self._charging.on, control, rows)),
             seconds=seconds,
             gap=found.gap,
         )
+
+    def _activity(self, view: _View, errands: Errands) -> tuple[str, ...]:
+        """Say in a word what each robot does."""
+        return tuple(
+            "silent" if not heard
+            else "held" if self.orders.hold
+            else "working" if task >= 0
+            else errand or "idle"
+            for heard, task, errand in zip(
+                view.places.heard, self._assignment, errands.activity, strict=True
+            )
+        )  # fmt: skip
 
     def _say_feature(self, robot: int, feature: int) -> str:
         return self._features.says(robot, feature, self._now or 0.0, self._settings)

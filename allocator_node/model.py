@@ -25,6 +25,7 @@ class Model:
         capacity: Battery capacities, Wh, shape (N,).
         reserve: Reserved share of the capacity, shape (N,).
         idle, drive: Powers standing and added by driving, W, shape (N,).
+        charge: Power that docks put into the batteries, W, shape (N,).
         docks: Docks, m, shape (N, 2); 0 without one.
         has_dock: Which robots have one, shape (N,).
         fleet: The drives.
@@ -70,6 +71,7 @@ class Model:
         self.reserve = np.array([robot.battery.reserve for robot in robots])
         self.idle = np.array([robot.battery.idle_w for robot in robots])
         self.drive = np.array([robot.battery.drive_w for robot in robots])
+        self.charge = np.array([robot.battery.charge_w for robot in robots])
         self.docks = np.array([robot.dock or (0.0, 0.0) for robot in robots]).reshape(-1, 2)
         self.has_dock = np.array([robot.dock is not None for robot in robots])
         self.fleet = Fleet([robot.drive for robot in robots])

@@ -26,7 +26,12 @@ def shortfalls(model: Model, found: Assignment) -> tuple[Shortfall, ...]:
 
 
 def notices(
-    model: Model, places: Places, enough: np.ndarray, control: Control, rows: SafetyRows
+    model: Model,
+    places: Places,
+    enough: np.ndarray,
+    charging: np.ndarray,
+    control: Control,
+    rows: SafetyRows,
 ) -> Iterator[Notice]:
     """Name robots that are silent, short of energy, stopped or too near to something.
 
@@ -34,6 +39,7 @@ def notices(
         model: The team.
         places: Where the robots are.
         enough: Where the energy suffices, shape (N, M).
+        charging: Robots for which that is being seen to, shape (N,).
         control: The commands and what the rows did to them.
         rows: The safety rows.
     """
@@ -43,7 +49,10 @@ def notices(
         yield Notice(names[i], Level.WARN, text)
     if enough.shape[1]:
         for i in np.flatnonzero(places.heard & ~enough.any(axis=1)):
-            yield Notice(names[i], Level.WARN, "too little energy for any task")
+            text, level = "too little energy for any task", Level.WARN
+            if charging[i]:
+                text, level = f"{text}: it is to charge first", Level.OK
+            yield Notice(names[i], level, text)
     for i in np.flatnonzero(control.stopped):
         yield Notice(names[i], Level.ERROR, "stopped: no safe command could be found")
     seen = set()

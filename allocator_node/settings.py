@@ -36,6 +36,10 @@ class Settings(Checked):
         allowance: Share of the expected progress that honest robots may lose.
         pose_noise: Standard deviation of the poses, m; sets the noise gate.
         retry_after: Time constant with which a failed robot is trusted again, s.
+        charge_below: Charge from which a robot without a task goes to its dock.
+        charge_until: Charge with which it is asked for again.
+        dock_margin: Share of the capacity beside the reserve that is kept for detours
+            on the way to the dock and for waiting there.
     """
 
     kappa: NonNegative = 0.002
@@ -58,3 +62,6 @@ class Settings(Checked):
     allowance: Annotated[float, Ge(0), Lt(1)] = 0.2
     pose_noise: NonNegative = 0.05
     retry_after: Positive = 120.0
+    charge_below: Share = 0.5
+    charge_until: Share = 0.9
+    dock_margin: Share = 0.03

@@ -64,12 +64,14 @@ class Battery(Checked):
         reserve: Share of the capacity that is never planned with.
         idle_w: Power while standing, W.
         drive_w: Power that driving at full command adds, W.
+        charge_w: Power that its dock puts into it, W.
     """
 
     capacity_wh: Positive = 500.0
     reserve: Annotated[float, Ge(0), Lt(1)] = 0.2
     idle_w: NonNegative = 20.0
     drive_w: NonNegative = 100.0
+    charge_w: NonNegative = 300.0
 
 
 @dataclass(frozen=True)

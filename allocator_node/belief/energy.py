@@ -9,6 +9,12 @@ from ..observation import Observation
 
 SECONDS_PER_HOUR = 3600.0
 
+DOCKED = 0.6
+"""Distance of a control point from its robot's dock within which it charges, m."""
+
+STANDING = 0.05
+"""Share of full command below which a robot stands."""
+
 LEAST = 1e-3
 """Share of its usable capacity below which a robot's energy counts as this little."""
 
@@ -17,8 +23,8 @@ class EnergyBelief:
     """Charge 0..1 of each robot.
 
     A measured charge is taken as it is. Between measurements, and where none
-    comes, the charge is counted down from what was commanded; after
-    ``battery_timeout`` it is marked as an estimate.
+    comes, the charge is counted down from what was commanded, or up by what the
+    dock gives; after ``battery_timeout`` it is marked as an estimate.
 
     Attributes:
         charge: Charge, shape (N,).
@@ -36,6 +42,7 @@ class EnergyBelief:
         observation: Observation,
         model: Model,
         commands: np.ndarray,
+        points: np.ndarray,
         now: float,
         dt: float,
         timeout: float,
@@ -46,13 +53,15 @@ class EnergyBelief:
             observation: What was heard.
             model: The team.
             commands: Commands sent for the last period, shape (N, 4).
+            points: Control points, m, shape (N, 3).
             now: Time, s.
             dt: Length of the last period, s.
             timeout: Age from which a measurement is too old to be called one, s.
         """
         power = model.idle + model.drive * effort_share(model, commands)
-        self.charge = np.maximum(
-            self.charge - power * dt / SECONDS_PER_HOUR / model.capacity, 0.0
+        power = np.where(docked(model, points, commands), -model.charge, power)
+        self.charge = np.clip(
+            self.charge - power * dt / SECONDS_PER_HOUR / model.capacity, 0.0, 1.0
         )
         self.measured_at[self.measured_at > now + timeout] = -np.inf
         fresh = np.isfinite(observation.charges) & ~(
@@ -70,6 +79,12 @@ class EnergyBelief:
         """Give λ_i = mean usable capacity of the team / what i may still spend; shape (N,)."""
         usable = model.capacity * (1 - model.reserve)
         return usable.mean() / np.maximum(self.spendable(model), LEAST * usable)
+
+
+def docked(model: Model, points: np.ndarray, commands: np.ndarray) -> np.ndarray:
+    """Tell which robots stand in their docks; control points (N, 3), commands (N, 4)."""
+    away = np.linalg.norm(points[:, :2] - model.docks, axis=1)
+    return model.has_dock & (away <= DOCKED) & (effort_share(model, commands) < STANDING)
 
 
 def effort_share(model: Model, commands: np.ndarray) -> np.ndarray:

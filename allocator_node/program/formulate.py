@@ -53,6 +53,7 @@ class Known:
         spendable: Energy above the reserve, Wh, shape (N,).
         dearness: λ, shape (N,).
         active: Tasks to be done now, shape (M,).
+        charging: Robots that are to charge first, shape (N,).
         pinned, banned: The operator's orders, shape (N, M).
         previous: Task each robot has, −1: none, shape (N,).
     """
@@ -68,6 +69,7 @@ class Known:
     spendable: np.ndarray
     dearness: np.ndarray
     active: np.ndarray
+    charging: np.ndarray
     pinned: np.ndarray
     banned: np.ndarray
     previous: np.ndarray
@@ -80,7 +82,8 @@ def formulate(
 
     Energy to reach the goal and serve there, E = (idle + drive) · path / c + idle ·
     dwell, becomes a price e = (λ E + urgency · path / (3600 c)) / s; a robot is
-    eligible only where it could do that and still reach its dock with its reserve.
+    eligible only where it could do that and still reach its dock with its reserve
+    and the margin kept for that.
 
     Args:
         model: The team.
@@ -98,6 +101,7 @@ def formulate(
         (known.suitability > 0)
         & known.trusted
         & known.heard[:, None]
+        & ~known.charging[:, None]
         & ~known.banned
         & known.active
     )
@@ -113,7 +117,8 @@ def formulate(
     serving = way_energy(model, path) + model.idle[:, None] * table.dwell / SECONDS_PER_HOUR
     home = table.points[..., :2] - model.docks[:, None, :2]
     way_home = np.hypot(home[..., 0], home[..., 1]) * model.has_dock[:, None]
-    enough = serving + way_energy(model, way_home) <= known.spendable[:, None]
+    kept = known.spendable - settings.dock_margin * model.capacity * model.has_dock
+    enough = serving + way_energy(model, way_home) <= kept[:, None]
 
     s = known.suitability * known.efficacy
     dearness = known.dearness[:, None]

@@ -211,6 +211,15 @@ class Safety:
         lone = np.full(len(near), -1)
         return SafetyRows.of(robots[near], lone, normal, -gamma * room, room, lone)
 
+    def clear(self, points: np.ndarray, robot: int) -> np.ndarray:
+        """Tell at which points (n, 2) a robot's control point keeps all margins of areas."""
+        free = ~self._outside(points)
+        if len(self.edges):
+            keep = self.reach[robot] + self.settings.margin
+            distances = shapely.distance(shapely.points(points)[:, None], self.edges[None])
+            free &= distances.min(axis=1) >= keep
+        return free
+
     def _outside(self, points: np.ndarray) -> np.ndarray:
         """Tell which points (n, 2) are beyond the boundary or inside a keep-out area."""
         outside = np.zeros(len(points), dtype=bool)

@@ -19,6 +19,9 @@ from .world import SimulatedTeam
 EFFICACY_STEP = 0.01
 """Efficacies are recorded when they have changed by this much."""
 
+PROGRESS_STEP = 0.01
+"""The progress of tasks is recorded when it has changed by this much."""
+
 TRACE_PERIOD = 1.0
 """Paths, charges and efficacies are recorded this often, s."""
 
@@ -48,6 +51,8 @@ class Rehearsal:
         period_ms: Wall time of a decision: p50, p99, max, ms.
         paths: Robot to rows of t, x, y, z, heading.
         charges: Robot to rows of t, charge 0..1.
+        progress: Shares done of tasks that have such a thing: t, task, value.
+        activities: Changes of what a robot does: t, robot, activity.
         notices: Times a person should have known something: t, until, about, level, text.
     """
 
@@ -69,6 +74,8 @@ class Rehearsal:
     period_ms: dict[str, float]
     paths: dict[str, list[list[float]]]
     charges: dict[str, list[list[float]]]
+    progress: list[dict[str, Any]]
+    activities: list[dict[str, Any]]
     notices: list[dict[str, Any]]
 
 
@@ -128,6 +135,10 @@ class Recorder:
         self._efficacies: list[dict[str, Any]] = []
         self._paths: dict[str, list[list[float]]] = {name: [] for name in self.team.robots}
         self._charges: dict[str, list[list[float]]] = {name: [] for name in self.team.robots}
+        self._activity_of: dict[str, str] = {}
+        self._activities: list[dict[str, Any]] = []
+        self._progress: list[dict[str, Any]] = []
+        self._done: dict[str, float] = {}
         self._trace_due = 0.0
         self._wall_ms: list[float] = []
 
@@ -149,6 +160,14 @@ class Recorder:
             if robot not in self._task_of or self._task_of[robot] != task:
                 self._task_of[robot] = task
                 self.assignments.append({"t": now, "robot": robot, "task": task})
+        for robot, activity in zip(decision.robots, decision.activity, strict=True):
+            if self._activity_of.get(robot) != activity:
+                self._activity_of[robot] = activity
+                self._activities.append({"t": now, "robot": robot, "activity": activity})
+        for task, done in decision.progress.items():
+            if abs(done - self._done.get(task, 0.0)) >= PROGRESS_STEP or task not in self._done:
+                self._done[task] = done
+                self._progress.append({"t": now, "task": task, "value": round(done, 4)})
         for task in decision.finished:
             self.finished.setdefault(task, now)
         lacking = {shortfall.task for shortfall in decision.shortfalls}
@@ -220,6 +239,8 @@ class Recorder:
             },
             paths=self._paths,
             charges=self._charges,
+            progress=self._progress,
+            activities=self._activities,
             notices=self.notices.rows,
         )
 

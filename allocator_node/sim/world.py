@@ -19,6 +19,12 @@ LEVELS = {"ok": 0, "warn": 1, "error": 2}
 HEALTH_PERIOD = 1.0
 """Diagnostics arrive this often, s, and at once when something changes."""
 
+DOCKED = 0.6
+"""Distance of a control point from its robot's dock within which it charges, m."""
+
+STANDING = 0.05
+"""Speed below which a robot stands, m/s."""
+
 DUE = 1e-9
 """Events count as due this much early, s: sums of time steps are not exact."""
 
@@ -46,6 +52,8 @@ class SimulatedTeam:
         self._capacity = np.array([robot.battery.capacity_wh for robot in robots])
         self._idle = np.array([robot.battery.idle_w for robot in robots])
         self._drive = np.array([robot.battery.drive_w for robot in robots])
+        self._charge = np.array([robot.battery.charge_w for robot in robots])
+        self._docks = np.array([robot.dock or (np.nan, np.nan) for robot in robots])
         self._patches = [
             (patch, np.array([bool(set(patch.affects) & set(r.features)) for r in robots]))
             for patch in self._world.ground
@@ -164,9 +172,19 @@ class SimulatedTeam:
         shares = np.abs(commands) / limits
         shares[:, 0] = np.hypot(commands[:, 0], commands[:, 1]) / self._fleet.max_speed
         watts = self._idle + self._drive * np.clip(shares.max(axis=1), 0.0, 1.0)
+        docked = self.docked()
+        watts[docked] = 0.0
         used = np.minimum(watts * dt / 3600.0, self.charge * self._capacity)
         self.energy += used
-        self.charge = np.clip(self.charge - used / self._capacity, 0.0, 1.0)
+        gained = np.where(docked, self._charge, 0.0) * dt / 3600.0
+        self.charge = np.clip(self.charge + (gained - used) / self._capacity, 0.0, 1.0)
+
+    def docked(self) -> np.ndarray:
+        """Tell which robots stand in their docks, which then feed and charge them, (N,)."""
+        points = self._fleet.control_points(self.true_poses)
+        away = np.linalg.norm(points[:, :2] - self._docks, axis=1)
+        standing = np.abs(self._body[:, :3]).max(axis=1) < STANDING
+        return (away <= DOCKED) & standing
 
     def _happen(self) -> None:
         """Let the events that are due happen."""
