@@ -10,7 +10,8 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from .assignment import Assignment, evaluate, reduced_costs
-from .integers import Integers, SearchFailed
+from .highs import Limit, SearchFailed
+from .integers import Integers
 from .problem import Problem
 from .repair import repair
 from .slots import solve_slots
@@ -73,6 +74,8 @@ class Assigner:
         self.budget = budget
         self._lasted: float | None = None
         self._proof: Proof | None = None
+        self._program: Integers | None = None
+        self._program_key = b""
         self._search: Future[tuple[Proof | None, float]] | None = None
         self._thread: ThreadPoolExecutor | None = None
         self._closing = threading.Event()
@@ -138,13 +141,15 @@ class Assigner:
         """Search for the optimum; give it, if there was time, and how long that took, s."""
         begun = time.perf_counter()
         hint = repair(problem, prices, start)
+        costs, constant = _costs(problem, prices)
+        key = _key(problem)
+        if self._program is None or self._program_key != key:
+            self._program, self._program_key = Integers(problem), key
         try:
-            search = Integers(problem, time_limit, self._closing.is_set)
-            found = evaluate(problem, prices, *search.solve(prices, hint))
+            answer = self._program.solve(costs, hint, Limit(time_limit, self._closing.is_set))
         except SearchFailed:
             return None, time.perf_counter() - begun
-        costs, constant = _costs(problem, prices)
-        proof = Proof(_key(problem), costs, constant, found)
+        proof = Proof(key, costs, constant, evaluate(problem, prices, *answer))
         return proof, time.perf_counter() - begun
 
 

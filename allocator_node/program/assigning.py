@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from .assignment import Assignment, evaluate
+from .assignment import Assignment, evaluate, reduced_costs
+from .highs import Limit
 from .integers import Integers
 from .problem import Problem
 from .slots import solve_slots
@@ -26,4 +27,7 @@ def assign(problem: Problem, prices: np.ndarray, time_limit: float = np.inf) -> 
     task = solve_slots(problem, prices)
     if task is not None:
         return evaluate(problem, prices, task, proven=True)
-    return evaluate(problem, prices, *Integers(problem, time_limit).solve(prices))
+    costs = reduced_costs(problem, prices)
+    return evaluate(
+        problem, prices, *Integers(problem).solve(costs, limit=Limit(time_limit))
+    )

@@ -2,63 +2,34 @@
 
 from __future__ import annotations
 
-import time
-from collections.abc import Callable
-from dataclasses import dataclass
-
-import highspy
 import numpy as np
-from highspy.highs import HighsCallbackEvent
 from scipy import sparse
 
-from .assignment import reduced_costs
+from .highs import Limit, Minimizer, SearchFailed
 from .problem import LEVELS, Problem
-
-INTEGRAL = 1e-6
-"""Distance from 0 or 1 below which a relaxed α counts as integral."""
 
 HELD = 1e-7
 """How far a level may give way while the next is optimized; far below one shortfall."""
 
 Held = list[tuple[np.ndarray, float]]
 
-
-class SearchFailed(RuntimeError):
-    """No solution was found: the time ran out, or the solver failed."""
-
-
-@dataclass(frozen=True)
-class Found:
-    """Attributes: column values, whether proven optimal, a lower bound on the objective."""
-
-    values: np.ndarray
-    proven: bool
-    bound: float
+FREE = Limit()
+"""No end is set."""
 
 
 class Integers:
-    """The integer program over the eligible pairs of one period.
+    """The integer program over the eligible pairs, for one discrete situation.
 
     Columns: one α for each eligible pair, one σ for each head count, one for
     each need. Rows: robots, head counts, needs, and rounding cuts on the needs.
+    What each level must leave uncovered does not depend on the costs: it is found
+    once, and then each solve is for the least cost alone.
     """
 
-    def __init__(
-        self,
-        problem: Problem,
-        time_limit: float = np.inf,
-        stop: Callable[[], bool] = lambda: False,
-    ) -> None:
-        """Build the rows.
-
-        Args:
-            problem: The period's program.
-            time_limit: Time after which a search ends with what it has, s.
-            stop: Asked now and then while a search goes on; True ends it at once.
-        """
+    def __init__(self, problem: Problem) -> None:
+        """Build the rows; costs, former tasks and swap costs are not looked at."""
         self.problem = problem
-        self._stop = stop
-        self.deadline = time.perf_counter() + time_limit
+        self._levelled: Minimizer | None = None
         self.robot, self.task = np.nonzero(problem.eligible)
         self.pairs = len(self.robot)
         self.counts = np.flatnonzero(problem.least > 0)
@@ -179,12 +150,15 @@ class Integers:
         )
         return cuts, np.array(right)
 
-    def solve(self, prices: np.ndarray, start: np.ndarray | None = None) -> tuple:
+    def solve(
+        self, costs: np.ndarray, start: np.ndarray | None = None, limit: Limit = FREE
+    ) -> tuple[np.ndarray, bool, float]:
         """Solve level by level, then for the least cost.
 
         Args:
-            prices: κ w_im + e_im, Wh, shape (N, M).
+            costs: Cost of each α_im = 1, Wh, shape (N, M).
             start: An assignment to start from, shape (N,).
+            limit: When to end with what there is.
 
         Returns:
             Task of each robot (N,), whether it is proven optimal, a bound on the
@@ -194,18 +168,23 @@ class Integers:
             SearchFailed: The time ran out before any solution, or the solver failed.
         """
         cost = np.zeros(self.columns)
-        cost[: self.pairs] = reduced_costs(self.problem, prices)[self.robot, self.task]
-        high = self.high.copy()
-        high[self.pairs :] = self.least_missing[self.pairs :]
+        cost[: self.pairs] = costs[self.robot, self.task]
         hint = None if start is None else self._columns_of(start)
-        found = self._minimize(cost, high, [], hint)
-        if found is None:
-            high, held, proven = self._levels()
-            found = self._minimize(cost, high, held, hint)
+        if self._levelled is None:
+            high = self.high.copy()
+            high[self.pairs :] = self.least_missing[self.pairs :]
+            program, proven = self._minimizer(high, []), True
+            found = program.minimize(cost, limit, hint)
             if found is None:
-                raise SearchFailed
+                high, held, proven = self._levels(limit)
+                program = self._minimizer(high, held)
+                found = program.minimize(cost, limit, hint)
+            if proven:
+                self._levelled = program
         else:
-            proven = True
+            proven, found = True, self._levelled.minimize(cost, limit, hint)
+        if found is None:
+            raise SearchFailed
         gap = max(float(cost @ found.values) - found.bound, 0.0)
         return self._task_of(found.values), found.proven and proven, gap
 
@@ -216,7 +195,7 @@ class Integers:
         task[self.robot[on]] = self.task[on]
         return task
 
-    def _levels(self) -> tuple[np.ndarray, Held, bool]:
+    def _levels(self, limit: Limit) -> tuple[np.ndarray, Held, bool]:
         """Find what each level must leave uncovered: upper bounds of σ, held sums, proven."""
         high, held, proven = self.high.copy(), [], True
         nothing = np.zeros(self.columns)
@@ -225,11 +204,11 @@ class Integers:
             if not here.any():
                 continue
             covered = np.where(here, self.least_missing, high)
-            if self._minimize(nothing, covered, held) is not None:
+            if self._minimizer(covered, held).minimize(nothing, limit) is not None:
                 high = covered
                 continue
             objective = np.where(here, self.weight, 0.0)
-            found = self._minimize(objective, high, held)
+            found = self._minimizer(high, held).minimize(objective, limit)
             if found is None:
                 raise SearchFailed
             # Rounded, so that the sum held is one that whole robots attain.
@@ -256,89 +235,18 @@ class Integers:
         )
         return values
 
-    def _minimize(
-        self,
-        objective: np.ndarray,
-        high: np.ndarray,
-        held: Held,
-        hint: np.ndarray | None = None,
-    ) -> Found | None:
-        """Minimize over the relaxation; over the integers only where it is fractional.
-
-        Returns:
-            What was found; None where there is no solution.
-
-        Raises:
-            SearchFailed: The time ran out before any solution, or the solver failed.
-        """
-        solver = Quiet()
-        solver.setOptionValue("threads", 1)
-        solver.setOptionValue("mip_rel_gap", 0.0)
-        solver.setOptionValue("mip_abs_gap", 1e-9)
-        if np.isfinite(self.deadline):
-            left = self.deadline - time.perf_counter()
-            solver.setOptionValue("time_limit", max(left, 0.0))
-        solver.cbSimplexInterrupt += self._interrupt
-        solver.cbMipInterrupt += self._interrupt
-        solver.passModel(self._model(objective, high, held))
-        solver.run()
-        status = solver.getModelStatus()
-        if status == highspy.HighsModelStatus.kInfeasible:
-            return None
-        if status != highspy.HighsModelStatus.kOptimal:
-            raise SearchFailed
-        values = np.array(solver.getSolution().col_value)
-        alpha = values[: self.pairs]
-        if np.all(np.minimum(alpha, 1 - alpha) < INTEGRAL):
-            return Found(values, True, float(objective @ values))
-        # Begun from the relaxation's basis, HiGHS 1.16 at times calls optimal what is not.
-        solver.clearSolver()
-        pairs = np.arange(self.pairs, dtype=np.int32)
-        kinds = np.full(self.pairs, highspy.HighsVarType.kInteger)
-        solver.changeColsIntegrality(self.pairs, pairs, kinds)
-        if hint is not None:
-            solution = highspy.HighsSolution()
-            solution.col_value = hint.tolist()
-            solver.setSolution(solution)
-        solver.run()
-        status = solver.getModelStatus()
-        if status == highspy.HighsModelStatus.kInfeasible:
-            return None
-        info = solver.getInfo()
-        if info.primal_solution_status != highspy.SolutionStatus.kSolutionStatusFeasible:
-            raise SearchFailed
-        values = np.array(solver.getSolution().col_value)
-        proven = status == highspy.HighsModelStatus.kOptimal
-        bound = float(objective @ values) if proven else info.mip_dual_bound
-        return Found(values, proven, bound)
-
-    def _interrupt(self, event: HighsCallbackEvent) -> None:
-        if self._stop():
-            event.interrupt()
-
-    def _model(self, objective: np.ndarray, high: np.ndarray, held: Held) -> highspy.HighsLp:
+    def _minimizer(self, high: np.ndarray, held: Held) -> Minimizer:
+        """Give what minimizes with σ up to ``high`` (columns,) and some sums held."""
         needs = slice(self.pairs + len(self.counts), None)
         cuts, due = self._cuts(high[needs] <= self.least_missing[needs])
-        blocks = [self.rows, cuts, *(sparse.csr_array(row[None]) for row, _ in held)]
-        rows = sparse.vstack(blocks, format="csr")
-        model = highspy.HighsLp()
-        model.num_col_, model.num_row_ = self.columns, rows.shape[0]
-        model.col_cost_, model.col_lower_, model.col_upper_ = objective, self.low, high
-        model.row_lower_ = np.concatenate([self.row_low, due, np.full(len(held), -np.inf)])
-        model.row_upper_ = np.concatenate(
-            [self.row_high, np.full(len(due), np.inf), [value for _, value in held]]
+        sums = [sparse.csr_array(row[None]) for row, _ in held]
+        return Minimizer(
+            rows=sparse.vstack([self.rows, cuts, *sums], format="csr"),
+            row_low=np.concatenate([self.row_low, due, np.full(len(held), -np.inf)]),
+            row_high=np.concatenate(
+                [self.row_high, np.full(len(due), np.inf), [value for _, value in held]]
+            ),
+            low=self.low,
+            high=high,
+            whole=self.pairs,
         )
-        model.a_matrix_.format_ = highspy.MatrixFormat.kRowwise
-        model.a_matrix_.start_ = rows.indptr
-        model.a_matrix_.index_ = rows.indices
-        model.a_matrix_.value_ = rows.data
-        return model
-
-
-class Quiet(highspy.Highs):
-    """HiGHS that prints nothing, not even the banner that comes with its callbacks."""
-
-    def enableCallbacks(self) -> None:
-        """Switch the output off first."""
-        self.setOptionValue("output_flag", False)
-        super().enableCallbacks()
