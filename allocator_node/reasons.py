@@ -231,7 +231,7 @@ class Reasons:
         if now.pinned[i, m] and not then.pinned[i, m]:
             return _Reason(0, Cause.PIN, f"{name} is pinned to {task}")
         if not then.known[i]:
-            return _Reason(7, Cause.START, f"{name} reported for the first time")
+            return _Reason(7, Cause.START, f"{name} is heard for the first time")
         if not then.heard[i] and now.heard[i]:
             return _Reason(2, Cause.RETURNED, f"{name} is heard again")
         if now.suitability[i, m] > then.suitability[i, m] + NOTICEABLE:
@@ -252,7 +252,7 @@ class Reasons:
             return _Reason(1, Cause.TASK, f"{name} is {word}")
         if now.active[m] and not then.active[m]:
             if not then.heard.any():
-                return _Reason(7, Cause.START, f"{name} begins")
+                return _Reason(6, Cause.START, f"{name} gets its first robots")
             return _Reason(1, Cause.TASK, f"{name} is to be done now")
         if now.tasks[m] != then.tasks[m]:
             return _Reason(1, Cause.TASK, f"{name} was {_difference(then.tasks[m], now.tasks[m])}")

@@ -48,7 +48,7 @@ def test_start_of_a_robot_that_reports_late():
     change = only(crew)
     assert (change.before, change.after) == (("one",), ("two",))
     assert change.cause is Cause.START
-    assert change.detail == "two reported for the first time"
+    assert change.detail == "two is heard for the first time"
 
 
 def test_feature():
