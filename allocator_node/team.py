@@ -221,3 +221,10 @@ class Team:
     def with_tasks(self, tasks: Mapping[str, Task]) -> Team:
         """Give the same team with another task table."""
         return replace(self, tasks=dict(tasks))
+
+
+def target_topics(team: Team) -> list[str]:
+    """Give the pose topics that tasks of a team keep to."""
+    targets = [task.keeps_to for task in team.tasks.values()]
+    topics = [target.topic for target in targets if isinstance(target, Target) and target.topic]
+    return list(dict.fromkeys(topics))

@@ -213,7 +213,7 @@ BAD_TEAMS = [
      "15: robots.rover_1.battery.reserve: found 1; must be less than 1"),
     ("capacity_wh: 480", "capacity: 480",
      "15: robots.rover_1.battery.capacity: found an unknown key; must be one of capacity_wh, "
-     "drive_w, idle_w, reserve (did you mean capacity_wh?)"),
+     "charge_w, drive_w, idle_w, reserve (did you mean capacity_wh?)"),
     ("battery: {capacity_wh: 480, reserve: 0.2}", "battery: 480",
      "15: robots.rover_1.battery: found 480; must be a mapping (key: value)"),
     ("dock: [2, 2]", "dock: [2, 60]",
@@ -359,7 +359,7 @@ BAD_WORLDS = [
      "1: noise.position: found an unknown key; must be one of heading_rad, position_m (did you "
      "mean position_m?)"),
     ("ground:\n", "grounds:\n",
-     "2: grounds: found an unknown key; must be one of events, ground, noise (did you mean "
+     "2: grounds: found an unknown key; must be one of events, ground, noise, targets (did you mean "
      "ground?)"),
     ("circle: [55, 41, 6]", "circle: [55, 41]",
      "3: ground[0].circle: found a list with 2 entries; must have 3 entries"),

@@ -40,6 +40,7 @@ robots:
     pose: {topic: covered/pose, type: geometry_msgs/msg/PoseWithCovarianceStamped}
 tasks:
   gate: {kind: watch, at: [8, 2]}
+  beside: {kind: follow, target: {topic: guide/pose}, offset: [-2, 0]}
 """
 PLACED, PLAIN, COVERED = range(3)
 
@@ -124,6 +125,18 @@ def test_other_pose_types_have_no_velocity(post: Post) -> None:
     seen = post.look()
     assert seen.poses[[PLAIN, COVERED], 0] == pytest.approx([1, 2])
     assert np.isnan(seen.velocities[[PLAIN, COVERED]]).all()
+
+
+def test_targets_on_topics_are_heard_and_stay(post: Post) -> None:
+    """A target's last pose stays; one in another frame is refused."""
+    assert post.look().targets == {}
+    post.send("/guide/pose", post.stamped(PoseStamped(), "site", x=5.0, y=6.0))
+    first, second = post.look(), post.look()
+    for seen in (first, second):
+        assert seen.targets["guide/pose"].pose == pytest.approx([5, 6, 0, 0])
+    post.send("/guide/pose", post.stamped(PoseStamped(), "elsewhere", x=9.0))
+    assert post.look().targets["guide/pose"].pose[0] == 5.0
+    assert "elsewhere" in post.inbox.complaints.recent()["/guide/pose"]
 
 
 def test_only_the_newest_pose_counts(post: Post) -> None:

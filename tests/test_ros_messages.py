@@ -63,6 +63,7 @@ def decision(**changes) -> Decision:
         "shortfalls": (),
         "notices": (),
         "seconds": {},
+        "activity": ("working", "charging"),
     }
     return Decision(**(usual | changes))
 
@@ -112,6 +113,15 @@ def test_levels_are_those_of_diagnostic_status() -> None:
         assert bytes([level.value]) == getattr(DiagnosticStatus, level.name)
 
 
+def test_the_status_tells_progress_and_errands() -> None:
+    """How far the work is, and what a robot without a task does."""
+    busy, free = (outbox.robot_status(i, decision(progress={"gate": 0.25})) for i in (0, 1))
+    assert busy.message == "rover_1 does gate, 25% done"
+    assert values_of(busy)["progress"] == "0.250"
+    assert free.message == "rover_2 has no task and charges"
+    assert values_of(free)["activity"] == "charging" and "progress" not in values_of(free)
+
+
 def test_the_status_of_a_robot() -> None:
     """Task, since, specialization and energy, and the worst of what is wrong with it."""
     notices = (Notice("rover_1", Level.WARN, "its camera is weak"),)
@@ -122,6 +132,7 @@ def test_the_status_of_a_robot() -> None:
     assert values_of(status) == {
         "task": "gate",
         "since": "10.000",
+        "activity": "working",
         "specialization.gate": "0.500",
         "specialization.pond": "0.500",
         "energy": "0.750",

@@ -14,8 +14,8 @@ from rclpy.node import Node
 from sensor_msgs.msg import BatteryState
 from std_msgs.msg import Float32
 
-from ..observation import HealthReport, MovedGoal, Observation
-from ..team import Robot, Team
+from ..observation import HealthReport, MovedGoal, Observation, TargetPose
+from ..team import PoseSource, Robot, Team, target_topics
 from .clockwork import arrival_time
 from .complaints import Complaints
 from .conversions import numbers, yaw_of
@@ -63,6 +63,7 @@ class Inbox:
         self._robots = tuple(team.robots)
         self._goals: dict[str, PolledSubscription] = {}
         self._quality: dict[tuple[str, str], PolledSubscription] = {}
+        self._targets: dict[str, PoseTopic] = {}
         self._last = Observation.nothing(len(robots))
         self._last_look = np.nan
         self.watch(team)
@@ -76,14 +77,19 @@ class Inbox:
         return PolledSubscription(self._node, message_type, topic, qos, self.complaints)
 
     def watch(self, team: Team) -> None:
-        """Follow a task table: subscribe to its goals and qualities, drop the others."""
+        """Follow a task table: subscribe to its goals, targets and qualities, drop the others."""
         self._tasks = tuple(team.tasks)
         self._follow(
             self._goals,
             list(self._tasks),
             lambda task: self._subscription(PoseStamped, f"~/tasks/{task}/goal", EVENTS),
         )
+        self._follow(self._targets, target_topics(team), self._target)
         self.notice_publishers()
+
+    def _target(self, topic: str) -> PoseTopic:
+        source = PoseSource(topic=topic, type="geometry_msgs/msg/PoseStamped")
+        return PoseTopic(self._node, source, self._frame, self.complaints)
 
     def notice_publishers(self) -> None:
         """Subscribe to the quality topics that are in use; call about once a second."""
@@ -106,9 +112,9 @@ class Inbox:
 
     @staticmethod
     def _follow(
-        table: dict[Value, PolledSubscription],
+        table: dict[Value, PolledSubscription | PoseTopic],
         wanted: list[Value],
-        subscribe: Callable[[Value], PolledSubscription],
+        subscribe: Callable[[Value], PolledSubscription | PoseTopic],
     ) -> None:
         for key in table.keys() - set(wanted):
             table.pop(key).close()
@@ -142,8 +148,18 @@ class Inbox:
             health=tuple(self._health()),
             goals=tuple(self._moved_goals()),
             quality=dict(self._qualities()),
+            targets=self._seen_targets(now),
         )
         return self._last
+
+    def _seen_targets(self, now: float) -> dict[str, TargetPose]:
+        """Give the newest pose of each target topic that was ever heard."""
+        seen = {t: pose for t, pose in self._last.targets.items() if t in self._targets}
+        for topic, source in self._targets.items():
+            sighting = source.look(now)
+            if sighting is not None:
+                seen[topic] = TargetPose(sighting.pose, sighting.time)
+        return seen
 
     def _charge(self, topic: str, message: BatteryState) -> float | None:
         """Give BatteryState.percentage: "0 to 1 range (If unmeasured NaN)", else None."""
@@ -216,12 +232,14 @@ class Inbox:
         self._last_look = np.nan
         for source in self._poses:
             source.forget_times()
+        for source in self._targets.values():
+            source.forget_times()
 
     def close(self) -> None:
         """End all subscriptions."""
         for source in self._poses:
             source.close()
-        tables = (self._goals, self._quality)
+        tables = (self._goals, self._quality, self._targets)
         for subscription in (
             *self._batteries, self._diagnostics, *(s for table in tables for s in table.values())
         ):

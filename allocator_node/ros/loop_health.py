@@ -141,7 +141,9 @@ class LoopHealth:
 
     def _coverage(self, decision: Decision) -> DiagnosticStatus:
         lacking = {shortfall.task: None for shortfall in decision.shortfalls}
-        values = {"uncovered": ", ".join(lacking)}
+        values = {"uncovered": ", ".join(lacking)} | {
+            f"progress.{task}": f"{share:.3f}" for task, share in decision.progress.items()
+        }
         if not lacking:
             return self._status("coverage", Level.OK, "every active task has what it needs", values)
         message = "; ".join(str(shortfall) for shortfall in decision.shortfalls)

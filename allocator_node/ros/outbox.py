@@ -19,6 +19,13 @@ ANNOUNCE = 1.0
 TROUBLE = {Cause.FEATURE, Cause.EFFICACY, Cause.SILENT, Cause.ENERGY}
 """Causes that call for somebody's attention: something does not work as it should."""
 
+ERRANDS = {
+    "to dock": "goes to its dock",
+    "queueing": "waits for its dock",
+    "charging": "charges",
+}
+"""What a robot without a task does for itself, as part of a sentence."""
+
 
 class Outbox:
     """Publishes decisions for people and programs, all in standard messages."""
@@ -100,7 +107,12 @@ def robot_status(i: int, decision: Decision) -> DiagnosticStatus:
     level = max((notice.level.value for notice in notices), default=Level.OK.value)
     if not decision.heard[i]:
         level = Level.ERROR.value
+    activity = decision.activity[i] if decision.activity else ""
     sentence = f"{robot} does {task}" if task else f"{robot} has no task"
+    if activity in ERRANDS and decision.heard[i]:
+        sentence += f" and {ERRANDS[activity]}"
+    if task in decision.progress:
+        sentence += f", {decision.progress[task]:.0%} done"
     if not decision.heard[i]:
         sentence += ", not heard from"
     sentence = "; ".join([sentence, *(notice.text for notice in notices)])
@@ -112,6 +124,8 @@ def robot_status(i: int, decision: Decision) -> DiagnosticStatus:
         {
             "task": task or "",
             "since": float(decision.since[i]) if task else "",
+            "activity": activity,
+            **({"progress": float(decision.progress[task])} if task in decision.progress else {}),
             **{
                 f"specialization.{name}": float(specialization[m])
                 for m, name in enumerate(decision.tasks)

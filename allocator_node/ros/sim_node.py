@@ -95,6 +95,9 @@ class SimNode(Node):
             task: self._publisher(PoseStamped, f"{allocator}/tasks/{task}/goal")
             for task in team.tasks
         }
+        self._targets = {
+            target.topic: self._publisher(PoseStamped, target.topic) for target in world.targets
+        }
         self._parameters = self.create_client(SetParameters, f"{allocator}/set_parameters")
         for robot, obedience in zip(robots, self._obedience, strict=True):
             kind = COMMAND_TYPES[robot.command.type]
@@ -142,6 +145,9 @@ class SimNode(Node):
                 body = turned(velocities[i], -poses[i][3])
                 message = pose_report(source.type, header, robot.name, pose, body)
                 self._poses[i].publish(message)
+        header = Header(stamp=stamp, frame_id=self._team.frame)
+        for topic, pose in self._sim.target_poses().items():
+            self._targets[topic].publish(PoseStamped(header=header, pose=pose_message(pose)))
 
     def _publish_health(self, now: float) -> None:
         reports = self._sim.health()

@@ -8,7 +8,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from ..drives import Fleet
-from ..observation import HealthReport, MovedGoal, Observation
+from ..observation import HealthReport, MovedGoal, Observation, TargetPose
 from ..team import Robot, Team
 from .motion import advance, turned, wrapped
 from .world_file import BatteryEvent, FeatureEvent, PoseEvent, StalledEvent, TaskEvent, World
@@ -146,7 +146,21 @@ class SimulatedTeam:
             charge_times=np.full(len(self.robots), self.now),
             health=tuple(health),
             goals=goals,
+            targets={
+                topic: TargetPose(pose, self.now) for topic, pose in self.target_poses().items()
+            },
         )
+
+    def target_poses(self) -> dict[str, np.ndarray]:
+        """Give where the world's targets are: topic to x, y, z (m), heading (rad), (4,)."""
+        poses = {}
+        for target in self._world.targets:
+            times, *way = np.array(target.path).T
+            x, y = (np.interp(self.now, times, part) for part in way)
+            leg = int(np.clip(np.searchsorted(times, self.now, "right"), 1, max(len(times) - 1, 1)))
+            ahead = [part[min(leg, len(times) - 1)] - part[leg - 1] for part in way]
+            poses[target.topic] = np.array([x, y, 0.0, np.arctan2(ahead[1], ahead[0])])
+        return poses
 
     def _limited(self, commands: np.ndarray) -> np.ndarray:
         """Give commands within the drives' limits, (N, 4)."""

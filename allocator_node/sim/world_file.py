@@ -14,7 +14,7 @@ from ..files.form import BROKEN, Draft, read_fields
 from ..files.free_space import FreeSpace
 from ..files.team_checks import check_distinct, check_inside, points_of
 from ..files.wording import described, one_of
-from ..team import Checked, Name, NonNegative, Point, Positive, Share, Team
+from ..team import Checked, Name, NonNegative, Point, Positive, Share, Team, target_topics
 
 
 @dataclass(frozen=True)
@@ -119,17 +119,33 @@ TASK_KEYS = ("active", "move")
 
 
 @dataclass(frozen=True)
+class MovingTarget(Checked):
+    """Something with a pose topic that tasks keep to; it looks where it goes.
+
+    Attributes:
+        topic: Its topic, as a task names it.
+        path: Where it is when: t (s), x, y (m), in the order of time; straight
+            between, and standing before and after.
+    """
+
+    topic: Name
+    path: Annotated[tuple[tuple[NonNegative, float, float], ...], MinLen(1)]
+
+
+@dataclass(frozen=True)
 class World(Checked):
     """What a simulated team meets; by default nothing.
 
     Attributes:
         noise: Noise of the reported poses.
         ground: Patches of bad ground.
+        targets: What moves on the pose topics that tasks keep to.
         events: What happens, in the order of time.
     """
 
     noise: Noise = field(default_factory=Noise)
     ground: tuple[GroundPatch, ...] = ()
+    targets: tuple[MovingTarget, ...] = ()
     events: tuple[Event, ...] = ()
 
 
@@ -152,6 +168,7 @@ def _world(document: Document, team: Team) -> World:
         return World()
     draft = read_fields(document, (), document.value, World, elsewhere=("events",))
     _check_ground(document, draft.get("ground") or (), team)
+    _check_targets(document, draft.get("targets") or (), team)
     events = []
     if isinstance(document.value, Mapping):
         listed = document.value.get("events")
@@ -180,6 +197,24 @@ def _check_ground(document: Document, ground: tuple[GroundPatch, ...], team: Tea
             if feature not in features:
                 where = (*place, "affects", entry)
                 document.refuse(where, described(feature), one_of(features, feature))
+
+
+def _check_targets(
+    document: Document, targets: tuple[MovingTarget, ...], team: Team
+) -> None:
+    topics = target_topics(team)
+    check_distinct(document, ("targets",), [target.topic for target in targets])
+    for index, target in enumerate(targets):
+        place = ("targets", index)
+        if target.topic not in topics:
+            none = "must be left out: no task keeps to a topic"
+            allowed = one_of(topics, target.topic) if topics else none
+            document.refuse((*place, "topic"), described(target.topic), allowed)
+        times = [time for time, _, _ in target.path]
+        for later in range(1, len(times)):
+            if times[later] <= times[later - 1]:
+                found = f"the time {times[later]:g} after {times[later - 1]:g}"
+                document.refuse((*place, "path", later), found, "must be later than the one before")
 
 
 def _read_event(document: Document, place: Place, data: Any, team: Team) -> Any:
