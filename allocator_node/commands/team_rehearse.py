@@ -7,6 +7,7 @@ import sys
 from collections.abc import Sequence
 from pathlib import Path
 
+from rich import box
 from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 from rich.table import Table
@@ -79,7 +80,7 @@ def progress_bar(screen: Console) -> Progress:
 
 def summary(rehearsal: Rehearsal) -> list:
     """Give what happened as parts to print."""
-    tasks = Table(pad_edge=False)
+    tasks = Table(box=box.SIMPLE_HEAD, pad_edge=False)
     for heading in ("task", "covered", "active", "finished"):
         tasks.add_column(heading, justify="left" if heading == "task" else "right")
     for task in rehearsal.tasks:
