@@ -22,7 +22,7 @@ from .screen import change_text, console, facts_table
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
-    """Rehearse, write run.json and print a summary; give the exit status (2: wrong file)."""
+    """Rehearse, write run.json and report.html, print a summary; exit status 2: wrong file."""
     asked = parser().parse_args(arguments)
     screen = console()
     try:
@@ -37,10 +37,17 @@ def main(arguments: Sequence[str] | None = None) -> int:
             team, world, asked.seconds, asked.seed,
             on_progress=lambda now: progress.update(bar, completed=now),
         )
-    path = write_run(rehearsal, asked.out)
+    # Imported late: drawing takes a second to load.
+    from ..report.page import write_report
+
     for part in summary(rehearsal):
         screen.print(part)
-    screen.print(f"written: {path}")
+    name = asked.team.name + (f" with {asked.world.name}" if asked.world else "")
+    paths = (
+        write_run(rehearsal, asked.out),
+        write_report(vars(rehearsal), asked.out, f"Rehearsal of {name}, seed {asked.seed}"),
+    )
+    screen.print(f"written: {', '.join(map(str, paths))}")
     return 0
 
 
@@ -52,7 +59,9 @@ def parser() -> argparse.ArgumentParser:
     parser.add_argument("team", type=Path, metavar="TEAM", help="team file")
     parser.add_argument("world", type=Path, nargs="?", metavar="WORLD", help="world file")
     parser.add_argument("--seconds", type=positive, required=True, help="how long, s")
-    parser.add_argument("--out", type=Path, required=True, help="directory for run.json")
+    parser.add_argument(
+        "--out", type=Path, required=True, help="directory for run.json and report.html"
+    )
     parser.add_argument("--seed", type=int, default=0, help="seed of the pose noise (0)")
     return parser
 

@@ -21,12 +21,13 @@ h2 { border-top: 1px solid #bbb; padding-top: 1rem; }
 p { max-width: 60rem; } .lead { font-size: 1.1rem; }
 nav { margin: .5rem 0; } nav a { margin-right: 1rem; white-space: nowrap; } a { color: #005a8c; }
 figure { margin: .75rem 0; overflow-x: auto; } figcaption { color: #444; font-size: .9rem; }
-img { max-width: 100%; height: auto; display: block; }
+img { max-width: 100%; min-width: 46rem; height: auto; display: block; }
 .wide { overflow-x: auto; } .tall { max-height: 32rem; overflow: auto; }
 table { border-collapse: collapse; font-size: .92rem; margin: .25rem 0; }
 caption { text-align: left; font-weight: 600; padding: .5rem 0 .25rem; }
 th, td { text-align: left; vertical-align: top; padding: .2rem .75rem .2rem 0;
          border-bottom: 1px solid #ddd; white-space: pre-line; }
+td:last-child:not(.n) { min-width: 15rem; } details { margin: .5rem 0; }
 th { border-bottom: 2px solid #888; } td.n, th.n { text-align: right; white-space: nowrap;
      font-variant-numeric: tabular-nums; }
 .cards { display: flex; flex-wrap: wrap; gap: .75rem; margin: 1rem 0; }
@@ -36,7 +37,8 @@ th { border-bottom: 2px solid #888; } td.n, th.n { text-align: right; white-spac
 .bad, .red { color: #a03000; } .good, .green { color: #00694b; } .yellow { color: #7a5200; }
 .bold { font-weight: 600; } .cyan { color: #005a8c; } .dim, .note { color: #555; }
 @media print { body { max-width: none; font-size: 11px; } .tall { max-height: none; }
-               nav { display: none; } figure, tr { break-inside: avoid; } }
+               img { min-width: 0; } nav { display: none; }
+               figure, tr { break-inside: avoid; } }
 """
 
 

@@ -17,7 +17,7 @@ from .site import Site
 from .world import SimulatedTeam
 
 EFFICACY_STEP = 0.01
-"""Efficacies are recorded when they have changed by this much."""
+"""Efficacies and specializations are recorded when they have changed by this much."""
 
 PROGRESS_STEP = 0.01
 """The progress of tasks is recorded when it has changed by this much."""
@@ -54,6 +54,12 @@ class Rehearsal:
         progress: Shares done of tasks that have such a thing: t, task, value.
         activities: Changes of what a robot does: t, robot, activity.
         notices: Times a person should have known something: t, until, about, level, text.
+        silent: Times a robot was not heard from: t, until, robot.
+        specialization: Changes of s_im = a_im · η_im from 0: t, robot, task, value.
+        nearest: Each second the smallest distance between two bodies' surfaces: rows of
+            t, distance (m), robot, robot, x, y of the middle between them (m).
+        decision_ms: Each second the longest wall time of a decision: rows of t, ms.
+        site: See :func:`site_of`.
     """
 
     seconds: float
@@ -77,6 +83,30 @@ class Rehearsal:
     progress: list[dict[str, Any]]
     activities: list[dict[str, Any]]
     notices: list[dict[str, Any]]
+    silent: list[dict[str, Any]]
+    specialization: list[dict[str, Any]]
+    nearest: list[list[Any]]
+    decision_ms: list[list[float]]
+    site: dict[str, Any]
+
+
+def site_of(team: Team) -> dict[str, Any]:
+    """Give what a picture of the site needs, as JSON-able data.
+
+    The keys: frame, boundary (None: open), keep_out (name, polygon), and by robot
+    radius (m), dock, capacity_wh and reserve; by task needs and head count.
+    """
+    robots, tasks = team.robots.values(), team.tasks.values()
+    return {
+        "frame": team.frame,
+        "boundary": team.boundary,
+        "keep_out": [{"name": area.name, "polygon": area.polygon} for area in team.keep_out],
+        "radius": {robot.name: robot.radius for robot in robots},
+        "dock": {robot.name: robot.dock for robot in robots},
+        "capacity_wh": {robot.name: robot.battery.capacity_wh for robot in robots},
+        "reserve": {robot.name: robot.battery.reserve for robot in robots},
+        "needs": {task.name: dict(task.needs) for task in tasks},
+    }
 
 
 def write_run(rehearsal: Rehearsal, directory: Path) -> Path:
@@ -126,6 +156,7 @@ class Recorder:
     violations: np.ndarray = field(default_factory=lambda: np.zeros(2, dtype=int))
     shortfalls: Spells = field(default_factory=Spells)
     notices: Spells = field(default_factory=Spells)
+    silent: Spells = field(default_factory=Spells)
 
     def __post_init__(self) -> None:
         self._task_of: dict[str, str | None] = {}
@@ -133,6 +164,10 @@ class Recorder:
         self._covered: dict[str, float] = dict.fromkeys(self.team.tasks, 0.0)
         self._efficacy: dict[tuple[str, str], float] = defaultdict(lambda: 1.0)
         self._efficacies: list[dict[str, Any]] = []
+        self._specialization: dict[tuple[str, str], float] = defaultdict(float)
+        self._specializations: list[dict[str, Any]] = []
+        self._nearest: list[list[Any]] = []
+        self._decision_ms: list[list[float]] = []
         self._paths: dict[str, list[list[float]]] = {name: [] for name in self.team.robots}
         self._charges: dict[str, list[list[float]]] = {name: [] for name in self.team.robots}
         self._activity_of: dict[str, str] = {}
@@ -146,6 +181,10 @@ class Recorder:
         """Record a decision that holds for a period and took so long to make."""
         now = round(decision.time, 6)
         self._wall_ms.append(1000 * wall_seconds)
+        if not self._decision_ms or now >= self._decision_ms[-1][0] + TRACE_PERIOD - 1e-9:
+            self._decision_ms.append([now, 0.0])
+        worst = max(self._decision_ms[-1][1], 1000 * wall_seconds)
+        self._decision_ms[-1][1] = round(worst, 3)
         for change in decision.reallocations:
             self.events.append({
                 "t": now,
@@ -183,16 +222,31 @@ class Recorder:
             (n.about, n.level): {"about": n.about, "level": n.level.name.lower(), "text": n.text}
             for n in decision.notices
         })
+        self.silent.note(now, {
+            (robot,): {"robot": robot}
+            for robot, heard in zip(decision.robots, decision.heard, strict=True) if not heard
+        })
         if now >= self._trace_due - 1e-9:
-            self._note_efficacies(decision, now)
+            self._note(decision, decision.efficacy, self._efficacy, self._efficacies)
+            self._note(
+                decision, decision.specialization, self._specialization, self._specializations
+            )
 
     def moved(self, world: SimulatedTeam) -> None:
         """Record where the robots are after a step of the simulation."""
         nearest = self.site.separation(world.true_poses)
-        if nearest is not None and nearest[0] < self.separation:
-            self.separation, pair = nearest
+        if nearest is not None:
+            gap, pair = nearest
             names = sorted(world.robots[i] for i in pair)
-            self.closest = {"t": round(world.now, 6), "robots": names}
+            now = round(world.now, 6)
+            if gap < self.separation:
+                self.separation, self.closest = gap, {"t": now, "robots": names}
+            middle = np.round(world.true_poses[list(pair), :2].mean(axis=0), 3).tolist()
+            row = [now, round(gap, 4), *names, *middle]
+            if not self._nearest or now // TRACE_PERIOD > self._nearest[-1][0] // TRACE_PERIOD:
+                self._nearest.append(row)
+            elif gap < self._nearest[-1][1]:
+                self._nearest[-1] = row
         self.violations += [np.count_nonzero(out) for out in self.site.outside(world.true_poses)]
 
     def trace(self, world: SimulatedTeam) -> None:
@@ -242,14 +296,25 @@ class Recorder:
             progress=self._progress,
             activities=self._activities,
             notices=self.notices.rows,
+            silent=self.silent.rows,
+            specialization=self._specializations,
+            nearest=self._nearest,
+            decision_ms=self._decision_ms,
+            site=site_of(self.team),
         )
 
-    def _note_efficacies(self, decision: Decision, now: float) -> None:
+    @staticmethod
+    def _note(
+        decision: Decision,
+        values: np.ndarray,
+        known: dict[tuple[str, str], float],
+        rows: list[dict[str, Any]],
+    ) -> None:
+        """Add a row for each value of a robot for a task, (N, M), that is not as known."""
+        now = round(decision.time, 6)
         for i, robot in enumerate(decision.robots):
             for m, task in enumerate(decision.tasks):
-                value = round(float(decision.efficacy[i, m]), 4)
-                if abs(value - self._efficacy[robot, task]) >= EFFICACY_STEP:
-                    self._efficacy[robot, task] = value
-                    self._efficacies.append(
-                        {"t": now, "robot": robot, "task": task, "value": value}
-                    )
+                value = round(float(values[i, m]), 4)
+                if abs(value - known[robot, task]) >= EFFICACY_STEP:
+                    known[robot, task] = value
+                    rows.append({"t": now, "robot": robot, "task": task, "value": value})
