@@ -54,18 +54,21 @@ def evaluate(
         proven: Whether a solver proved it optimal.
         gap: Bound on its distance from the optimum, where it is not.
     """
-    robots, tasks = prices.shape
     busy = np.flatnonzero(task >= 0)
-    alpha = np.zeros((robots, tasks))
-    alpha[busy, task[busy]] = 1.0
-    missing_robots = np.maximum(problem.least - alpha.sum(axis=0), 0)
-    missing_needs = np.maximum(problem.needs - alpha.T @ problem.capability, 0)
-    missing_needs[missing_needs < 1e-9 * np.maximum(problem.needs, 1)] = 0
-    share = ratio(missing_robots, problem.least) + ratio(missing_needs, problem.needs).sum(axis=1)
-    levels = np.array([share[problem.priority == q].sum() for q in LEVELS])
-    keeps = problem.keeps_on
-    taken_off = keeps.any(axis=1) & ~(keeps & (alpha > 0)).any(axis=1)
-    cost = prices[busy, task[busy]].sum() + problem.swap_cost[taken_off].sum()
+    on = task[busy]
+    missing_robots = np.maximum(problem.least - np.bincount(on, minlength=len(problem.least)), 0)
+    share = ratio(missing_robots, problem.least)
+    missing_needs = np.zeros(problem.needs.shape)
+    if problem.needs.any():
+        brought = np.zeros(problem.needs.shape)
+        np.add.at(brought, on, problem.capability[busy])
+        missing_needs = np.maximum(problem.needs - brought, 0)
+        missing_needs[missing_needs < 1e-9 * np.maximum(problem.needs, 1)] = 0
+        share += ratio(missing_needs, problem.needs).sum(axis=1)
+    levels = np.bincount(problem.priority, share, minlength=len(LEVELS))[list(LEVELS)]
+    taken_off = problem.keeps_on.any(axis=1)
+    taken_off[busy[problem.keeps_on[busy, on]]] = False
+    cost = prices[busy, on].sum() + problem.swap_cost[taken_off].sum()
     return Assignment(
         task, missing_robots, missing_needs, levels, float(cost), proven, 0.0 if proven else gap
     )

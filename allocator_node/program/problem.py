@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -57,7 +58,7 @@ class Problem:
         """Closing speed the task row demands of the command, m/s, shape (N, M)."""
         return np.where(self.closing > 0, self.closing - self.goal_speed, 0.0)
 
-    @property
+    @cached_property
     def keeps_on(self) -> np.ndarray:
         """Where a robot could go on with the task it has, shape (N, M)."""
         keeps = np.zeros(self.eligible.shape, dtype=bool)

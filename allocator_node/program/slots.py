@@ -50,11 +50,10 @@ def solve_slots(problem: Problem, prices: np.ndarray) -> np.ndarray | None:
     if not len(task):
         return found
     number = np.arange(len(task)) - np.repeat(np.cumsum(slots) - slots - pins, slots)
-    gain = _shortfall(problem, amounts, task, number) - _shortfall(
-        problem, amounts, task, number + 1
-    )
+    shortfall = _shortfall(problem, amounts, task, number[:, None] + [0, 1])
+    gain = shortfall[:, 0] - shortfall[:, 1]
     costs = reduced_costs(problem, prices)
-    weight = _weights(problem, costs, task, gain)
+    weight, ordered = _weights(problem, costs, task, gain)
     if weight is None:
         return None
 
@@ -63,8 +62,11 @@ def solve_slots(problem: Problem, prices: np.ndarray) -> np.ndarray | None:
     free = np.flatnonzero(pinned < 0)
     costs = np.where(eligible, costs, np.inf)[free]
     table = np.minimum(costs[:, task] - weight * gain, 0.0)
-    robot, slot = linear_sum_assignment(table)
+    # Slots as rows: what is the same along a row costs the algorithm no search.
+    slot, robot = linear_sum_assignment(table.T)
     busy = table[robot, slot] < 0
+    if not ordered and gain[slot[busy]].sum() < gain.sum() - 1e-9:
+        return None
     found[free[robot[busy]]] = task[slot[busy]]
     return found
 
@@ -90,31 +92,41 @@ def _common_amounts(problem: Problem) -> np.ndarray | None:
 def _shortfall(
     problem: Problem, amounts: np.ndarray, task: np.ndarray, robots: np.ndarray
 ) -> np.ndarray:
-    """Give the relative shortfall of tasks (S,) with that many robots (S,)."""
-    least, needs = problem.least[task], problem.needs[task]
-    missing = np.maximum(needs - robots[:, None] * amounts[task], 0)
+    """Give the relative shortfall of tasks (S,) with numbers of robots (S, n); shape (S, n)."""
+    least, needs = problem.least[task][:, None], problem.needs[task][:, None]
+    share = ratio(np.maximum(least - robots, 0), least)
+    if not needs.any():
+        return share
+    missing = np.maximum(needs - robots[..., None] * amounts[task][:, None], 0)
     missing[missing < 1e-9 * needs] = 0
-    return ratio(np.maximum(least - robots, 0), least) + ratio(missing, needs).sum(axis=1)
+    return share + ratio(missing, needs).sum(axis=2)
 
 
 def _weights(
     problem: Problem, costs: np.ndarray, task: np.ndarray, gain: np.ndarray
-) -> np.ndarray | None:
-    """Give the weight of each slot's gain so that levels come before costs, (S,)."""
+) -> tuple[np.ndarray | None, bool]:
+    """Give the weight of each slot's gain so that gains come before costs, (S,).
+
+    Returns:
+        The weights, None where there are none; whether levels come in their order too.
+    """
     level = problem.priority[task]
     useful = gain > 1e-12
     denominator = int(np.lcm.reduce(np.maximum(problem.least, 1), initial=1))
     shares = gain[useful] * denominator
     if denominator > FINEST or np.abs(shares - np.round(shares)).max(initial=0) > 1e-9:
-        return None
-    below = 1.0 + float(
-        np.where(problem.eligible, np.abs(costs), 0.0).max(axis=1, initial=0.0).sum()
+        return None, False
+    scale = 1.0 + float(
+        np.abs(np.where(problem.eligible, costs, 0.0)).max(axis=1, initial=0.0).sum()
     )
-    scale = below
+    below = scale
     weight = np.zeros(len(task))
     for q in reversed(LEVELS):
         here = (level == q) & useful
         if here.any():
             weight[here] = 2.0 * denominator * below
             below += float(weight[here] @ gain[here])
-    return weight if below * PRECISION < 1e-7 * scale else None
+    if below * PRECISION < 1e-7 * scale:
+        return weight, True
+    weight[useful] = 2.0 * denominator * scale
+    return (weight, False) if weight.sum() * PRECISION < 1e-7 * scale else (None, False)
