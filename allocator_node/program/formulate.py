@@ -150,5 +150,6 @@ def formulate(
         goal_speed=speed,
         kappa=settings.kappa,
         slack_weight=settings.slack_weight,
+        path=path,
     )
     return problem, enough

@@ -33,6 +33,7 @@ class Problem:
         goal_speed: n_im · ṗ*_im, m/s, shape (N, M).
         kappa: κ, Wh.
         slack_weight: ℓ, s²/m².
+        path: Way to each goal, m, shape (N, M); not part of the program, for comparisons.
     """
 
     capability: np.ndarray
@@ -52,6 +53,7 @@ class Problem:
     goal_speed: np.ndarray
     kappa: float
     slack_weight: float
+    path: np.ndarray | None = None
 
     @property
     def demand(self) -> np.ndarray:
