@@ -23,6 +23,9 @@ from allocator_node.team import Battery, HeadCount, HealthRule, KeepOut
 
 SETTINGS = Settings()
 
+FASTEST = np.array([[1.0, 1.5]])
+"""m/s and rad/s of one rover."""
+
 # -- features ------------------------------------------------------------------------
 
 
@@ -102,7 +105,7 @@ def seen(pose, at: float, velocity=None) -> Observation:
 
 
 def test_a_pose_is_carried_forward_by_the_measured_velocity():
-    belief = PoseBelief(1)
+    belief = PoseBelief(FASTEST)
     places = belief.update(seen([1, 2, 0, 3.0], 0.0, [1.0, -0.5, 0, 1.0]), 0.4, 1.0)
     turned = 3.4 - 2 * np.pi
     np.testing.assert_allclose(places.poses, [[1.4, 1.8, 0, turned]])
@@ -110,7 +113,7 @@ def test_a_pose_is_carried_forward_by_the_measured_velocity():
 
 
 def test_without_a_measured_velocity_it_is_taken_from_the_poses():
-    belief = PoseBelief(1)
+    belief = PoseBelief(FASTEST)
     for step in range(50):
         places = belief.update(seen([0.08 * step, 0, 0, 0], 0.1 * step), 0.1 * step, 1.0)
     places = belief.update(seen([0.08 * 49, 0, 0, 0], 4.9), 5.4, 1.0)
@@ -118,7 +121,7 @@ def test_without_a_measured_velocity_it_is_taken_from_the_poses():
 
 
 def test_a_silent_robot_is_where_it_was_last_seen():
-    belief = PoseBelief(1)
+    belief = PoseBelief(FASTEST)
     belief.update(seen([1, 2, 0, 0], 0.0, [1.0, 0, 0, 0]), 0.0, 1.0)
     places = belief.update(seen([1, 2, 0, 0], 0.0, [1.0, 0, 0, 0]), 1.1, 1.0)
     assert places.known[0] and not places.heard[0]
@@ -127,14 +130,83 @@ def test_a_silent_robot_is_where_it_was_last_seen():
     assert places.heard[0]
 
 
+@pytest.mark.parametrize("leap", [(30, 0, 0, 0), (0, 0, 9, 0), (1e6, -1e6, 0, 0), (0, 0, 0, 3)])
+def test_a_pose_that_jumped_counts_once_it_has_settled(leap):
+    """Until then the robot is where it was, for as long as its last good pose is good."""
+    belief = PoseBelief(FASTEST)
+    belief.update(seen([1, 2, 0, 0], 0.0), 0.0, 1.0)
+    there = np.add([1, 2, 0, 0], leap)
+    for now in np.arange(1, 8) / 10:
+        places = belief.update(seen(there, now), now, 1.0)
+        assert places.heard[0] and not places.steady[0] and not places.moved[0]
+        np.testing.assert_allclose(places.poses, [[1, 2, 0, 0]])
+        assert places.jumped[0] == pytest.approx(np.linalg.norm(leap[:3]), abs=1e-6)
+    places = belief.update(seen(there, 0.85), 0.85, 1.0)
+    assert places.steady[0] and not places.moved[0]
+    np.testing.assert_allclose(places.poses, [there])
+    np.testing.assert_allclose(places.velocities, 0.0)
+    assert belief.update(seen(there, 0.95), 0.95, 1.0).moved[0]
+
+
+def test_two_localizations_in_turn_never_settle():
+    """The robot stands, and is silent once its last good pose is stale."""
+    belief = PoseBelief(FASTEST)
+    belief.update(seen([0, 0, 0, 0], 0.0), 0.0, 1.0)
+    for step in range(1, 40):
+        now = 0.1 * step
+        places = belief.update(seen([30.0 * (step % 2), 0, 0, 0], now), now, 1.0)
+        assert not places.steady[0]
+        assert places.heard[0] == (now < 1.05)
+
+
+@pytest.mark.parametrize("hz", [1.5, 5.0, 50.0])
+def test_driving_downhill_and_small_corrections_are_no_jumps(hz):
+    """1.5 times the highest speed, and 0.9 m at once: common practice of a map match."""
+    belief = PoseBelief(FASTEST)
+    for step in range(100):
+        now = step / hz
+        pose = [1.5 * now + 0.9 * (step > 50), 0, 0, np.angle(np.exp(2j * now))]
+        assert belief.update(seen(pose, now), now, 1.0).steady[0]
+
+
+def test_a_velocity_no_robot_can_have_is_not_used():
+    belief = PoseBelief(FASTEST)
+    belief.update(seen([0, 0, 0, 0], 0.0, [9e5, 0, 0, 0]), 0.0, 1.0)
+    places = belief.update(seen([0.1, 0, 0, 0], 0.2, [0, 0, 0, 400.0]), 0.3, 1.0)
+    assert np.abs(places.velocities).max() < 1.0
+    assert places.poses[0, 0] == pytest.approx(0.1, abs=0.1)
+
+
+def test_a_robot_whose_pose_jumps_stands_keeps_its_task_and_learns_nothing():
+    crew = Crew(team_of([robot("a", 0, 0), robot("b", 0, -60)], [watch("gate", 40, 0)]))
+    crew.drive(2.0)
+    before = doing(crew.step())
+    assert before["a"] == "gate"
+    for leap in (30.0, -30.0):
+        crew.poses[0, 1] += leap
+        crew.log.clear()
+        held = [crew.step() for _ in range(7)]
+        assert all((decision.commands[0] == 0).all() for decision in held)
+        assert all(doing(decision) == before for decision in held)
+        assert {n.text for d in held for n in d.notices if n.about == "a"} == {
+            "its pose jumped by 30.0 m: it stands until its poses agree"
+        }
+        assert held[-1].activity[0] == "held"
+        decision = crew.step()
+        assert not decision.notices
+        assert not crew.log
+    assert crew.drive(1.0).commands[0, 0] > 0.9
+    assert (decision.efficacy == 1.0).all()
+
+
 def test_a_robot_never_heard_is_nowhere():
-    places = PoseBelief(1).update(Observation.nothing(1), 5.0, 1.0)
+    places = PoseBelief(FASTEST).update(Observation.nothing(1), 5.0, 1.0)
     assert not places.known[0] and not places.heard[0]
     assert np.isnan(places.poses).all()
 
 
 def test_a_pose_from_the_future_is_not_taken_until_its_time_comes():
-    belief = PoseBelief(1)
+    belief = PoseBelief(FASTEST)
     belief.update(seen([1, 0, 0, 0], 0.0, [0] * 4), 0.0, 1.0)
     places = belief.update(seen([9, 0, 0, 0], 50.0, [0] * 4), 0.1, 1.0)
     assert places.poses[0, 0] == 1.0
@@ -142,7 +214,7 @@ def test_a_pose_from_the_future_is_not_taken_until_its_time_comes():
 
 def test_a_clock_set_back_does_not_make_robots_silent():
     """As a simulation that is started again does: from 100 s back to 0."""
-    belief = PoseBelief(1)
+    belief = PoseBelief(FASTEST)
     belief.update(seen([1, 0, 0, 0], 100.0, [0] * 4), 100.0, 1.0)
     places = belief.update(seen([2, 0, 0, 0], 0.0, [0] * 4), 0.0, 1.0)
     assert places.heard[0] and places.poses[0, 0] == 2.0
@@ -404,8 +476,8 @@ def test_forgetting():
 def test_pose_noise_is_not_taken_for_inability(seed):
     """5 cm and 2° at 10 Hz, ten minutes of honest driving: nothing below 0.9.
 
-    Two drives, patrols, watches and a chain of visits; the allocator meets its robots at
-    every corner, at its goals and on the way.
+    Two drives, fast and slow; patrols, a watch and a chain of visits. At 0.2 m/s the noise
+    is as large as what a window of 4 s shows.
     """
     tasks = [
         Patrol(name="rows", waypoints=((5, 5), (35, 5), (35, 12), (5, 12)),
@@ -417,7 +489,8 @@ def test_pose_noise_is_not_taken_for_inability(seed):
           for i in range(4)),
     ]  # fmt: skip
     robots = [
-        robot(f"robot_{i}", 4.0 * i, 2.0 + i, drive=(ROVER, OMNI)[i % 2]) for i in range(5)
+        robot(f"robot_{i}", 4.0 * i, 2.0 + i, drive=replace((ROVER, OMNI)[i % 2], max_speed=speed))
+        for i, speed in enumerate((1.0, 0.2, 0.2, 1.0, 0.5))
     ]
     team = team_of(robots, tasks)
     world = World(noise=Noise(position_m=0.05, heading_rad=np.radians(2)))
