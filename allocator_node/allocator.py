@@ -93,7 +93,6 @@ class Allocator:
         self._settings = settings or Settings()
         self._now: float | None = None
         count = len(team.robots)
-        self._poses = PoseBelief(count)
         self._topics = TargetBelief()
         self._guidance = Guidance(count)
         self.assigner = Assigner(budget)
@@ -102,6 +101,7 @@ class Allocator:
         self._last: tuple[np.ndarray, np.ndarray, Course] | None = None
         self._work = Work(team)
         self._model = Model(team)
+        self._poses = PoseBelief(self._model.fleet.fastest)
         self._assignment = np.full(count, -1)
         self._energy = EnergyBelief(self._model)
         self._features = FeatureBelief(team, self._model.features, self._model.declared)
@@ -140,7 +140,7 @@ class Allocator:
             now: Time, s, on the clock of the observation's times.
 
         Returns:
-            The decision; its commands are zero for robots that are not heard.
+            The decision; its commands are zero for robots that are not heard or whose pose jumped.
         """
         seconds: dict[str, float] = {}
         with _timed(seconds, "belief"):
@@ -161,7 +161,7 @@ class Allocator:
         self._take_up(before, view, goals)
         errands = self._charge(view, enough)
         with _timed(seconds, "control"):
-            targets = self._targets(goals, errands, view.places.heard)
+            targets = self._targets(goals, errands, view.places.steady)
             course, control, rows = self._control(view, targets)
         self._remember(view, course, control)
         return self._decision(
@@ -209,9 +209,7 @@ class Allocator:
         moved = points - former
         expected = (course.to_goal * implied).sum(axis=1) * dt
         measured = (course.to_goal * moved).sum(axis=1)
-        counted = (
-            places.heard & (course.demand > 0) & self.orders.driving
-        )
+        counted = places.moved & (course.demand > 0) & self.orders.driving
         step = Step(now, expected, measured, counted)
         self._efficacy.update(step, self._assignment, course.distance, dt, settings)
 
@@ -308,8 +306,8 @@ class Allocator:
         )
         return self._charging.update(crew, self._settings, self._safety.clear)
 
-    def _targets(self, goals: list[Goals], errands: Errands, heard: np.ndarray) -> Targets:
-        """Give the goal of each robot's own task or errand; robots not heard have none now."""
+    def _targets(self, goals: list[Goals], errands: Errands, steady: np.ndarray) -> Targets:
+        """Give the goal of each robot's own task or errand; those not steady have none now."""
         count = len(self._assignment)
         points, velocities = np.full((count, 3), np.nan), np.zeros((count, 3))
         facing, pace, tolerance = np.full(count, np.nan), np.ones(count), np.zeros(count)
@@ -325,7 +323,7 @@ class Allocator:
                 part[group] = np.broadcast_to(value, part.shape)[group]
         sent = (self._assignment < 0) & np.isfinite(errands.points[:, 0])
         points[sent], tolerance[sent] = errands.points[sent], errands.tolerance[sent]
-        busy = ((self._assignment >= 0) | sent) & heard
+        busy = ((self._assignment >= 0) | sent) & steady
         return Targets(busy, points, velocities, facing, pace, tolerance)
 
     def _control(self, view: _View, targets: Targets) -> tuple[Course, Control, SafetyRows]:
@@ -335,7 +333,7 @@ class Allocator:
         course = make_way(
             course,
             view.points,
-            places.heard & ~targets.busy,
+            places.steady & ~targets.busy,
             model.fleet.cruise,
             self._safety.reach + settings.margin / 2,
             settings.height_clearance,
@@ -343,11 +341,11 @@ class Allocator:
         lowest, highest = model.fleet.command_box(
             self._commands, view.dt, view.poses[:, 2], settings.gamma_s
         )
-        still = ~places.heard | self.orders.hold
+        still = ~places.steady | self.orders.hold
         lowest[still] = highest[still] = 0.0
-        silent_for = np.where(places.heard, 0.0, np.where(places.known, places.age, 0.0))
+        silent_for = np.where(places.known & ~places.steady, places.age, 0.0)
         growth = np.minimum(model.fleet.max_speed * silent_for, settings.silent_reach)
-        rows = self._safety.rows(view.points, places.known, places.heard, growth)
+        rows = self._safety.rows(view.points, places.known, places.steady, growth)
         control = solve_control(
             ControlProblem(
                 jacobians=view.jacobians,
@@ -424,11 +422,15 @@ class Allocator:
         """Say in a word what each robot does."""
         return tuple(
             "silent" if not heard
-            else "held" if self.orders.hold
+            else "held" if self.orders.hold or not steady
             else "working" if task >= 0
             else errand or "idle"
-            for heard, task, errand in zip(
-                view.places.heard, self._assignment, errands.activity, strict=True
+            for heard, steady, task, errand in zip(
+                view.places.heard,
+                view.places.steady,
+                self._assignment,
+                errands.activity,
+                strict=True,
             )
         )  # fmt: skip
 

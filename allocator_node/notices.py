@@ -33,7 +33,7 @@ def notices(
     control: Control,
     rows: SafetyRows,
 ) -> Iterator[Notice]:
-    """Name robots that are silent, short of energy, stopped or too near to something.
+    """Name robots that are silent, astray, short of energy, stopped or too near to something.
 
     Args:
         model: The team.
@@ -47,6 +47,9 @@ def notices(
     for i in np.flatnonzero(~places.heard):
         text = f"not heard for {places.age[i]:.1f} s" if places.known[i] else "never heard"
         yield Notice(names[i], Level.WARN, text)
+    for i in np.flatnonzero(places.heard & ~places.steady):
+        text = f"its pose jumped by {places.jumped[i]:.1f} m: it stands until its poses agree"
+        yield Notice(names[i], Level.WARN, text)
     if enough.shape[1]:
         for i in np.flatnonzero(places.heard & ~enough.any(axis=1)):
             text, level = "too little energy for any task", Level.WARN
@@ -57,7 +60,7 @@ def notices(
         yield Notice(names[i], Level.ERROR, "stopped: no safe command could be found")
     seen = set()
     for i, other in zip(rows.first[rows.violated], rows.obstacle[rows.violated], strict=True):
-        if (i, other) in seen or (other >= 0 and not places.heard[other]):
+        if (i, other) in seen or (other >= 0 and not places.steady[other]):
             continue
         seen.add((i, other))
         what = names[other] if other >= 0 else "the boundary or a keep-out area"

@@ -312,9 +312,9 @@ def test_a_small_advantage_does_not_move_a_robot():
     crew = Crew(team_of([robot("one", 0, 5), robot("two", 30, 0)], [watch("gate", 0, 0)]))
     crew.step()
     crew.poses[1, :2] = 0.0, -3.0
-    assert groups(crew.step())["gate"] == ("one",)
+    assert groups(crew.wait(1.0))["gate"] == ("one",)
     crew.poses[0, :2] = 0.0, 8.0
-    assert groups(crew.step())["gate"] == ("two",)
+    assert groups(crew.wait(1.0))["gate"] == ("two",)
 
 
 def test_noise_does_not_make_two_equals_take_turns():

@@ -119,7 +119,7 @@ def test_a_spare_robot_that_was_there_all_along_is_not_the_cause():
     crew.wait(2)
     assert crew.log == []
     crew.poses[:, 0] = -5.0, 9.0
-    crew.step()
+    crew.wait(1.0)
     assert only(crew).cause is Cause.CHEAPER
 
 
@@ -234,7 +234,7 @@ def test_cheaper_says_by_how_much():
     """By hand: 20 W idle + 100 W at 1 m/s are 1/30 Wh a metre; two saves 15 − 2 − 3 of them."""
     crew = pair(kappa=0.0)
     crew.poses[:, 0] = -5.0, 12.0
-    crew.step()
+    crew.wait(1.0)
     change = only(crew)
     assert (change.before, change.after) == (("one",), ("two",))
     assert change.cause is Cause.CHEAPER

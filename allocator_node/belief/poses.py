@@ -1,4 +1,4 @@
-"""Where the robots are at present: last poses carried forward, and who is silent."""
+"""Where the robots are at present: last poses carried forward, who is silent, who has jumped."""
 
 from __future__ import annotations
 
@@ -11,6 +11,15 @@ from ..observation import Observation
 SMOOTHING = 0.5
 """Time constant of the velocity taken from poses where none is measured, s."""
 
+PUSHED = 1.5
+"""A robot moves at most this many times as fast as its drive allows: downhill, pushed."""
+
+CORRECTION = np.array([1.0, 1.0])
+"""Corrections of a localization taken as they are: m, rad."""
+
+SETTLED = 0.7
+"""After a jump, poses must follow from one another for so long before they count, s."""
+
 
 @dataclass(frozen=True)
 class Places:
@@ -22,6 +31,10 @@ class Places:
         heard: Robots heard within the timeout, shape (N,).
         age: Age of the last pose, s, shape (N,); inf: never heard.
         velocities: m/s three times, rad/s, shape (N, 4); 0 for robots not heard.
+        jumped: How far the pose of a robot jumped that is not believed yet, m,
+            shape (N,); 0 where poses follow from one another. Such a robot is where
+            it was before.
+        moved: Robots whose poses moved as robots do since the last time, shape (N,).
     """
 
     poses: np.ndarray
@@ -29,15 +42,34 @@ class Places:
     heard: np.ndarray
     age: np.ndarray
     velocities: np.ndarray
+    jumped: np.ndarray
+    moved: np.ndarray
+
+    @property
+    def steady(self) -> np.ndarray:
+        """Robots heard whose poses follow from one another: they can be driven, (N,)."""
+        return self.heard & (self.jumped == 0)
 
 
 class PoseBelief:
-    """Carries each robot's last pose forward by its last velocity."""
+    """Carries each robot's last pose forward by its last velocity.
 
-    def __init__(self, count: int) -> None:
+    A pose the robot cannot have reached since the last one, however it was
+    driven or pushed, is a localization that was reset, or wrong. The last good
+    pose stays, and ages, until the new ones have followed from one another for
+    :data:`SETTLED` seconds.
+    """
+
+    def __init__(self, fastest: np.ndarray) -> None:
+        """Begin with nobody heard; ``fastest``: m/s and rad/s of each robot, shape (N, 2)."""
+        count = len(fastest)
+        self.fastest = PUSHED * fastest
         self.poses = np.full((count, 4), np.nan)
         self.times = np.full(count, np.nan)
         self.velocities = np.zeros((count, 4))
+        self._newest = self.poses.copy()
+        self._newest_times = self.times.copy()
+        self._jump_times = np.full(count, np.nan)
 
     def update(self, observation: Observation, now: float, timeout: float) -> Places:
         """Take in an observation and give the places at ``now``.
@@ -49,26 +81,52 @@ class PoseBelief:
         """
         times = np.where(np.isfinite(observation.poses).all(axis=1), observation.pose_times, np.nan)
         # A clock that was set back leaves poses from the future: they are forgotten.
-        self.times[self.times > now + timeout] = np.nan
-        fresh = np.isfinite(times) & ~(times <= self.times) & (times <= now + timeout)
+        future = self._newest_times > now + timeout
+        self.times[future] = self._newest_times[future] = self._jump_times[future] = np.nan
+        news = np.isfinite(times) & ~(times <= self._newest_times) & (times <= now + timeout)
+        jumped = news & self._leaps(observation.poses, times)
+        self._jump_times[jumped] = times[jumped]
+        self._newest[news] = observation.poses[news]
+        self._newest_times[news] = times[news]
+
+        waiting = np.isfinite(self._jump_times)
+        settled = waiting & (self._newest_times - self._jump_times >= SETTLED)
+        self.times[settled] = self._jump_times[settled] = np.nan
+        self.velocities[settled] = 0.0
+        fresh = news & (~waiting | settled)
         self._learn_velocity(observation, times, fresh)
         self.poses[fresh] = observation.poses[fresh]
         self.times[fresh] = times[fresh]
 
+        waiting &= ~settled
         known = np.isfinite(self.times)
         age = np.where(known, np.maximum(now - np.nan_to_num(self.times), 0.0), np.inf)
         heard = age <= timeout
         # A silent robot stands where it was last seen, within a circle that grows.
-        ahead = np.where(heard, np.where(known, age, 0.0), 0.0)[:, None]
-        carried = self.poses + ahead * self.velocities
+        driven = heard & ~waiting
+        ahead = np.where(driven, age, 0.0)[:, None]
+        carried = self.poses + np.where(driven[:, None], ahead * self.velocities, 0.0)
         carried[:, 3] = np.angle(np.exp(1j * carried[:, 3]))
-        velocities = np.where(heard[:, None], self.velocities, 0.0)
-        return Places(carried, known, heard, age, velocities)
+        velocities = np.where(driven[:, None], self.velocities, 0.0)
+        leap = np.linalg.norm((self._newest - self.poses)[:, :3], axis=1)
+        far = np.where(waiting, np.maximum(np.nan_to_num(leap), 1e-9), 0.0)
+        return Places(carried, known, heard, age, velocities, far, driven & ~settled)
+
+    def _leaps(self, poses: np.ndarray, times: np.ndarray) -> np.ndarray:
+        """Tell which poses (N, 4) no robot can have reached since its newest one, (N,)."""
+        step = (times - self._newest_times)[:, None]
+        moved = poses - self._newest
+        turn = np.abs(np.angle(np.exp(1j * moved[:, 3])))
+        way = np.column_stack([np.linalg.norm(moved[:, :3], axis=1), turn])
+        return (way > CORRECTION + self.fastest * step).any(axis=1)
 
     def _learn_velocity(
         self, observation: Observation, times: np.ndarray, fresh: np.ndarray
     ) -> None:
-        measured = fresh & np.isfinite(observation.velocities).all(axis=1)
+        speeds = np.column_stack(
+            [np.linalg.norm(observation.velocities[:, :3], axis=1), observation.velocities[:, 3]]
+        )
+        measured = fresh & (np.abs(speeds) <= self.fastest + CORRECTION).all(axis=1)
         self.velocities[measured] = observation.velocities[measured]
         counted = fresh & ~measured & np.isfinite(self.times)
         if not counted.any():

@@ -16,6 +16,7 @@ class Fleet:
         limits: Greatest size of each command axis, shape (N, 4).
         cruise: Cruising speed c_i, m/s, shape (N,).
         max_speed: Highest speed over ground, m/s, shape (N,).
+        fastest: Highest speed in space, m/s, and turn rate, rad/s, shape (N, 2).
         ahead: Distance of the control point ahead of the axle, m, shape (N,).
         round_limit: Where the length of (vx, vy) is bounded, shape (N,).
         speed_up: Highest acceleration, m/s², inf where unlimited, shape (N,).
@@ -26,6 +27,9 @@ class Fleet:
         self.limits = np.array([drive.limits() for drive in drives]).reshape(-1, len(AXES))
         self.cruise = np.array([drive.cruise for drive in drives])
         self.max_speed = np.array([drive.max_speed for drive in drives])
+        self.fastest = np.column_stack(
+            [np.hypot(self.max_speed, self.limits[:, 2]), self.limits[:, 3]]
+        )
         self.ahead = np.array([drive.ahead for drive in drives])
         self.round_limit = np.array([drive.round_limit for drive in drives], dtype=bool)
         self.speed_up = np.array([drive.max_acceleration or np.inf for drive in drives])
