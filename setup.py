@@ -11,7 +11,7 @@ NAME = "allocator_node"
 INIT = Path(__file__).parent / NAME / "__init__.py"
 VERSION = re.search(r'__version__ = "(.+?)"', INIT.read_text()).group(1)
 
-COMMANDS = ("allocator", "team_sim", "team_demo", "team_preflight", "team_rehearse")
+COMMANDS = ("allocator", "team_sim", "team_demo", "team_preflight", "team_rehearse", "team_report")
 
 # The ROS 2 wheels of one distribution are built against each other: pin them together.
 ROS_WHEELS = {

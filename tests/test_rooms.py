@@ -25,7 +25,7 @@ LEVELS = (
     {"allocator"},
     {"sim"},
     {"preflight", "report"},
-    {"preflight"},
+    {"preflight", "recording"},
     {"ros"},
     {"commands"},
 )

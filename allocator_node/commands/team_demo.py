@@ -34,6 +34,9 @@ from .screen import (
 )
 from .team_rehearse import positive
 
+RECORDING = "recording"
+"""Directory of the recording, beside the logs."""
+
 STARTUP = 60.0
 """Time the allocator gets to publish its first assignments, s."""
 
@@ -75,6 +78,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
         screen.print(str(failure), markup=False)
         return 1
     say_summary(board, asked.seconds, out, screen)
+    screen.print("making the report of the recording ...")
+    screen.print(f"report: {report(out / RECORDING, out, team_file.name)}")
     return 0
 
 
@@ -104,6 +109,7 @@ def run(
                 stack.callback(child.stop)
                 children.append(child)
             stack.callback(listen(board))
+            stack.callback(record(team_file, out / RECORDING))
             watch(board, children, seconds, screen)
         finally:
             # Nothing interrupts the ending of the children.
@@ -121,7 +127,7 @@ def parser() -> argparse.ArgumentParser:
     parser.add_argument("team", type=Path, nargs="?", metavar="TEAM", help="team file")
     parser.add_argument("world", type=Path, nargs="?", metavar="WORLD", help="world file")
     parser.add_argument("--seconds", type=positive, default=180.0, help="how long, s (180)")
-    parser.add_argument("--out", type=Path, help="directory of the logs (runs/demo-TIME)")
+    parser.add_argument("--out", type=Path, help="directory of logs, recording and report")
     return parser
 
 
@@ -137,6 +143,26 @@ def ros_environment() -> dict[str, str]:
 def interrupt(*_: object) -> None:
     """Turn a request to end into the interrupt that ends the children first."""
     raise KeyboardInterrupt
+
+
+def record(team_file: Path, path: Path) -> Callable[[], None]:
+    """Record what the report needs; give the function that ends it."""
+    from ..recording import recorded_topics
+    from ..ros.recorder import Recorder
+
+    topics = recorded_topics(read_team(team_file), "/allocator")
+    return Recorder(path, topics, team_file.read_text("utf-8")).close
+
+
+def report(recording: Path, out: Path, name: str) -> str:
+    """Make the report of the recording; give what to tell about it."""
+    from ..recording import NotARecording, read_run
+    from ..report.page import write_report
+
+    try:
+        return str(write_report(read_run(recording), out, f"Demo of {name}"))
+    except (NotARecording, OSError) as error:
+        return f"no report: {error}"
 
 
 def listen(board: Board) -> Callable[[], None]:

@@ -19,14 +19,15 @@ def timing(run: Run) -> Picture | None:
     time_axis(over_time, run["seconds"])
     over_time.set_ylabel("ms")
     over_time.set_ylim(bottom=0)
-    over_time.set_title("longest of each second", fontsize=9)
+    over_time.set_title("longest lately", fontsize=9)
     spread.hist(values, bins=30, color=ORANGE, hatch="///", edgecolor="white", linewidth=0.3)
     spread.set_xlabel("ms")
-    spread.set_title("how many seconds had which longest", fontsize=9)
+    spread.set_title("how often the longest was so long", fontsize=9)
     known = run["period_ms"]
     return finished(
         figure, "timing",
         f"Time of a decision: median {known['p50']:.1f} ms, 99 % below {known['p99']:.1f} ms, "
         f"longest {known['max']:.1f} ms.",
-        "Wall time of the decision itself.",
+        "Wall time of a decision: in a rehearsal the longest of each second, in a recording that "
+        "of the last 200 periods, as the node told it each second.",
     )  # fmt: skip

@@ -26,6 +26,7 @@ from .markers import MarkerBoard
 from .outbox import Outbox
 from .parameters import Options
 from .qos import LATCHED
+from .recorder import RecorderBeside
 from .state_file import StateFile
 
 DISCOVERY = 1.0
@@ -86,6 +87,7 @@ class Loop:
         self._diagnostics = node.create_publisher(DiagnosticArray, "/diagnostics", 10)
         self._health = LoopHealth(node.get_name(), 1 / options.rate)
         self._state = StateFile(Path(options.state_file)) if options.state_file else None
+        self._recorder: RecorderBeside | None = None
         self._commands: CommandTopics | None = None
         self._timer: Timer | None = None
         self._decision: Decision | None = None
@@ -105,6 +107,8 @@ class Loop:
         if self._options.command_robots:
             self._take_over()
         self._renew()
+        if self._options.record_to:
+            self._record(Path(self._options.record_to))
         self.active = True
         self._set_timer()
 
@@ -120,6 +124,9 @@ class Loop:
         self._health.pause()
         self._outbox.dismiss()
         self._markers.publish(self._board.clear())
+        if self._recorder is not None:
+            self._recorder.close()
+            self._recorder = None
         if self._state is not None:
             try:
                 self._state.save(self.allocator.memory())
@@ -310,7 +317,16 @@ class Loop:
         self._commands.close()
         self._commands = None
 
-    # Clock and memory
+    # Clock, memory and recording
+
+    def _record(self, directory: Path) -> None:
+        try:
+            self._recorder = RecorderBeside(
+                directory, Path(self._options.team_file), self._node.get_fully_qualified_name()
+            )
+            self._log.info(f"recording to {self._recorder.path}")
+        except OSError as error:
+            self._log.error(f"record_to: nothing is recorded: {error}")
 
     def _now(self) -> float:
         return self._node.get_clock().now().nanoseconds * 1e-9

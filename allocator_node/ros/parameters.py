@@ -31,6 +31,7 @@ class Options(Checked):
         rate: Decisions a second, Hz.
         command_robots: Drive the robots; if not, decide and publish only.
         state_file: Path of the file that keeps what was learned; empty: none.
+        record_to: Directory under which each activation leaves a recording; empty: none.
         pins: "robot=task": the robot does that task if it is able to.
         bans: "robot=task": the robot never does that task.
         task_edit: YAML that is merged into the task table.
@@ -40,6 +41,7 @@ class Options(Checked):
     rate: Annotated[float, Gt(0), Le(200)] = 10.0
     command_robots: bool = True
     state_file: str = ""
+    record_to: str = ""
     pins: tuple[str, ...] = ()
     bans: tuple[str, ...] = ()
     task_edit: str = ""
