@@ -37,6 +37,11 @@ class Child:
             )
 
     @property
+    def pid(self) -> int:
+        """Number of the process."""
+        return self._process.pid
+
+    @property
     def status(self) -> int | None:
         """Exit status, None while it runs."""
         return self._process.poll()

@@ -88,6 +88,11 @@ class Assigner:
             self._closing.clear()
             self._thread = self._search = None
 
+    def wait(self) -> None:
+        """Wait until the search beside the loop, if there is one, has ended."""
+        if self._search is not None:
+            self._search.exception()
+
     def assign(self, problem: Problem, prices: np.ndarray) -> Assignment:
         """Give this period's assignment."""
         if not problem.eligible.any():

@@ -234,7 +234,8 @@ def mission(seed: int, seconds: float) -> tuple[Team, World]:
         )
         for k in range(random.integers(0, 3))
     )
-    return team, World(Noise(0.02, 0.01), mud, tuple(sorted(mishaps, key=lambda e: e.at)))
+    events = tuple(sorted(mishaps, key=lambda event: event.at))
+    return team, World(noise=Noise(0.02, 0.01), ground=mud, events=events)
 
 
 def _shed(random: np.random.Generator, number: int) -> KeepOut:
