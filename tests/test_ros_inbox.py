@@ -13,9 +13,13 @@ rclpy = pytest.importorskip("rclpy", reason="needs ROS 2: rclpy is not installed
 from diagnostic_msgs.msg import DiagnosticArray, DiagnosticStatus  # noqa: E402
 from geometry_msgs.msg import PoseStamped, PoseWithCovarianceStamped, TransformStamped, Twist  # noqa: E402
 from nav_msgs.msg import Odometry  # noqa: E402
+from rclpy.context import Context  # noqa: E402
+from rclpy.serialization import deserialize_message  # noqa: E402
 from ros_bench import until  # noqa: E402
+from sensor_msgs.msg import BatteryState  # noqa: E402
 from std_msgs.msg import Float32  # noqa: E402
 
+from allocator_node.ros import polling  # noqa: E402
 from allocator_node.ros.clockwork import StampReader, arrival_time  # noqa: E402
 from allocator_node.ros.complaints import Complaints  # noqa: E402
 from allocator_node.ros.inbox import Inbox  # noqa: E402
@@ -274,6 +278,114 @@ def test_health_keeps_the_last_report_of_each_name_we_know(post: Post) -> None:
     )
     assert [(r.name, r.level) for r in post.look().health] == [("placed/cam 1", 1)]
     assert post.look().health == ()
+
+
+def test_thousands_of_names_we_do_not_know_cost_next_to_nothing(post: Post, monkeypatch) -> None:
+    """They are passed over before they are decoded, which would take many periods."""
+    many = [
+        DiagnosticStatus(level=b"\x02", name=f"stranger/{k}", message="x" * 50)
+        for k in range(1000)
+    ]
+    decoded = []
+    monkeypatch.setattr(
+        polling,
+        "deserialize_message",
+        lambda *message: decoded.append(1) or deserialize_message(*message),
+    )
+    for _ in range(20):
+        post.send("/diagnostics", DiagnosticArray(status=many))
+    ours = DiagnosticStatus(level=b"\x01", name="placed/camera")
+    post.send("/diagnostics", DiagnosticArray(status=[*many[:9], ours]))
+    assert [(r.name, r.level) for r in post.look().health] == [("placed/camera", 1)]
+    assert len(decoded) == 1
+
+
+def test_a_monstrous_message_is_refused_unread(post: Post) -> None:
+    many = [DiagnosticStatus(name=f"placed/cam{k}", message="x" * 100) for k in range(3000)]
+    post.send("/diagnostics", DiagnosticArray(status=many))
+    time.sleep(0.3)  # it comes in many pieces
+    assert post.look().health == ()
+    assert "bytes, at most" in post.inbox.complaints.last["/diagnostics"][0]
+
+
+@pytest.mark.parametrize("level", [4, 17, 255])
+def test_a_level_out_of_range_is_refused(post: Post, level: int) -> None:
+    """DiagnosticStatus.level is a byte of which four values have a meaning."""
+    good = DiagnosticStatus(level=b"\x02", name="placed/camera")
+    bad = DiagnosticStatus(level=bytes([level]), name="placed/cam2")
+    post.send("/diagnostics", DiagnosticArray(status=[bad, good]))
+    assert [report.name for report in post.look().health] == ["placed/camera"]
+    assert f"'placed/cam2' has level {level}" in post.inbox.complaints.last["/diagnostics"][0]
+
+
+@pytest.mark.parametrize("charge", [1.0001, -0.01, 80.0, math.inf, -math.inf, math.nan])
+def test_a_charge_out_of_range_leaves_the_last_one(post: Post, charge: float) -> None:
+    """BatteryState.percentage: "Charge percentage on 0 to 1 range (If unmeasured NaN)"."""
+    post.send("/plain/battery_state", BatteryState(percentage=0.5))
+    good = post.look()
+    refused = post.inbox.complaints.refused.get("/plain/battery_state", 0)
+    post.send("/plain/battery_state", BatteryState(percentage=charge))
+    seen = post.look()
+    assert seen.charges[PLAIN] == 0.5
+    assert seen.charge_times[PLAIN] == good.charge_times[PLAIN]
+    told = post.inbox.complaints.refused.get("/plain/battery_state", 0) - refused
+    assert told == (not math.isnan(charge)), "NaN says that nothing is measured: no fault"
+
+
+@pytest.mark.parametrize("variance", [0.0, -1.0, 1e9, math.nan, math.inf])
+def test_covariances_that_say_unknown_do_not_matter(post: Post, variance: float) -> None:
+    """sensor_msgs use -1 for unknown, others zero or huge: the pose is taken as it is."""
+    message = post.stamped(PoseWithCovarianceStamped(), "site", x=3.0)
+    message.pose.covariance = [variance] * 36
+    post.send("/covered/pose", message)
+    assert post.look().poses[COVERED, 0] == 3.0
+
+
+def test_a_flood_of_poses_and_goals_is_read_once_a_period(post: Post) -> None:
+    """2000 messages between two looks: the newest pose, one goal, and no time lost."""
+    for k in range(2000):
+        message = post.stamped(PoseStamped(), "site", x=float(k % 90))
+        if not k:
+            post.send("/plain/pose", message)
+            post.send("/allocator/tasks/gate/goal", message)
+        for topic in ("/plain/pose", "/allocator/tasks/gate/goal"):
+            post._publishers[topic].publish(message)
+    time.sleep(0.1)
+    seen = post.look()
+    assert len(seen.goals) == 1
+    assert post.now() - seen.pose_times[PLAIN] < 0.6
+
+
+def test_a_topic_of_another_type_is_told(post: Post) -> None:
+    """DDS connects no endpoints of different types, so nothing comes: the warning says why."""
+    context = Context()
+    rclpy.init(context=context)
+    stranger = rclpy.create_node("stranger", context=context)
+    stranger.create_publisher(Twist, "/plain/pose", 10).publish(Twist())
+
+    def said() -> str:
+        post.inbox.notice_publishers()
+        return post.inbox.complaints.last.get("/plain/pose", ("",))[0]
+
+    until(lambda: "geometry_msgs/msg/Twist, which cannot be heard" in said(), "a warning")
+    assert "its type here is geometry_msgs/msg/PoseStamped" in said()
+    post.send("/plain/pose", post.stamped(PoseStamped(), "site", x=4.0))
+    assert post.look().poses[PLAIN, 0] == 4.0
+    stranger.destroy_node()
+    rclpy.shutdown(context=context)
+
+
+def test_warnings_are_throttled() -> None:
+    """A topic at a time, and the next one says how many were left out."""
+    said = []
+    complaints = Complaints(type("Logger", (), {"warning": staticmethod(said.append)}))
+    for _ in range(1000):
+        complaints.refuse("/a", "bad")
+        complaints.refuse("/b", "worse")
+    assert said == ["/a: refused: bad", "/b: refused: worse"]
+    complaints._spoken["/a"] -= 6.0
+    complaints.refuse("/a", "bad")
+    assert said[2:] == ["/a: refused: bad (999 more since the last warning)"]
 
 
 def test_goal_and_quality(post: Post) -> None:

@@ -132,6 +132,12 @@ def stamp_of(seconds: float) -> Time:
     return Time(sec=nanoseconds // 10**9, nanosec=nanoseconds % 10**9)
 
 
+def type_name(message_type: type) -> str:
+    """Give the name of a message type, such as ``std_msgs/msg/String``."""
+    package, kind, _ = message_type.__module__.split(".", 2)
+    return f"{package}/{kind}/{message_type.__name__}"
+
+
 def status_of(
     name: str, level: int, message: str, values: dict[str, object], hardware: str = ""
 ) -> DiagnosticStatus:

@@ -18,10 +18,10 @@ from ..observation import HealthReport, MovedGoal, Observation, TargetPose
 from ..team import PoseSource, Robot, Team, target_topics
 from .clockwork import arrival_time
 from .complaints import Complaints
-from .conversions import numbers, yaw_of
+from .conversions import numbers, type_name, yaw_of
 from .polling import PolledSubscription
 from .poses import PoseTopic, PoseTransform, Transforms
-from .qos import EVENTS, NEWEST
+from .qos import EVENTS, GOALS, NEWEST
 
 LEVELS = 4
 """DiagnosticStatus has the levels OK, WARN, ERROR, STALE = 0, 1, 2, 3."""
@@ -29,6 +29,9 @@ LEVELS = 4
 AT_ONCE = 200
 """Up to so many quality topics are subscribed to from the start; a large team's
 only once somebody publishes on them."""
+
+READING = 0.01
+"""Time that reading one flooded topic may take of a period, s."""
 
 Value = TypeVar("Value")
 
@@ -58,7 +61,9 @@ class Inbox:
         self._batteries = [
             self._subscription(BatteryState, robot.battery_topic, NEWEST) for robot in robots
         ]
-        self._diagnostics = self._subscription(DiagnosticArray, "/diagnostics", EVENTS)
+        self._diagnostics = PolledSubscription(
+            node, DiagnosticArray, "/diagnostics", EVENTS, self.complaints, _sieve(robots)
+        )
         self._concerns_us = _matcher(robots)
         self._robots = tuple(team.robots)
         self._goals: dict[str, PolledSubscription] = {}
@@ -82,7 +87,7 @@ class Inbox:
         self._follow(
             self._goals,
             list(self._tasks),
-            lambda task: self._subscription(PoseStamped, f"~/tasks/{task}/goal", EVENTS),
+            lambda task: self._subscription(PoseStamped, f"~/tasks/{task}/goal", GOALS),
         )
         self._follow(self._targets, target_topics(team), self._target)
         self.notice_publishers()
@@ -92,10 +97,13 @@ class Inbox:
         return PoseTopic(self._node, source, self._frame, self.complaints)
 
     def notice_publishers(self) -> None:
-        """Subscribe to the quality topics that are in use; call about once a second."""
+        """Subscribe to the quality topics that are in use, and tell of topics whose type is wrong.
+
+        Call about once a second.
+        """
+        known = dict(self._node.get_topic_names_and_types())
         pairs = [(robot, task) for robot in self._robots for task in self._tasks]
         if len(pairs) > AT_ONCE:
-            known = {name for name, _ in self._node.get_topic_names_and_types()}
             pairs = [
                 pair
                 for pair in pairs
@@ -106,6 +114,21 @@ class Inbox:
             pairs,
             lambda pair: self._subscription(Float32, self._full(pair), NEWEST),
         )
+        for source in self._listening():
+            others = set(known.get(source.topic, ())) - {type_name(source.message_type)}
+            if others:
+                self.complaints.warn(
+                    source.topic,
+                    f"somebody uses it for {', '.join(sorted(others))}, which cannot be heard: "
+                    f"its type here is {type_name(source.message_type)}",
+                )
+
+    def _listening(self) -> Iterator[PolledSubscription | PoseTopic]:
+        yield from (source for source in self._poses if isinstance(source, PoseTopic))
+        yield from self._batteries
+        yield self._diagnostics
+        for table in (self._goals, self._targets, self._quality):
+            yield from table.values()
 
     def _full(self, pair: tuple[str, str]) -> str:
         return self._node.resolve_topic_name(f"~/quality/{pair[0]}/{pair[1]}")
@@ -173,7 +196,7 @@ class Inbox:
 
     def _health(self) -> Iterator[HealthReport]:
         newest: dict[str, HealthReport] = {}
-        for arrival in self._diagnostics.drain():
+        for arrival in self._diagnostics.drain(READING):
             for status in arrival.message.status:
                 if not self._concerns_us(status.name):
                     continue
@@ -189,11 +212,14 @@ class Inbox:
 
     def _moved_goals(self) -> Iterator[MovedGoal]:
         for task, subscription in self._goals.items():
+            last = None
             for arrival in subscription.drain():
                 try:
-                    yield self._moved_goal(task, arrival.message)
+                    last = self._moved_goal(task, arrival.message)
                 except ValueError as error:
                     self.complaints.refuse(subscription.topic, str(error))
+            if last is not None:
+                yield last
 
     def _moved_goal(self, task: str, message: PoseStamped) -> MovedGoal:
         if message.header.frame_id != self._frame:
@@ -256,3 +282,11 @@ def _matcher(robots: tuple[Robot, ...]) -> Callable[[str], object]:
     """Give a test of whether any health rule speaks about a status name."""
     rules = {rule.name for robot in robots for rule in robot.health}
     return re.compile("|".join(fnmatch.translate(rule) for rule in rules) or r"(?!)").match
+
+
+def _sieve(robots: tuple[Robot, ...]) -> Callable[[bytes], object]:
+    """Give a test of whether a message as it came can hold a name that :func:`_matcher` knows."""
+    literal = {
+        max(re.split(r"[*?[]", rule.name), key=len) for robot in robots for rule in robot.health
+    }
+    return re.compile(b"|".join(re.escape(part.encode()) for part in literal) or b"(?!)").search

@@ -55,6 +55,11 @@ class PoseTopic:
         """Full name of the topic."""
         return self._subscription.topic
 
+    @property
+    def message_type(self) -> type:
+        """Type of its messages."""
+        return self._subscription.message_type
+
     def look(self, now: float) -> Sighting | None:
         """Give the newest pose, if a good one came since the last look."""
         last_look, self._last_look = self._last_look, now

@@ -8,6 +8,9 @@ NEWEST = QoSProfile(depth=1, reliability=ReliabilityPolicy.BEST_EFFORT)
 EVENTS = QoSProfile(depth=1000)
 """Every message counts, many may come between two decisions."""
 
+GOALS = QoSProfile(depth=10)
+"""The newest good one counts; a bad one does not hide the one before it."""
+
 COMMANDS = QoSProfile(depth=1)
 """Reliable, and never an old command after a newer one."""
 
