@@ -33,6 +33,7 @@ from .program import (
 from .program.courtesy import make_way
 from .program.formulate import Known, formulate
 from .program.guidance import Course, Guidance, Targets
+from .program.steering import Steering
 from .program.ways import Ways
 from .reasons import Reasons, Situation
 from .settings import Settings
@@ -113,7 +114,9 @@ class Allocator:
     def _survey(self) -> None:
         """Look at the site anew: its areas, and the distances to keep."""
         self._safety = Safety(self.team, self._model, self._settings)
-        self._ways = Ways(self.team, self._safety.reach + self._settings.margin)
+        clearance = self._safety.reach + self._settings.margin
+        self._ways = Ways(self.team, clearance)
+        self._steering = Steering(self.team, self._model, clearance)
 
     @property
     def team(self) -> Team:
@@ -231,6 +234,7 @@ class Allocator:
             poses=view.poses,
             points=view.points,
             jacobians=view.jacobians,
+            gear=self._steering.gear,
             heard=view.places.heard,
             capability=view.capability,
             suitability=view.suitability,
@@ -330,6 +334,17 @@ class Allocator:
         model, settings, places = self._model, self._settings, view.places
         lead = self._ways.lead(view.points, targets.points[:, None], targets.busy[:, None])
         course = self._guidance.course(model, targets, view.poses, view.points, lead, settings)
+        course = self._steering.course(
+            course,
+            model,
+            targets,
+            view.poses,
+            view.points,
+            self._guidance.held,
+            self._guidance.aside,
+            settings.gamma,
+            view.dt,
+        )
         course = make_way(
             course,
             view.points,
@@ -339,7 +354,7 @@ class Allocator:
             settings.height_clearance,
         )
         lowest, highest = model.fleet.command_box(
-            self._commands, view.dt, view.poses[:, 2], settings.gamma_s
+            self._commands, view.dt, view.poses[:, 2], settings.gamma_s, self._steering.gear
         )
         still = ~places.steady | self.orders.hold
         lowest[still] = highest[still] = 0.0
@@ -352,6 +367,7 @@ class Allocator:
                 limits=model.fleet.limits,
                 lowest=lowest,
                 highest=highest,
+                gear=self._steering.gear,
                 round_limit=model.fleet.round_limit,
                 away=course.away,
                 demand=np.where(still | course.exact, 0.0, course.demand),

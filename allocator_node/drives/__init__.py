@@ -5,12 +5,13 @@ from collections.abc import Mapping
 from ..files.plugins import extended
 from .aerial import Aerial
 from .base import AXES, Drive
+from .carlike import Carlike
 from .differential import Differential
 from .fleet import Fleet
 from .holonomic import Holonomic
 
 DRIVES: dict[str, type[Drive]] = {
-    drive.model: drive for drive in (Differential, Holonomic, Aerial)
+    drive.model: drive for drive in (Differential, Holonomic, Carlike, Aerial)
 }
 """Name in a team file to model; other packages add theirs by the entry point
 ``allocator_node.drives``."""
@@ -29,6 +30,7 @@ __all__ = [
     "AXES",
     "DRIVES",
     "Aerial",
+    "Carlike",
     "Differential",
     "Drive",
     "Fleet",

@@ -44,6 +44,9 @@ class Drive(Checked, abc.ABC):
     round_limit: ClassVar[bool] = False
     """True where ``max_speed`` bounds the length of (vx, vy), not each of them."""
 
+    steered: ClassVar[bool] = False
+    """True where it turns only as it drives: |ω| / limit ≤ |vx| / limit."""
+
     max_speed: Positive
     cruise_speed: Positive | None = None
     max_acceleration: Positive | None = None
@@ -57,6 +60,11 @@ class Drive(Checked, abc.ABC):
     def ahead(self) -> float:
         """Distance L of the control point ahead of the axle, m."""
         return 0.0
+
+    @property
+    def reverses(self) -> bool:
+        """Whether it may drive backwards."""
+        return True
 
     @property
     def height_band(self) -> tuple[float, float] | None:

@@ -19,6 +19,8 @@ class Fleet:
         fastest: Highest speed in space, m/s, and turn rate, rad/s, shape (N, 2).
         ahead: Distance of the control point ahead of the axle, m, shape (N,).
         round_limit: Where the length of (vx, vy) is bounded, shape (N,).
+        steered: Which turn only as they drive, shape (N,).
+        reverses: Which may drive backwards, shape (N,).
         speed_up: Highest acceleration, m/s², inf where unlimited, shape (N,).
         height_band: Lowest and highest height, m, shape (N, 2); NaN on the ground.
     """
@@ -32,6 +34,8 @@ class Fleet:
         )
         self.ahead = np.array([drive.ahead for drive in drives])
         self.round_limit = np.array([drive.round_limit for drive in drives], dtype=bool)
+        self.steered = np.array([drive.steered for drive in drives], dtype=bool)
+        self.reverses = np.array([drive.reverses for drive in drives], dtype=bool)
         self.speed_up = np.array([drive.max_acceleration or np.inf for drive in drives])
         self.height_band = np.array(
             [drive.height_band or (np.nan, np.nan) for drive in drives]
@@ -56,7 +60,12 @@ class Fleet:
         return jacobians
 
     def command_box(
-        self, last: np.ndarray, dt: float, heights: np.ndarray, gain: float
+        self,
+        last: np.ndarray,
+        dt: float,
+        heights: np.ndarray,
+        gain: float,
+        gear: np.ndarray,
     ) -> tuple[np.ndarray, np.ndarray]:
         """Give the lowest and highest command of this period, each (N, 4).
 
@@ -69,6 +78,7 @@ class Fleet:
             dt: Time since then, s.
             heights: z of the robots, m, shape (N,).
             gain: Barrier gain γ_s, 1/s.
+            gear: 1 where a steered robot is to drive forward, −1 backward, shape (N,).
         """
         highest, lowest = self.limits.copy(), -self.limits
         step = (self.speed_up * dt)[:, None]
@@ -86,4 +96,24 @@ class Fleet:
             highest[self.flies, 2] = np.minimum(
                 highest[self.flies, 2], np.maximum(0.0, gain * (high - z))
             )
+        lowest[gear > 0, 0] = 0.0
+        highest[gear < 0, 0] = 0.0
         return lowest, highest
+
+    def clipped(self, commands: np.ndarray) -> np.ndarray:
+        """Give what robots make of commands (N, 4) beyond what they can do, (N, 4)."""
+        speed = np.hypot(commands[:, 0], commands[:, 1])
+        share = self.max_speed / np.maximum(speed, self.max_speed)
+        commands = commands.copy()
+        commands[self.round_limit, :2] *= share[self.round_limit, None]
+        commands = np.clip(commands, -self.limits, self.limits)
+        ahead_only = self.steered & ~self.reverses
+        commands[ahead_only, 0] = np.maximum(commands[ahead_only, 0], 0.0)
+        turn = self.turn_limits(commands[:, 0])
+        commands[:, 3] = np.clip(commands[:, 3], -turn, turn)
+        return commands
+
+    def turn_limits(self, speed: np.ndarray) -> np.ndarray:
+        """Give the highest turn rate at forward speeds (N,), rad/s, shape (N,)."""
+        share = np.where(self.steered, np.abs(speed) / self.limits[:, 0], 1.0)
+        return share * self.limits[:, 3]

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from .pricing import least_effort
+from .pricing import least_effort, steerable
 from .safety import SafetyRows
 from .solvers import QP, SolverFailure, solve_qp
 
@@ -28,6 +28,8 @@ class ControlProblem:
         jacobians: G_i, shape (N, 3, 4).
         limits: Greatest size of each command axis; R_i = diag(1/limits²), shape (N, 4).
         lowest, highest: What is allowed this period, within the limits, shape (N, 4).
+        gear: 1 where a robot turns only as it drives and is to drive forward, −1 in
+            reverse, |ω| / limit ≤ gear · vx / limit; 0: no such bound; shape (N,).
         round_limit: Robots whose speed (vx, vy) is bounded in length, shape (N,).
         away: n_i, unit vector from where to steer to the robot, shape (N, 3).
         demand: Closing speed demanded, m/s, shape (N,); 0: no task row.
@@ -41,6 +43,7 @@ class ControlProblem:
     limits: np.ndarray
     lowest: np.ndarray
     highest: np.ndarray
+    gear: np.ndarray
     round_limit: np.ndarray
     away: np.ndarray
     demand: np.ndarray
@@ -109,10 +112,13 @@ def _velocities(problem: ControlProblem, commands: np.ndarray) -> np.ndarray:
 def _free(problem: ControlProblem) -> np.ndarray:
     """Give the optimum without safety rows, shape (N, 4)."""
     reach = -np.matmul(problem.away[:, None, :], problem.jacobians)[:, 0] * problem.limits
+    reach = steerable(reach, problem.gear)
     useful = np.where(reach >= 0, problem.highest, -problem.lowest)
     room = np.divide(
         useful, problem.limits, out=np.zeros_like(useful), where=problem.limits > 0
     )
+    geared = problem.gear != 0
+    room[geared, 3] = np.minimum(room[geared, 3], room[geared, 0])
     effort = least_effort(reach, problem.demand, problem.slack_weight, room)
     unused = (effort.command == 0) | (problem.demand <= 0)[:, None]
     command = np.where(unused, problem.preferred, effort.command * problem.limits)
@@ -120,7 +126,15 @@ def _free(problem: ControlProblem) -> np.ndarray:
     speed = np.linalg.norm(command[:, :2], axis=1)
     over = problem.round_limit & (speed > problem.limits[:, 0])
     command[over, :2] *= (problem.limits[over, 0] / speed[over])[:, None]
-    return command
+    return _steerable(command, problem.limits, geared)
+
+
+def _steerable(commands: np.ndarray, limits: np.ndarray, geared: np.ndarray) -> np.ndarray:
+    """Give commands (n, 4) that turn no more than the speed allows, to the last digit."""
+    speed = np.abs(commands[geared, 0])
+    turn = limits[geared, 3] * (speed / limits[geared, 0])
+    commands[geared, 3] = np.clip(commands[geared, 3], -turn, turn)
+    return commands
 
 
 def _bound_to(rows: SafetyRows, robots: np.ndarray, count: int) -> np.ndarray:
@@ -144,11 +158,13 @@ class Joint:
             row that is violated already.
         has: The axes each robot has, shape (n, 4).
         limits: Greatest size of each command axis, shape (n, 4).
+        geared: Robots that turn only as they drive, shape (n,).
     """
 
     qp: QP
     has: np.ndarray
     limits: np.ndarray
+    geared: np.ndarray
 
     def commands(self, answer: np.ndarray) -> np.ndarray:
         """Give the commands in an answer, shape (n, 4)."""
@@ -157,7 +173,7 @@ class Joint:
         commands[self.has] = np.clip(
             answer[:shares], self.qp.lowest[:shares], self.qp.highest[:shares]
         )
-        return commands * self.limits
+        return _steerable(commands * self.limits, self.limits, self.geared)
 
 
 def joint(problem: ControlProblem, robots: np.ndarray) -> Joint:
@@ -240,8 +256,22 @@ def joint(problem: ControlProblem, robots: np.ndarray) -> Joint:
         add(row, who, normals)
         add(row + len(who), who, -normals)
         right.append(np.full(2 * len(who), np.cos(np.pi / 8)))
+        top += 2 * len(who)
+
+    # Robots that turn only as they drive: ±u_ω − gear · u_x ≤ 0.
+    geared = problem.gear[robots] != 0
+    who = np.flatnonzero(geared)
+    if len(who):
+        for offset, sign in ((0, 1.0), (len(who), -1.0)):
+            edge = np.zeros((len(who), 4))
+            edge[:, 0], edge[:, 3] = -problem.gear[robots][who], sign
+            add(top + offset + np.arange(len(who)), who, edge)
+        right.append(np.zeros(2 * len(who)))
 
     parts = [np.concatenate(part) for part in zip(*entries, strict=True)]
     return Joint(
-        QP(quadratic, linear, *parts, np.concatenate(right), lowest, highest), has, limits
+        QP(quadratic, linear, *parts, np.concatenate(right), lowest, highest),
+        has,
+        limits,
+        geared,
     )

@@ -47,6 +47,7 @@ class Known:
 
     Attributes:
         poses, points, jacobians: As in the period's view; (N, 4), (N, 3), (N, 3, 4).
+        gear: As in the program, shape (N,).
         heard: Robots heard from, shape (N,).
         capability, suitability, efficacy: c (N, K), a (N, M), η (N, M).
         trusted: Where the efficacy allows the pair, shape (N, M).
@@ -61,6 +62,7 @@ class Known:
     poses: np.ndarray
     points: np.ndarray
     jacobians: np.ndarray
+    gear: np.ndarray
     heard: np.ndarray
     capability: np.ndarray
     suitability: np.ndarray
@@ -144,6 +146,7 @@ def formulate(
         energy=np.where(eligible, dearness * serving + urgent, 0.0)
         / np.maximum(s, settings.s_min),
         limits=model.fleet.limits,
+        gear=known.gear,
         jacobians=known.jacobians,
         away=away,
         closing=closing,

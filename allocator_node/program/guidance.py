@@ -16,6 +16,9 @@ TURN_GAIN = 2.0
 FACING_DEADBAND = 0.05
 """Heading error that is left alone, rad."""
 
+FACING, STAYS_FACING = 0.1, 0.2
+"""Heading error at which a robot that cannot turn on the spot stands, and stays, rad."""
+
 HELD_BELOW = 0.6
 """Share of the closing speed demanded below which a robot counts as held back."""
 
@@ -147,9 +150,13 @@ class Guidance:
         to_corner = np.linalg.norm(offset, axis=1)
         to_goal = offset / np.maximum(to_corner, 1e-9)[:, None]
 
-        turning = np.where(np.isfinite(targets.facing), 2 * fleet.ahead, 0.0)
+        stood = self.standing
+        turning = np.where(np.isfinite(targets.facing) & ~fleet.steered, 2 * fleet.ahead, 0.0)
         limit = np.where(self.standing, 1.5 * targets.tolerance + turning, targets.tolerance)
         self.standing = targets.busy & (distance <= limit) & (targets.tolerance > 0)
+        # Who cannot turn on the spot must arrive as it is to stand.
+        off = np.abs(np.angle(np.exp(1j * (targets.facing - poses[:, 3]))))
+        self.standing &= ~(fleet.steered & (off > np.where(stood, STAYS_FACING, FACING)))
 
         closing = targets.pace * np.minimum(settings.gamma * distance, fleet.cruise)
         demand = closing + (to_goal * targets.velocities).sum(axis=1)
@@ -178,7 +185,7 @@ class Guidance:
         """Prefer to turn to the facing demanded, standing or able to while moving."""
         preferred = np.zeros((len(poses), 4))
         off = np.angle(np.exp(1j * (targets.facing - poses[:, 3])))
-        may = targets.busy & (self.standing | (model.fleet.ahead == 0))
+        may = targets.busy & ~model.fleet.steered & (self.standing | (model.fleet.ahead == 0))
         turn = may & (np.abs(off) > FACING_DEADBAND)
         preferred[turn, 3] = np.clip(
             TURN_GAIN * off[turn], -model.fleet.limits[turn, 3], model.fleet.limits[turn, 3]

@@ -73,6 +73,35 @@ def least_effort(
     return Effort(value, np.copysign(share, reach), given_up)
 
 
+def steerable(reach: np.ndarray, gear: np.ndarray) -> np.ndarray:
+    r"""Give the reach of robots that turn only as they drive: its projection on the cone.
+
+    Their shares lie in the cone K: \|u_ω\| ≤ g u_x. Without the caps the optimum is
+    u(λ) = Π_K(λ h / 2) = λ Π_K(h) / 2, as a projection on a cone is positively
+    homogeneous. Π_K(h) is h inside the cone; ½ (g h_x + \|h_ω\|) times the nearest edge
+    (g, ±1) beside it, one variable; or 0 opposite to it. Caps that bound u_ω no tighter
+    than u_x do not change that: inside, u_x clips first, and on the edge both at once. So
+    the box's closed form holds with Π_K(h) in the place of h. (Projections on cones:
+    Boyd and Vandenberghe, Convex Optimization, 2004, ch. 8.1.)
+
+    Args:
+        reach: Closing speed each axis brings at its limit, m/s, shape (..., 4).
+        gear: 1 forward, −1 in reverse, 0: a robot whose limits are a box, shape (...).
+
+    Returns:
+        Reach to use in :func:`least_effort`, shape (..., 4).
+    """
+    if not gear.any():
+        return reach
+    ahead, turn = gear * reach[..., 0], np.abs(reach[..., 3])
+    edge = np.maximum(0.5 * (ahead + turn), 0.0)
+    outside = (gear != 0) & (turn > ahead)
+    projected = reach.copy()
+    projected[..., 0] = np.where(outside, gear * edge, reach[..., 0])
+    projected[..., 3] = np.where(outside, np.copysign(edge, reach[..., 3]), reach[..., 3])
+    return projected
+
+
 def price(problem: Problem) -> np.ndarray:
     """Give the price κ w_im + e_im of every eligible pair, Wh, shape (N, M); else 0.
 
@@ -82,6 +111,7 @@ def price(problem: Problem) -> np.ndarray:
     i, m = np.nonzero(problem.eligible)
     away, jacobians = problem.away[i, m], problem.jacobians[i]
     reach = -np.matmul(away[:, None, :], jacobians)[:, 0] * problem.limits[i]
+    reach = steerable(reach, problem.gear[i])
     effort = least_effort(reach, problem.demand[i, m], problem.slack_weight)
     prices[i, m] = problem.kappa * effort.value + problem.energy[i, m]
     return prices

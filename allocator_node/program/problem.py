@@ -27,6 +27,8 @@ class Problem:
         swap_cost: ρ_i, Wh, shape (N,).
         energy: e_im, Wh, shape (N, M).
         limits: Greatest size of each command axis, shape (N, 4).
+        gear: g_i where a robot turns only as it drives, |ω| / limit ≤ g_i vx / limit:
+            1 forward, −1 in reverse; 0: no such bound; shape (N,).
         jacobians: G_i, shape (N, 3, 4).
         away: n_im, unit vector from goal to robot, shape (N, M, 3).
         closing: min(γ d_im, c_i), m/s, shape (N, M); 0 where the row is dropped.
@@ -47,6 +49,7 @@ class Problem:
     swap_cost: np.ndarray
     energy: np.ndarray
     limits: np.ndarray
+    gear: np.ndarray
     jacobians: np.ndarray
     away: np.ndarray
     closing: np.ndarray

@@ -54,7 +54,7 @@ class Statement:
         self.missing_needs = σ_mk = cp.Variable(problem.needs.shape, nonneg=True)
 
         least, most, T, c = problem.least, problem.most, problem.needs, problem.capability
-        limits = problem.limits
+        limits, gear = problem.limits, problem.gear
         R = np.divide(1.0, limits**2, out=np.zeros_like(limits), where=limits > 0)
         κ, weight, e, ρ = problem.kappa, problem.slack_weight, problem.energy, problem.swap_cost
         keeps = problem.keeps_on
@@ -65,6 +65,10 @@ class Statement:
                 for i, m, n, G, n_dp, closing, big in self._task_rows()
             ),
             cp.abs(v) <= limits,
+            *(
+                limits[i, 0] * cp.abs(v[i, 3]) <= gear[i] * limits[i, 3] * v[i, 0]
+                for i in np.flatnonzero(gear)
+            ),
             cp.sum(α, axis=1) <= 1,
             least - σ_m <= cp.sum(α, axis=0),
             cp.sum(α, axis=0) <= most,

@@ -138,9 +138,9 @@ class _Map:
         boundary: shapely.Polygon | None,
         clearance: float,
     ) -> None:
-        self.blocked = _grown(areas, boundary, clearance - GIVE)
-        grown = _grown(areas, boundary, clearance + OUTSIDE)
-        corners = shapely.get_coordinates(grown)
+        self.blocked = grown(areas, boundary, clearance - GIVE)
+        around = grown(areas, boundary, clearance + OUTSIDE)
+        corners = shapely.get_coordinates(around)
         inside = shapely.intersects_xy(self.blocked, corners)
         self.corners = np.unique(np.round(corners[~inside], 6), axis=0)
         if boundary is not None:
@@ -240,7 +240,7 @@ class _Map:
         return np.where(seen, way, np.inf)
 
 
-def _grown(
+def grown(
     areas: list[shapely.Polygon], boundary: shapely.Polygon | None, clearance: float
 ) -> shapely.Geometry:
     """Give what a control point must stay out of, its round corners as few straight ones."""

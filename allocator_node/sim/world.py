@@ -90,10 +90,13 @@ class SimulatedTeam:
                 NaN counts as zero.
             dt: Time, s.
         """
-        commands = self._limited(np.nan_to_num(np.asarray(commands, dtype=float)))
+        commands = self._fleet.clipped(np.nan_to_num(np.asarray(commands, dtype=float)))
         commands[self.charge <= 0] = 0.0
         self._body = commands.copy()
-        self._body[:, :3] *= self._grip()[:, None]
+        grip = self._grip()
+        self._body[:, :3] *= grip[:, None]
+        # A slower car turns more slowly on the same circle.
+        self._body[self._fleet.steered, 3] *= grip[self._fleet.steered]
         self._body[self.stalled] = 0.0
         self.true_poses = advance(self.true_poses, self._body, dt)
         self._drain(commands, dt)
@@ -161,15 +164,6 @@ class SimulatedTeam:
             ahead = [part[min(leg, len(times) - 1)] - part[leg - 1] for part in way]
             poses[target.topic] = np.array([x, y, 0.0, np.arctan2(ahead[1], ahead[0])])
         return poses
-
-    def _limited(self, commands: np.ndarray) -> np.ndarray:
-        """Give commands within the drives' limits, (N, 4)."""
-        fleet = self._fleet
-        speed = np.hypot(commands[:, 0], commands[:, 1])
-        share = fleet.max_speed / np.maximum(speed, fleet.max_speed)
-        commands = commands.copy()
-        commands[fleet.round_limit, :2] *= share[fleet.round_limit, None]
-        return np.clip(commands, -fleet.limits, fleet.limits)
 
     def _grip(self) -> np.ndarray:
         """Give the share of speed the ground leaves each robot, (N,); patches multiply."""
