@@ -390,7 +390,8 @@ class Allocator:
         self._commands = control.commands
         implied = np.matmul(view.jacobians, control.commands[:, :, None])[:, :, 0]
         if not self.orders.hold:
-            self._guidance.notice(course, implied, view.dt)
+            free = np.matmul(view.jacobians, control.free[:, :, None])[:, :, 0]
+            self._guidance.notice(course, implied, free, view.dt)
         self._last = (view.points, implied, course)
 
     # -- what comes out -----------------------------------------------------------

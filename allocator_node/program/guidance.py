@@ -192,11 +192,20 @@ class Guidance:
         )
         return preferred
 
-    def notice(self, course: Course, velocities: np.ndarray, dt: float) -> None:
-        """Learn who is held back from the velocities (N, 3) that were allowed, m/s."""
+    def notice(
+        self, course: Course, velocities: np.ndarray, free: np.ndarray, dt: float
+    ) -> None:
+        """Learn who is held back by others, not by what it can do itself.
+
+        Args:
+            course: What each robot should do.
+            velocities: What was allowed, m/s, shape (N, 3).
+            free: What it would do alone, m/s, shape (N, 3).
+            dt: Length of the period, s.
+        """
         closing = -(course.away * velocities).sum(axis=1)
-        wanting = course.demand > 0.05
-        held = wanting & (closing < HELD_BELOW * course.demand)
+        able = np.minimum(course.demand, -(course.away * free).sum(axis=1))
+        held = (course.demand > 0.05) & (closing < HELD_BELOW * able)
         self.held = np.where(held, self.held + dt, 0.0)
         impatient = self.held > PATIENCE
         self.aside[impatient] = np.minimum(self.aside[impatient] + TURN_ASIDE * dt, MOST_ASIDE)

@@ -187,7 +187,10 @@ class Steering:
             plan = self._plan(
                 i, here, np.array([*corner, facing]), 1 / curvature, fleet, held[i], dt
             )
-            turn = np.clip(_pursuit(here, plan.carrot(CARROT / curvature)), -curvature, curvature)
+            turn = _pursuit(
+                here, plan.carrot(CARROT / curvature), aside[i] if plan.gear > 0 else 0.0
+            )
+            turn = np.clip(turn, -curvature, curvature)
             cruise = fleet.cruise[i]
             speed = max(min(gamma * (plan.left + beyond), cruise), SLOWEST * cruise)
             keeps_up = max(float(course.to_goal[i] @ targets.velocities[i]), 0.0)
@@ -197,13 +200,11 @@ class Steering:
             row = np.array([vx, turn * vx / (curvature**2 * fleet.ahead[i])])
             row /= np.linalg.norm(row)
             demand[i] = row @ (vx, fleet.ahead[i] * turn * vx)
-            angle = here[2] - aside[i]
-            away[i] = (
-                row[1] * np.sin(angle) - row[0] * np.cos(angle),
-                -row[0] * np.sin(angle) - row[1] * np.cos(angle),
-                0.0,
-            )
-        return replace(course, away=away, demand=demand)
+            cos, sin = np.cos(here[2]), np.sin(here[2])
+            away[i] = row[1] * sin - row[0] * cos, -row[0] * sin - row[1] * cos, 0.0
+        exact = course.exact & ~fleet.steered
+        preferred = np.where(fleet.steered[:, None], 0.0, course.preferred)
+        return replace(course, away=away, demand=demand, preferred=preferred, exact=exact)
 
     def _plan(
         self,
@@ -238,11 +239,16 @@ class Steering:
         return plan
 
 
-def _pursuit(here: np.ndarray, carrot: np.ndarray) -> float:
-    """Give the curvature of the arc from a pose (3,) to a point (2,), 1/m."""
+def _pursuit(here: np.ndarray, carrot: np.ndarray, aside: float) -> float:
+    """Give the curvature of the arc from a pose (3,) to a point (2,), 1/m.
+
+    The point is turned clockwise by ``aside``, rad, but not to behind the robot.
+    """
     x, y = carrot - here[:2]
-    across = np.cos(here[2]) * y - np.sin(here[2]) * x
-    return float(2 * across / max(x * x + y * y, 1e-6))
+    bearing = np.angle(np.exp(1j * (np.arctan2(y, x) - here[2])))
+    if aside > 0:
+        bearing = max(bearing - aside, -np.pi / 2)
+    return float(2 * np.sin(bearing) / max(np.hypot(x, y), 1e-3))
 
 
 def _planned(
