@@ -180,6 +180,7 @@ def random_problem(random: np.random.Generator, robots: int, tasks: int) -> Prob
         swap_cost=random.uniform(0, 0.3, robots),
         energy=random.uniform(0, 3, (robots, tasks)),
         limits=limits,
+        gear=np.zeros(robots, dtype=int),
         jacobians=jacobians,
         away=away / np.linalg.norm(away, axis=2, keepdims=True),
         closing=np.where(near, 0.0, random.uniform(0, 1.5, (robots, tasks))),
@@ -187,3 +188,15 @@ def random_problem(random: np.random.Generator, robots: int, tasks: int) -> Prob
         kappa=random.choice([0.002, 0.1, 1.0]),
         slack_weight=100.0,
     )
+
+
+def with_cars(problem: Problem, random: np.random.Generator) -> Problem:
+    """Give the program with about half of its robots steered, forward or in reverse."""
+    limits, jacobians = problem.limits.copy(), problem.jacobians.copy()
+    gear = np.zeros(len(limits), dtype=int)
+    for i in np.flatnonzero(random.random(len(limits)) < 0.5):
+        gear[i] = random.choice([1, -1])
+        limits[i] = [random.uniform(0.5, 2), 0, 0, random.uniform(0.2, 2)]
+        (cos, sin), ahead = jacobians[i, :2, 0], random.uniform(0.2, 1.0)
+        jacobians[i, :2, 3] = -ahead * sin, ahead * cos
+    return replace(problem, limits=limits, jacobians=jacobians, gear=gear)

@@ -11,7 +11,7 @@ import quadprog
 from builders import team_of
 from scipy.optimize import nnls
 
-from allocator_node.drives import Aerial, Differential, Holonomic
+from allocator_node.drives import Aerial, Carlike, Differential, Holonomic
 from allocator_node.model import Model
 from allocator_node.program import ControlProblem, Safety, SafetyRows, solve_control, solvers
 from allocator_node.program.control import CORNERS, TOO_NEAR
@@ -34,9 +34,10 @@ def crowd(random: np.random.Generator) -> tuple[Model, Safety]:
         Differential(max_speed=random.uniform(0.5, 1.5), lookahead=0.25),
         Holonomic(max_speed=random.uniform(0.5, 1.5)),
         Aerial(max_speed=2.0, height=(3.0, 5.0)),
+        Carlike(max_speed=random.uniform(0.5, 1.5), min_turn_radius=random.uniform(0.5, 2)),
     ]
     robots = [
-        Robot(f"robot_{i}", drives[random.choice(3, p=[0.45, 0.45, 0.1])], radius=0.35)
+        Robot(f"robot_{i}", drives[random.choice(4, p=[0.3, 0.35, 0.1, 0.25])], radius=0.35)
         for i in range(COUNT)
     ]
     shed = KeepOut("shed", ((4.0, 4.0), (5.5, 4.0), (5.5, 5.0), (4.0, 5.0)))
@@ -79,10 +80,12 @@ def scene(seed: int) -> ControlProblem:
     ramp = random.random(COUNT) < 0.3
     lowest[ramp, :2] *= 0.5
     highest[ramp, :2] *= 0.7
+    gear = fleet.steered * np.where(random.random(COUNT) < 0.3, -1, 1)
+    lowest[gear > 0, 0] = highest[gear < 0, 0] = 0.0
     lowest[~heard] = highest[~heard] = 0.0
     away = random.normal(size=(COUNT, 3)) * [1, 1, 0]
     demand = np.where(random.random(COUNT) < 0.8, random.uniform(0.1, 1, COUNT) * fleet.cruise, 0)
-    turning = (demand == 0) | (fleet.ahead == 0)
+    turning = ((demand == 0) | (fleet.ahead == 0)) & ~fleet.steered
     preferred = np.zeros((COUNT, 4))
     preferred[:, 3] = np.where(turning & heard, random.uniform(-0.5, 0.5, COUNT), 0.0)
     return ControlProblem(
@@ -90,6 +93,7 @@ def scene(seed: int) -> ControlProblem:
         limits=fleet.limits,
         lowest=lowest,
         highest=highest,
+        gear=gear,
         round_limit=fleet.round_limit,
         away=away / np.linalg.norm(away, axis=1, keepdims=True),
         demand=np.where(heard, demand, 0.0),
@@ -142,8 +146,15 @@ def dense(
         if p.demand[i] > 0:
             demand(-moves(i, p.away[i]) + unit[size + i], p.demand[i])
         for axis in range(4):
-            demand(unit[4 * i + axis], p.lowest[i, axis])
-            demand(-unit[4 * i + axis], -p.highest[i, axis])
+            # Where the cone below says so already, once more would be degenerate.
+            if axis > 0 or p.gear[i] < 1:
+                demand(unit[4 * i + axis], p.lowest[i, axis])
+            if axis > 0 or p.gear[i] > -1:
+                demand(-unit[4 * i + axis], -p.highest[i, axis])
+        if p.gear[i]:
+            cone = p.gear[i] * p.limits[i, 3] / p.limits[i, 0] * unit[4 * i]
+            demand(cone + unit[4 * i + 3], 0.0)
+            demand(cone - unit[4 * i + 3], 0.0)
         if p.round_limit[i] and solved[i]:
             # The octagon in the disc |(vx, vy)| ≤ limit that has a corner straight ahead.
             ahead = -p.away[i] @ p.jacobians[i]
@@ -177,7 +188,14 @@ def test_commands_are_those_another_solver_finds(seed):
     problem = scene(seed)
     control = solve_control(problem)
     P, q, A, b = dense(problem, control.solved)
-    answer, value, *_ = quadprog.solve_qp(P, -q, A.T, b)
+    # Axes that are bound to zero are left out: quadprog stumbles over such pairs of rows.
+    free = np.ones(len(q), dtype=bool)
+    free[: problem.lowest.size] = (problem.lowest < problem.highest).ravel()
+    some = A[:, free].any(axis=1)
+    answer = np.zeros(len(q))
+    answer[free], value, *_ = quadprog.solve_qp(
+        P[np.ix_(free, free)], -q[free], A[np.ix_(some, free)].T, b[some]
+    )
     assert not control.stopped.any()
     found = completed(problem, control.commands)
     assert 0.5 * found @ P @ found + q @ found == pytest.approx(value, rel=1e-6, abs=1e-9)
@@ -218,6 +236,19 @@ def test_standing_still_keeps_every_row_while_the_distance_is_kept(seed):
     assert not rows.violated[rows.room >= 0].any()
 
 
+def test_steered_robots_turn_no_more_than_they_drive():
+    turning = 0
+    for seed in range(60):
+        problem = scene(seed)
+        commands, limits = solve_control(problem).commands, problem.limits
+        cars = problem.gear != 0
+        vx, turn = (commands[cars][:, [0, 3]] / limits[cars][:, [0, 3]]).T
+        assert (problem.gear[cars] * vx >= 0).all()
+        assert (np.abs(turn) <= np.abs(vx) * (1 + 1e-12)).all()
+        turning += (turn != 0).sum()
+    assert turning > 20
+
+
 def test_no_row_is_traded_for_progress():
     """Rows that were kept are kept, whatever the violated ones ask for."""
     for seed in range(40):
@@ -248,6 +279,7 @@ def face_to_face(apart: float) -> ControlProblem:
         limits=model.fleet.limits,
         lowest=-model.fleet.limits,
         highest=model.fleet.limits,
+        gear=np.zeros(2, dtype=int),
         round_limit=model.fleet.round_limit,
         away=np.array([[-1.0, 0, 0], [1, 0, 0]]),
         demand=np.ones(2),
@@ -313,8 +345,8 @@ def test_where_every_solver_fails_those_concerned_stand_and_are_named(monkeypatc
     near = face_to_face(apart=1.3)
     three = {
         name: np.concatenate([getattr(near, name), getattr(near, name)[:1]])
-        for name in ("jacobians", "limits", "lowest", "highest", "round_limit", "away", "demand",
-                     "preferred", "slack_weight")
+        for name in ("jacobians", "limits", "lowest", "highest", "gear", "round_limit", "away",
+                     "demand", "preferred", "slack_weight")
     }  # fmt: skip
     monkeypatch.setattr(solvers, "SOLVERS", (broken, broken))
     control = solve_control(replace(near, **three))

@@ -9,7 +9,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 import quadprog
-from builders import random_problem
+from builders import random_problem, with_cars
 from scipy.optimize import linear_sum_assignment
 
 from allocator_node.program import assign, least_effort, price
@@ -45,6 +45,19 @@ def one_to_one(random, robots, tasks):
 def test_fast_path_and_undivided_statement_agree(seed):
     random = np.random.default_rng(seed)
     problem = random_problem(random, robots=random.integers(2, 9), tasks=random.integers(1, 5))
+    fast = assign(problem, price(problem))
+    stated = solve_statement(problem)
+    np.testing.assert_allclose(fast.shortfall, stated.shortfall, rtol=1e-6, atol=1e-6)
+    assert fast.cost == pytest.approx(stated.cost, rel=1e-6, abs=1e-9)
+    assert fast.proven
+
+
+@pytest.mark.campaign(slice=20, whole=300)
+def test_they_agree_with_robots_that_steer(seed):
+    """Their commands lie in a cone, |ω| / limit ≤ gear · vx / limit, not in a box."""
+    random = np.random.default_rng(7000 + seed)
+    problem = random_problem(random, robots=random.integers(2, 9), tasks=random.integers(1, 5))
+    problem = with_cars(problem, random)
     fast = assign(problem, price(problem))
     stated = solve_statement(problem)
     np.testing.assert_allclose(fast.shortfall, stated.shortfall, rtol=1e-6, atol=1e-6)
@@ -133,6 +146,34 @@ def test_pricing_is_each_robots_own_qp():
         limits = problem.limits[i, has]
         bounds = np.concatenate([[problem.demand[i, m]], -limits, -limits, [0.0]])
         _, value, *_ = quadprog.solve_qp(weights, np.zeros(has.sum() + 1), rows.T, bounds)
+        assert prices[i, m] == pytest.approx(value, rel=1e-8, abs=1e-10)
+
+
+@pytest.mark.campaign(slice=10, whole=100)
+def test_steered_pricing_is_each_robots_own_qp(seed):
+    """The cone's closed form against quadprog, in m/s and rad/s: inside, edge, behind, clipped."""
+    random = np.random.default_rng(seed)
+    problem = random_problem(random, 12, 6)
+    problem = with_cars(problem, random)
+    problem = replace(
+        problem,
+        kappa=1.0,
+        closing=problem.closing * 3,
+        eligible=np.ones_like(problem.eligible),
+        slack_weight=random.choice([0.1, 1.0, 100.0]),
+    )
+    prices = price(problem) - problem.energy
+    for i, m in itertools.product(np.flatnonzero(problem.gear), range(6)):
+        top, turn = problem.limits[i, [0, 3]]
+        gear = problem.gear[i]
+        reach = -problem.away[i, m] @ problem.jacobians[i][:, [0, 3]]
+        rows = np.array([
+            [*reach, 1.0], [-gear, 0, 0], [gear * turn / top, 1, 0], [gear * turn / top, -1, 0],
+            [0, 0, 1],
+        ])  # fmt: skip
+        bounds = np.array([problem.demand[i, m], -top, 0, 0, 0])
+        weights = np.diag([2 / top**2, 2 / turn**2, 2 * problem.slack_weight])
+        _, value, *_ = quadprog.solve_qp(weights, np.zeros(3), rows.T, bounds)
         assert prices[i, m] == pytest.approx(value, rel=1e-8, abs=1e-10)
 
 

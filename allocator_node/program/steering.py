@@ -12,7 +12,7 @@ from ..model import Model
 from ..team import Team
 from .dubins import SIDES, WORDS, dubins, traced
 from .guidance import Course, Targets
-from .ways import GIVE, grown
+from .ways import grown
 
 SPARE = 1.15
 """Paths turn on circles larger than the tightest by this: what is left corrects errors."""
@@ -40,6 +40,9 @@ BACKING_COST = 2.0
 
 BLOCKED_COST = 20.0
 """A metre where an area is too near counts as so many free ones."""
+
+GRAZING = 0.05
+"""Distance paths keep from where the safety rows would slow a robot to a halt, m."""
 
 COMPARED = 64
 """Shortest paths that are looked at when areas are near."""
@@ -139,7 +142,7 @@ class Steering:
         self._blocked = {}
         if areas or boundary is not None:
             for i in self._robots:
-                self._blocked[i] = grown(areas, boundary, clearance[i] - GIVE)
+                self._blocked[i] = grown(areas, boundary, clearance[i] + GRAZING)
                 shapely.prepare(self._blocked[i])
 
     def course(
