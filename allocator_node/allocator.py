@@ -390,7 +390,9 @@ class Allocator:
         self._commands = control.commands
         implied = np.matmul(view.jacobians, control.commands[:, :, None])[:, :, 0]
         if not self.orders.hold:
+            fleet = self._model.fleet
             free = np.matmul(view.jacobians, control.free[:, :, None])[:, :, 0]
+            free[~fleet.steered & np.isinf(fleet.speed_up)] = np.nan
             self._guidance.notice(course, implied, free, view.dt)
         self._last = (view.points, implied, course)
 

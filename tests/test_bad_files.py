@@ -163,12 +163,20 @@ BAD_TEAMS = [
     ("  drone_1:", "  drone-1:",
      '22: robots.drone-1: found the name "drone-1"; must be letters, digits and underscores, '
      "not starting with a digit"),
-    ("{model: aerial, max_speed: 3, height: [4, 8]}", "{model: carlike, max_speed: 3}",
-     '23: robots.drone_1.drive.model: found the text "carlike"; must be one of aerial, '
-     "differential, holonomic"),
+    ("{model: aerial, max_speed: 3, height: [4, 8]}", "{model: legged, max_speed: 3}",
+     '23: robots.drone_1.drive.model: found the text "legged"; must be one of aerial, '
+     "carlike, differential, holonomic"),
+    ("{model: aerial, max_speed: 3, height: [4, 8]}", "{model: carlike, max_turn_rate: 3}",
+     "23: robots.drone_1.drive.max_turn_rate: found an unknown key; must be one of "
+     "cruise_speed, lookahead, max_acceleration, max_speed, min_turn_radius, model, reverse",
+     "23: robots.drone_1.drive.max_speed: found nothing; must be given"),
+    ("{model: aerial, max_speed: 3, height: [4, 8]}",
+     "{model: carlike, max_speed: 3, min_turn_radius: 0, reverse: 1}",
+     "23: robots.drone_1.drive.min_turn_radius: found 0; must be greater than 0",
+     "23: robots.drone_1.drive.reverse: found 1; must be true or false"),
     ("{model: aerial, max_speed: 3, height: [4, 8]}", "{max_speed: 3, height: [4, 8]}",
-     "23: robots.drone_1.drive.model: found nothing; must be one of aerial, differential, "
-     "holonomic"),
+     "23: robots.drone_1.drive.model: found nothing; must be one of aerial, carlike, "
+     "differential, holonomic"),
     ("{model: aerial, max_speed: 3, height: [4, 8]}", "aerial",
      '23: robots.drone_1.drive: found the text "aerial"; must be a mapping with at least model'),
     ("height: [4, 8]", "height: [8, 4]",

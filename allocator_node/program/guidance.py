@@ -195,16 +195,17 @@ class Guidance:
     def notice(
         self, course: Course, velocities: np.ndarray, free: np.ndarray, dt: float
     ) -> None:
-        """Learn who is held back by others, not by what it can do itself.
+        """Learn who is held back.
 
         Args:
             course: What each robot should do.
             velocities: What was allowed, m/s, shape (N, 3).
-            free: What it would do alone, m/s, shape (N, 3).
+            free: What robots that get up to speed slowly or must turn first would do
+                alone, m/s, shape (N, 3); NaN for others.
             dt: Length of the period, s.
         """
         closing = -(course.away * velocities).sum(axis=1)
-        able = np.minimum(course.demand, -(course.away * free).sum(axis=1))
+        able = np.fmin(course.demand, -(course.away * free).sum(axis=1))
         held = (course.demand > 0.05) & (closing < HELD_BELOW * able)
         self.held = np.where(held, self.held + dt, 0.0)
         impatient = self.held > PATIENCE
