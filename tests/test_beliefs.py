@@ -235,6 +235,9 @@ def test_the_allocator_goes_on_when_the_clock_is_set_back():
 
 # -- energy --------------------------------------------------------------------------
 
+HERE = np.zeros((1, 3))
+"""Where one robot is, m; it has no dock."""
+
 
 def test_watt_hours_counted_by_hand():
     """30 W idle + half of 160 W for 90 s: 110 W · 90 s / 3600 s/h = 2.75 Wh of 500."""
@@ -243,7 +246,7 @@ def test_watt_hours_counted_by_hand():
     belief = EnergyBelief(model)
     commands = np.array([[0.3, -0.4, 0, 0]])
     for step in range(900):
-        belief.update(Observation.nothing(1), model, commands, 0.1 * step, 0.1, 30.0)
+        belief.update(Observation.nothing(1), model, commands, HERE, 0.1 * step, 0.1, 30.0)
     assert belief.charge[0] == pytest.approx(1 - 2.75 / 500, rel=1e-9)
     assert belief.estimated[0]
     assert belief.spendable(model)[0] == pytest.approx(500 * 0.8 - 2.75)
@@ -260,15 +263,15 @@ def test_a_measured_charge_is_taken_as_it_is_and_counted_on_from():
     model = Model(team_of([robot("one", battery=battery)], []))
     belief = EnergyBelief(model)
     still = np.zeros((1, 4))
-    belief.update(charged(0.5, 10.0), model, still, 10.0, 0.1, 30.0)
+    belief.update(charged(0.5, 10.0), model, still, HERE, 10.0, 0.1, 30.0)
     assert belief.charge[0] == 0.5 and not belief.estimated[0]
-    belief.update(charged(0.5, 10.0), model, still, 39.0, 1.0, 30.0)
+    belief.update(charged(0.5, 10.0), model, still, HERE, 39.0, 1.0, 30.0)
     assert not belief.estimated[0]
     # The same message is no second measurement: one second of 36 W is 0.01 Wh.
     assert belief.charge[0] == pytest.approx(0.5 - 0.0001)
-    belief.update(charged(0.5, 10.0), model, still, 41.0, 1.0, 30.0)
+    belief.update(charged(0.5, 10.0), model, still, HERE, 41.0, 1.0, 30.0)
     assert belief.estimated[0]
-    belief.update(charged(0.8, 42.0), model, still, 42.0, 1.0, 30.0)
+    belief.update(charged(0.8, 42.0), model, still, HERE, 42.0, 1.0, 30.0)
     assert belief.charge[0] == 0.8 and not belief.estimated[0]
 
 
@@ -279,7 +282,7 @@ def test_a_charge_out_of_range_is_clipped_and_none_is_none():
     still = np.zeros((1, 4))
     for charge, expected in ((1.7, 1.0), (0.4, 0.4), (np.nan, 0.4), (-0.1, 0.0)):
         now = belief.measured_at[0] + 1 if np.isfinite(belief.measured_at[0]) else 0.0
-        belief.update(charged(charge, now), model, still, now, 0.1, 30.0)
+        belief.update(charged(charge, now), model, still, HERE, now, 0.1, 30.0)
         assert belief.charge[0] == expected
 
 
