@@ -124,3 +124,21 @@ def test_a_robot_that_fails_is_replaced_in_the_same_period():
     assert second.task[failed] == -1
     assert second.shortfall.sum() <= first.shortfall.sum() + 1e-9
     assigner.close()
+
+
+def test_levels_are_served_in_order_where_no_weights_can_hold_them_apart():
+    """80 tasks of one robot each on five levels, 60 robots: by hand, the lowest 20 lack one."""
+    random = np.random.default_rng(0)
+    robots, tasks = 60, 80
+    problem = replace(
+        random_problem(random, robots, tasks),
+        needs=np.zeros((tasks, 3)),
+        least=np.ones(tasks, int),
+        most=np.ones(tasks, int),
+        eligible=np.ones((robots, tasks), bool),
+        pinned=np.full(robots, -1),
+        priority=np.arange(tasks) % 5,
+    )
+    found = assign(problem, price(problem))
+    assert found.proven
+    np.testing.assert_allclose(found.shortfall, [0, 0, 0, 4, 16], atol=1e-9)

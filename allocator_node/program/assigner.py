@@ -100,6 +100,10 @@ class Assigner:
         task = solve_slots(problem, prices)
         if task is not None:
             return evaluate(problem, prices, task, proven=True)
+        if self._search is not None and self._search.done():
+            search, self._search = self._search, None
+            proof, self._lasted = search.result()
+            self._proof = proof or self._proof
         lasts = self._lasted
         if lasts is None:
             lasts = PAIR_TAKES * np.count_nonzero(problem.eligible)
@@ -113,10 +117,6 @@ class Assigner:
 
     def _beside(self, problem: Problem, prices: np.ndarray) -> Assignment:
         """Stand by the standing assignment until a better one is proven."""
-        if self._search is not None and self._search.done():
-            search, self._search = self._search, None
-            proof, self._lasted = search.result()
-            self._proof = proof or self._proof
         candidates = [evaluate(problem, prices, repair(problem, prices, problem.previous))]
         key = _key(problem)
         if self._proof is not None:

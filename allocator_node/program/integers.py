@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from functools import cached_property
+
 import numpy as np
 from scipy import sparse
 
@@ -35,6 +37,7 @@ class Integers:
         self.counts = np.flatnonzero(problem.least > 0)
         self.need_task, self.need = np.nonzero(problem.needs > 0)
         self.columns = self.pairs + len(self.counts) + len(self.need_task)
+        self.needs = slice(self.pairs + len(self.counts), None)
         self.level = np.concatenate(
             [
                 np.full(self.pairs, -1),
@@ -111,44 +114,35 @@ class Integers:
             [np.ones(robots), self._most(), np.full(len(self.counts) + len(self.need), np.inf)]
         )
 
-    def _cuts(self, covered: np.ndarray) -> tuple[sparse.csr_array, np.ndarray]:
-        """Give rounding cuts on the needs whose σ is fixed.
+    @cached_property
+    def _cuts(self) -> tuple[sparse.csr_array, np.ndarray, np.ndarray]:
+        """Give rounding cuts on the needs: rows, right-hand sides, and whose σ must be fixed.
 
         With amounts c and what must be brought t, any u > 0 gives the valid
         inequality Σ ⌈u c_i⌉ α_i ≥ ⌈u t⌉ (Chvátal and Gomory); u = j/c for each
-        distinct c makes those that bind.
-
-        Args:
-            covered: Whether the σ of a need (row) is fixed at ``least_missing``.
+        distinct c makes those that bind. They hold where the σ of the need is fixed
+        at ``least_missing``.
         """
-        where, who, what, right = [], [], [], []
-        top = 0
-        amounts_of = [self.entry[2][self.entry[0] == row] for row in range(len(self.need))]
-        pairs_of = [self.entry[1][self.entry[0] == row] for row in range(len(self.need))]
-        fixed = self.least_missing[self.pairs + len(self.counts) :]
-        for row in np.flatnonzero(covered):
-            amounts = amounts_of[row]
-            due = self.row_low[len(self.row_low) - len(self.need) + row] - fixed[row]
-            distinct = np.unique(amounts)
-            if due <= 0 or not len(distinct):
-                continue
-            steps = np.arange(1, 4)
-            multipliers = np.unique(np.outer(1.0 / distinct, steps).ravel())
-            for u in multipliers:
-                coefficient = np.ceil(u * amounts - 1e-9)
-                bound = np.ceil(u * due - 1e-9)
-                where.append(np.full(len(amounts), top))
-                who.append(pairs_of[row])
-                what.append(np.minimum(coefficient, bound))
+        where, who, what, right, whose = [], [], [], [], []
+        needs = self.needs
+        due = self.row_low[len(self.row_low) - len(self.need) :] - self.least_missing[needs]
+        for row in np.flatnonzero(due > 0):
+            mine = self.entry[0] == row
+            pairs, amounts = self.entry[1][mine], self.entry[2][mine]
+            for u in np.unique(np.outer(1.0 / np.unique(amounts), np.arange(1, 4))):
+                bound = np.ceil(u * due[row] - 1e-9)
+                where.append(np.full(len(pairs), len(right)))
+                who.append(pairs)
+                what.append(np.minimum(np.ceil(u * amounts - 1e-9), bound))
                 right.append(bound)
-                top += 1
-        if not top:
-            return sparse.csr_array((0, self.columns)), np.zeros(0)
+                whose.append(row)
+        if not right:
+            return sparse.csr_array((0, self.columns)), np.zeros(0), np.zeros(0, dtype=int)
         cuts = sparse.csr_array(
             (np.concatenate(what), (np.concatenate(where), np.concatenate(who))),
-            shape=(top, self.columns),
+            shape=(len(right), self.columns),
         )
-        return cuts, np.array(right)
+        return cuts, np.array(right), np.array(whose)
 
     def solve(
         self, costs: np.ndarray, start: np.ndarray | None = None, limit: Limit = FREE
@@ -237,8 +231,9 @@ class Integers:
 
     def _minimizer(self, high: np.ndarray, held: Held) -> Minimizer:
         """Give what minimizes with σ up to ``high`` (columns,) and some sums held."""
-        needs = slice(self.pairs + len(self.counts), None)
-        cuts, due = self._cuts(high[needs] <= self.least_missing[needs])
+        cuts, due, whose = self._cuts
+        fixed = np.flatnonzero((high <= self.least_missing)[self.needs][whose])
+        cuts, due = cuts[fixed], due[fixed]
         sums = [sparse.csr_array(row[None]) for row, _ in held]
         return Minimizer(
             rows=sparse.vstack([self.rows, cuts, *sums], format="csr"),

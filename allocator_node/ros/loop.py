@@ -41,7 +41,7 @@ TELL_EVERY = 1.0
 SET_BACK = 1.0
 """A clock set back further than this belongs to another run, s."""
 
-SEARCH_SHARE = 0.25
+SEARCH_SHARE = 0.1
 """Share of a period that the search for an assignment may take; longer ones go on beside."""
 
 STOP_REPEATS = 3

@@ -38,7 +38,7 @@ from allocator_node.program.solvers import (
 )
 from allocator_node.program.statement import solve_statement
 
-BUDGET = 0.025
+BUDGET = 0.01
 """What the node gives the search for an assignment within a period of 0.1 s, s."""
 
 SIZES = ((5, 3, 150), (20, 8, 150), (100, 40, 120), (500, 100, 60))
