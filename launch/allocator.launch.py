@@ -24,6 +24,11 @@ ARGUMENTS = (
         description="where learned efficacies and the assignment survive a restart (empty: none)",
     ),
     DeclareLaunchArgument(
+        "record_to",
+        default_value="",
+        description="directory under which each activation leaves a recording (empty: none)",
+    ),
+    DeclareLaunchArgument(
         "command_robots",
         default_value="true",
         description="false: decide and publish, but drive nobody",
@@ -50,6 +55,7 @@ def generate_launch_description() -> LaunchDescription:
                     ("team_file", str),
                     ("rate", float),
                     ("state_file", str),
+                    ("record_to", str),
                     ("command_robots", bool),
                 )
             }

@@ -51,7 +51,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         print(json.dumps(findings.as_json(), indent=1, allow_nan=False))
     else:
         for part in parts(findings, min(screen.width, WIDTH)):
-            screen.print(part, width=min(screen.width, WIDTH))
+            screen.print(part, width=min(screen.width, WIDTH), soft_wrap=False)
     if asked.html:
         try:
             write_page(findings, asked.html, asked.team.name)
