@@ -22,6 +22,9 @@ WORTH_PROVING = 0.25
 PAIR_TAKES = 5e-5
 """Time a search takes for each eligible pair, s: a guess while there is no experience."""
 
+FADES = 0.98
+"""Share left of the time the last search took, period by period: the next may be quicker."""
+
 LONGEST_SEARCH = 20.0
 """Time after which a search beside the loop ends with the best it has, s."""
 
@@ -113,6 +116,8 @@ class Assigner:
                 self._proof = proof
                 return proof.found
             self._lasted = np.inf
+        elif self._lasted is not None:
+            self._lasted *= FADES
         return self._beside(problem, prices)
 
     def _beside(self, problem: Problem, prices: np.ndarray) -> Assignment:

@@ -154,6 +154,7 @@ def crowd(robots: int, room: float, seed: int = 0) -> ControlProblem:
         lowest=-fleet.limits,
         highest=fleet.limits,
         round_limit=fleet.round_limit,
+        gear=np.zeros(robots),
         away=away / np.linalg.norm(away, axis=1, keepdims=True),
         demand=fleet.cruise,
         preferred=np.zeros((robots, 4)),

@@ -153,12 +153,12 @@ def control_and_solvers() -> Rows:
     rows = []
     for name, room in (("crowd", 6.0), ("busy", 16.0), ("open", 60.0)):
         for robots in (5, 20, 100, 500):
-            table = []
+            table, solver = [], "none"
             for seed in range(4 if robots < 500 else 2):
                 problem = crowd(robots, room, seed)
                 control = solve_control(problem)
                 whole = _ready(joint(problem, np.arange(robots)).qp)
-                own, solver = 0.0, "none"
+                own = 0.0
                 if control.solved.any():
                     qp = _ready(joint(problem, np.flatnonzero(control.solved)).qp)
                     small = len(qp.linear) <= SMALL
