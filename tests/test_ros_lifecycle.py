@@ -34,6 +34,7 @@ from ros_bench import (  # noqa: E402
 from std_msgs.msg import String  # noqa: E402
 
 from allocator_node.allocator import Allocator  # noqa: E402
+from allocator_node.recording import read_run  # noqa: E402
 
 pytestmark = pytest.mark.ros
 
@@ -253,6 +254,21 @@ def test_what_was_learned_survives_a_restart(tmp_path: Path) -> None:
         aside = tmp_path / "state.json.damaged"
         assert aside.read_text() == damage
         aside.unlink()
+
+
+def test_an_activation_leaves_a_recording_that_can_be_reported(tmp_path: Path) -> None:
+    """``record_to``: closed and readable after deactivate, one for each activation."""
+    with bench(tmp_path, record_to=str(tmp_path / "recordings")) as made:
+        rovers = made.start()
+        until(lambda: busy(rovers), "a rover drives")
+        listening = made.probe.node.count_subscribers
+        until(lambda: listening("/allocator/assignments"), "the recorder listens")
+        time.sleep(2.5)  # the allocator announces itself every second
+        assert made.deactivate()
+        (path,) = tmp_path.glob("recordings/*")
+    run = read_run(path)
+    assert [event["cause"] for event in run["events"]] == ["start"]
+    assert run["paths"]["rover_1"] and set(run["robots"]) == {"rover_1", "rover_2"}
 
 
 # What comes in

@@ -3,9 +3,13 @@
 from __future__ import annotations
 
 import math
+import re
+from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
+import yaml
 
 pytest.importorskip("rclpy", reason="needs ROS 2: rclpy is not installed")
 
@@ -25,8 +29,11 @@ from allocator_node.decision import (  # noqa: E402
 )
 from allocator_node.drives import Differential, Holonomic  # noqa: E402
 from allocator_node.ros import conversions, markers, outbox, parameters, sim_node  # noqa: E402
+from allocator_node.ros.loop import MARKERS_EVERY  # noqa: E402
 from allocator_node.ros.state_file import StateFile  # noqa: E402
+from allocator_node.settings import Settings  # noqa: E402
 from allocator_node.team import KeepOut, Robot, Team  # noqa: E402
+from allocator_node.team_file import read_team  # noqa: E402
 
 pytestmark = pytest.mark.ros
 
@@ -185,6 +192,50 @@ def test_markers_that_vanish_are_deleted() -> None:
     assert gone == {("goal", 0), ("goal_name", 0), ("link", 0), ("shortfall", 0)}
     assert "rover_2: silent" in [m.text for m in later if m.ns == "name"]
     assert not {(m.ns, m.id) for m in board.markers(lost).markers if m.action == Marker.DELETE}
+
+
+def test_nothing_stale_stays_in_a_viewer() -> None:
+    """Every marker has a lifetime longer than the time between two messages."""
+    shown = markers.MarkerBoard(TEAM).markers(decision()).markers
+    lifetimes = {m.lifetime.sec + 1e-9 * m.lifetime.nanosec for m in shown}
+    assert lifetimes == {markers.LIFETIME} and markers.LIFETIME > 2 * MARKERS_EVERY
+
+
+def test_the_circle_of_a_silent_robot_grows_as_the_safety_rows_say() -> None:
+    """Speed times silence, up to ``silent_reach``, around its body."""
+    board, settings = markers.MarkerBoard(TEAM), Settings()
+    board.note(decision())
+    robot = list(TEAM.robots.values())[1]
+    radii = []
+    for later in (1.0, 1.5, 60.0):
+        gone = replace(decision(heard=np.array([True, False])), time=decision().time + later)
+        (circle,) = (m for m in board.markers(gone, settings).markers if m.ns == "silent")
+        silent_for = later + settings.pose_timeout
+        grown = min(robot.drive.max_speed * silent_for, settings.silent_reach)
+        assert circle.scale.x == pytest.approx(2 * (robot.radius + grown))
+        radii.append(circle.scale.x)
+    assert radii == sorted(radii)
+    back = board.markers(replace(decision(), time=decision().time + 61.0)).markers
+    gone_now = {(m.ns, m.id) for m in back if m.action == Marker.DELETE}
+    assert ("silent", 1) in gone_now
+
+
+def test_the_viewer_file_shows_every_marker_of_the_example() -> None:
+    """config/allocator.rviz: topic, latching, frame and namespaces as we publish them."""
+    root = Path(__file__).parents[1]
+    manager = yaml.safe_load((root / "config/allocator.rviz").read_text("utf-8"))[
+        "Visualization Manager"
+    ]
+    (display,) = (d for d in manager["Displays"] if d["Class"].endswith("/MarkerArray"))
+    assert display["Topic"]["Value"] == "/allocator/markers"
+    assert display["Topic"]["Durability Policy"] == "Transient Local"
+    source = (root / "allocator_node/ros/markers.py").read_text("utf-8")
+    made = set(re.findall(r'_(?:marker|text|outline)\(\s*"(\w+)"', source))
+    assert made == set(display["Namespaces"])
+    team = read_team(root / "config/solar_farm.yaml")
+    assert manager["Global Options"]["Fixed Frame"] == team.frame
+    (goal,) = (t for t in manager["Tools"] if t["Class"].endswith("/SetGoal"))
+    assert goal["Topic"]["Value"].split("/")[3] in team.tasks
 
 
 def test_a_battery_report_says_nan_where_nothing_is_measured() -> None:

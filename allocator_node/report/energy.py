@@ -7,10 +7,12 @@ from .palette import BLACK, ORANGE, SKY
 from .story import Run, energy_left
 
 
-def energy(run: Run) -> Picture:
-    """Draw a row a robot."""
+def energy(run: Run) -> Picture | None:
+    """Draw a row a robot; None where nothing is known of batteries."""
     robots = run["robots"]
     used, left = run["energy_wh"], energy_left(run)
+    if not used and not left:
+        return None
     figure, ax = axes(1.0 + (0.26 if len(robots) <= 30 else 0.17) * max(len(robots), 2))
     rows = range(len(robots))
     ax.barh(rows, [left.get(r, 0.0) for r in robots], height=0.62, color=SKY, edgecolor=BLACK,

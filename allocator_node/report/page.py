@@ -99,7 +99,8 @@ def _cards(run: Run) -> str:
     out = run["boundary_violations"]
     if out is not None:
         cards.append(card("times out of bounds", str(out), out > 0))
-    cards.append(card("used by all robots", f"{sum(run['energy_wh'].values()):.1f} Wh"))
+    if run["energy_wh"]:
+        cards.append(card("used by all robots", f"{sum(run['energy_wh'].values()):.1f} Wh"))
     cards.append(card("to decide, 99 % below", f"{run['period_ms']['p99']:.1f} ms"))
     if run["finished"]:
         cards.append(card("finished", counted(len(run["finished"]), "task")))

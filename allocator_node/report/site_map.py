@@ -38,9 +38,9 @@ def site_map(run: Run) -> Picture:
     for number, robot in enumerate(robots):
         _path(ax, run, robot, number, few)
     for number, row in enumerate(meetings(run), start=1):
-        t, gap, first, second, x, y = row
+        x, y = row[4:6]
         ax.plot(x, y, "X", color=VERMILLION, markeredgecolor=BLACK, markersize=9, zorder=5)
-        _write(ax, (x, y), f"{chr(96 + number)}: {gap:.2f} m", below=True)
+        _write(ax, (x, y), chr(96 + number), below=True)
     ax.set_xlim(low[0], high[0])
     ax.set_ylim(low[1], high[1])
     ax.set_aspect("equal")
@@ -56,8 +56,8 @@ def site_map(run: Run) -> Picture:
         + ("No two robots met." if closest is None else
            f"Smallest distance between two bodies {closest:.2f} m, "
            f"{' and '.join(run['closest']['robots'])} at {clock(run['closest']['t'])}."),
-        "Circle: start; square: end; cross-hatched: keep-out; small plus: dock; X: two bodies "
-        "came within 2 m, with their smallest distance.",
+        "Circle: start; square: end; cross-hatched: keep-out; plus: dock; X: a meeting, two bodies "
+        "within 2 m, with its letter in the table below.",
     )  # fmt: skip
 
 

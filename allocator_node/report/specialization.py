@@ -5,11 +5,17 @@ from __future__ import annotations
 from collections import defaultdict
 
 from .canvas import Picture, axes, finished, time_axis
-from .palette import look
+from .palette import BLACK, look
 from .story import Run
 
 PANELS, CURVES = 9, 7
 """Tasks shown, and robots in each, at most: those that changed most come first."""
+
+NOTICEABLE = 0.05
+"""A robot whose specialization changed by less is not shown."""
+
+RIDGE = 0.85
+"""Height of a specialization of 1, in rows."""
 
 
 def specialization(run: Run) -> Picture | None:
@@ -19,7 +25,7 @@ def specialization(run: Run) -> Picture | None:
         curves[row["task"]].setdefault(row["robot"], []).append((row["t"], row["value"]))
     changed = {
         task: dict(sorted(
-            ((robot, rows) for robot, rows in by_robot.items() if len(rows) > 1),
+            ((r, rows) for r, rows in by_robot.items() if _range(rows) >= NOTICEABLE),
             key=lambda item: -_range(item[1]),
         ))
         for task, by_robot in curves.items()
@@ -32,24 +38,28 @@ def specialization(run: Run) -> Picture | None:
         return None
     columns = min(3, len(shown))
     lines = -(-len(shown) // columns)
-    figure, panels = axes(2.3 * lines + 0.3, lines, columns) if len(shown) > 1 else axes(2.6)
-    flat = panels.flat if len(shown) > 1 else [panels]
+    most = max(min(len(changed[tasks[0]]), CURVES) for tasks in shown)
+    figure, panels = axes((0.9 + 0.3 * most) * lines + 0.3, lines, columns)
+    flat = list(panels.flat) if lines * columns > 1 else [panels]
     number = {robot: n for n, robot in enumerate(run["robots"])}
     for ax, tasks in zip(flat, shown, strict=False):
-        task = tasks[0]
-        for robot, rows in list(changed[task].items())[:CURVES]:
-            style = look(number[robot])
+        robots = list(changed[tasks[0]])[:CURVES]
+        for row, robot in enumerate(robots):
+            style, rows = look(number[robot]), changed[tasks[0]][robot]
             times = [t for t, _ in rows] + [run["seconds"]]
             values = [value for _, value in rows] + [rows[-1][1]]
-            ax.step(times, values, where="post", color=style.stroke, linestyle=style.line,
-                    linewidth=2, label=robot)  # fmt: skip
-        more = len(changed[task]) - CURVES
+            heights = [row - RIDGE * value for value in values]
+            ax.fill_between(times, row, heights, step="post", facecolor=style.colour,
+                            hatch=style.hatch, edgecolor="#00000088", linewidth=0.5)  # fmt: skip
+            ax.axhline(row, color=BLACK, linewidth=0.6)
+        more = len(changed[tasks[0]]) - CURVES
         title = _listed(tasks) + (f" ({more} more robots not shown)" if more > 0 else "")
         ax.set_title(title, fontsize=9)
-        ax.set_ylim(-0.05, 1.05)
+        ax.set_yticks(range(len(robots)), robots)
+        ax.set_ylim(most - 0.9, -1.05)
+        ax.grid(False, axis="y")
         time_axis(ax, run["seconds"])
-        ax.legend(fontsize=7, loc="best")
-    for ax in list(flat)[len(shown):] if len(shown) > 1 else []:
+    for ax in flat[len(shown) :]:
         ax.set_visible(False)
     falls = [
         f"{robot} for {_listed(tasks)} from {rows[0][1]:.2f} to {rows[-1][1]:.2f}"
@@ -58,7 +68,8 @@ def specialization(run: Run) -> Picture | None:
     return finished(
         figure, "specialization",
         f"Specialization over time, where it changed: {'; '.join(falls[:12])}.",
-        "Specialization s = suitability × efficacy, 0 to 1; only robots whose value changed.",
+        "Specialization s = suitability × efficacy as the height of each robot's strip, 0 to 1; "
+        "only robots whose value changed.",
     )  # fmt: skip
 
 

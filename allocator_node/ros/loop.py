@@ -219,6 +219,7 @@ class Loop:
         self._last = now
         decision = self.allocator.step(self._inbox.observation(now), now)
         self._decision = decision
+        self._board.note(decision)
         if self._commands is not None:
             broken = self._commands.send(decision, self.allocator.orders.hold)
             if broken:
@@ -285,7 +286,9 @@ class Loop:
 
     def _show(self) -> None:
         if self._decision is not None and self._node.count_subscribers(self._markers.topic_name):
-            self._markers.publish(self._board.markers(self._decision))
+            self._markers.publish(
+                self._board.markers(self._decision, self.allocator.settings)
+            )
 
     # Commands
 

@@ -6,10 +6,12 @@ from collections.abc import Iterator
 
 import numpy as np
 from geometry_msgs.msg import Point, Vector3
+from rclpy.duration import Duration
 from std_msgs.msg import ColorRGBA, Header
 from visualization_msgs.msg import Marker, MarkerArray
 
 from ..decision import Decision
+from ..settings import Settings
 from ..team import Polygon, Robot, Team
 from .conversions import pose_message, stamp_of
 
@@ -18,14 +20,24 @@ SILENT = ColorRGBA(r=0.55, g=0.55, b=0.55, a=0.5)
 GOAL = ColorRGBA(r=0.2, g=0.75, b=0.45, a=0.9)
 LINK = ColorRGBA(r=0.2, g=0.75, b=0.45, a=0.45)
 FORBIDDEN = ColorRGBA(r=0.85, g=0.3, b=0.2, a=0.8)
+DANGER = ColorRGBA(r=0.85, g=0.3, b=0.2, a=0.3)
 LIMIT = ColorRGBA(r=0.9, g=0.75, b=0.2, a=0.8)
 INK = ColorRGBA(r=1.0, g=1.0, b=1.0, a=0.9)
 
 HEIGHT = 0.5
 """Height of a body, m."""
 
+CIRCLE = 0.05
+"""Thickness of the circle around a silent robot, m."""
+
 BAR_WIDTH, BAR_LENGTH = 0.15, 0.8
 """Width of a specialization bar and its length at 1, m."""
+
+MOST_BARS = 10
+"""With more tasks only the bar of each robot's own task is shown."""
+
+LIFETIME = 3.0
+"""Markers vanish by themselves after so long, s: of a node that died nothing stays."""
 
 
 class MarkerBoard:
@@ -34,13 +46,22 @@ class MarkerBoard:
     def __init__(self, team: Team) -> None:
         self._team = team
         self._shown: set[tuple[str, int]] = set()
+        self._heard_at = np.full(len(team.robots), np.nan)
+        self._fastest = np.array([robot.drive.max_speed for robot in team.robots.values()])
 
-    def markers(self, decision: Decision) -> MarkerArray:
-        """Give everything to be seen now."""
+    def note(self, decision: Decision) -> None:
+        """Note who is heard from; to be called with every decision."""
+        self._heard_at[decision.heard] = decision.time
+
+    def markers(self, decision: Decision, settings: Settings | None = None) -> MarkerArray:
+        """Give everything to be seen now; ``settings`` as the allocator's."""
+        self.note(decision)
         header = Header(stamp=stamp_of(decision.time), frame_id=self._team.frame)
-        markers = [*self._site(), *self._robots(decision), *self._shortfalls(decision)]
+        growth = self._growth(decision, settings or Settings())
+        markers = [*self._site(), *self._robots(decision, growth), *self._shortfalls(decision)]
+        lifetime = Duration(seconds=LIFETIME).to_msg()
         for marker in markers:
-            marker.header = header
+            marker.header, marker.lifetime = header, lifetime
         now = {(marker.ns, marker.id) for marker in markers}
         gone = [
             Marker(header=header, ns=ns, id=number, action=Marker.DELETE)
@@ -48,6 +69,12 @@ class MarkerBoard:
         ]
         self._shown = now
         return MarkerArray(markers=[*gone, *markers])
+
+    def _growth(self, decision: Decision, settings: Settings) -> np.ndarray:
+        """Give how far each silent robot may have rolled on, m, (N,), as the safety rows do."""
+        silent_for = decision.time - self._heard_at + settings.pose_timeout
+        rolled = np.minimum(self._fastest * np.nan_to_num(silent_for), settings.silent_reach)
+        return np.where(decision.heard, 0.0, rolled)
 
     def clear(self) -> MarkerArray:
         """Give the message that takes everything away."""
@@ -64,11 +91,13 @@ class MarkerBoard:
             middle = np.mean(np.array(area.polygon), axis=0)
             yield _text("keep_out_name", number, (*middle, 0.5), area.name)
 
-    def _robots(self, decision: Decision) -> Iterator[Marker]:
+    def _robots(self, decision: Decision, growth: np.ndarray) -> Iterator[Marker]:
         for i, robot in enumerate(self._team.robots.values()):
             pose = decision.poses[i]
             if np.isfinite(pose).all():
                 yield from _robot(i, robot, pose, decision)
+                if not decision.heard[i]:
+                    yield _circle(i, pose, robot.radius + float(growth[i]))
                 yield from _work(i, pose, decision)
 
     def _shortfalls(self, decision: Decision) -> Iterator[Marker]:
@@ -93,10 +122,12 @@ def _robot(i: int, robot: Robot, pose: np.ndarray, decision: Decision) -> Iterat
     yield _marker("heading", i, Marker.ARROW, INK, size, nose)
     label = robot.name if heard else f"{robot.name}: silent"
     yield _text("name", i, (pose[0], pose[1], pose[2] + HEIGHT + 0.6), label)
+    many = len(decision.tasks) > MOST_BARS
     for m, share in enumerate(decision.specialization[i]):
-        if share > 0:
+        if share > 0 and (not many or decision.assignment[i] == m):
+            place = 0 if many else m
             middle = (
-                pose[0] + robot.radius + 0.2 + m * 1.3 * BAR_WIDTH,
+                pose[0] + robot.radius + 0.2 + place * 1.3 * BAR_WIDTH,
                 pose[1],
                 pose[2] + share * BAR_LENGTH / 2,
                 0.0,
@@ -110,6 +141,13 @@ def _robot(i: int, robot: Robot, pose: np.ndarray, decision: Decision) -> Iterat
                 (BAR_WIDTH, BAR_WIDTH, float(share) * BAR_LENGTH),
                 middle,
             )
+
+
+def _circle(i: int, pose: np.ndarray, radius: float) -> Marker:
+    """Give the ground on which a silent robot may be by now."""
+    place = (pose[0], pose[1], pose[2] + CIRCLE / 2, 0.0)
+    size = (2 * radius, 2 * radius, CIRCLE)
+    return _marker("silent", i, Marker.CYLINDER, DANGER, size, place)
 
 
 def _work(i: int, pose: np.ndarray, decision: Decision) -> Iterator[Marker]:
