@@ -39,8 +39,6 @@ def share_out(
     Returns:
         Robot index to place index.
     """
-    if len(members) == 1:
-        return {int(members[0]): 0}
     apart = points[members][:, None, :2] - places[None, :, :2]
     way = np.nan_to_num(np.linalg.norm(apart, axis=-1))
     for row, robot in enumerate(members):

@@ -16,9 +16,11 @@ def centre_of(at: tuple[float, ...]) -> np.ndarray:
 
 
 def places_of(centre: np.ndarray, scene: Scene, before: Mapping[int, int]) -> dict[int, int]:
-    """Share out the places around a centre among the members of a scene."""
-    if not len(scene.members):
-        return {}
+    """Share out the places around a centre; a group that stays the same keeps its places."""
+    if len(scene.members) < 2:
+        return dict.fromkeys(map(int, scene.members), 0)
+    if before.keys() == set(map(int, scene.members)):
+        return dict(before)
     places = ring(centre, len(scene.members), scene.spacing)
     return share_out(places, scene.members, scene.points, before)
 
