@@ -14,6 +14,7 @@ from scipy.optimize import nnls
 from allocator_node.drives import Aerial, Carlike, Differential, Holonomic
 from allocator_node.model import Model
 from allocator_node.program import ControlProblem, Safety, SafetyRows, solve_control, solvers
+from allocator_node.program import control as control_module
 from allocator_node.program.control import CORNERS, TOO_NEAR
 from allocator_node.settings import Settings
 from allocator_node.team import KeepOut, Robot
@@ -373,3 +374,67 @@ def test_a_false_answer_moves_nobody(monkeypatch):
 def test_without_rows_there_is_nothing_to_solve():
     control = solve_control(replace(face_to_face(apart=1.3), rows=SafetyRows.none()))
     np.testing.assert_array_equal(control.commands, control.free)
+
+
+def nonsense(kind: str):
+    """Give a solver of bad manners."""
+    random = np.random.default_rng(0)
+
+    def solve(qp):
+        match kind:
+            case "no number":
+                return np.full(len(qp.linear), np.nan)
+            case "huge":
+                return np.full(len(qp.linear), 1e12)
+            case "random":
+                return random.normal(size=len(qp.linear))
+            case "too short":
+                return np.zeros(1)
+            case "raises":
+                raise ZeroDivisionError("a bug in a library")
+
+    return solve
+
+
+@pytest.mark.parametrize("kind", ["no number", "huge", "random", "too short", "raises"])
+@pytest.mark.parametrize("seed", range(4))
+def test_a_solver_of_bad_manners_costs_nothing_but_its_time(seed, kind, monkeypatch):
+    """The next one is asked; where there is none, those concerned stand."""
+    problem = scene(seed)
+    expected = solve_control(problem)
+    bad = nonsense(kind)
+    monkeypatch.setattr(solvers, "SOLVERS", (bad, solvers.solve_with_clarabel))
+    np.testing.assert_allclose(solve_control(problem).commands, expected.commands, atol=5e-5)
+    monkeypatch.setattr(solvers, "SOLVERS", (bad,))
+    control = solve_control(problem)
+    np.testing.assert_array_equal(control.stopped, expected.solved)
+    assert not control.commands[control.stopped].any()
+
+
+def test_a_solver_that_exceeds_its_time_is_the_last_one_asked(monkeypatch):
+    asked = []
+
+    def slow(qp):
+        asked.append(qp)
+        clock[0] += 1.0
+        raise solvers.SolverFailure("still thinking")
+
+    clock = [0.0]
+    monkeypatch.setattr(solvers.time, "monotonic", lambda: clock[0])
+    monkeypatch.setattr(solvers, "SOLVERS", (slow, slow, slow))
+    control = solve_control(face_to_face(apart=1.3))
+    assert len(asked) == 1
+    assert control.stopped.all() and not control.commands.any()
+
+
+@pytest.mark.parametrize("value", [np.nan, np.inf, -np.inf, 1.01, -5.0])
+def test_a_command_out_of_limits_is_replaced_by_standing(value, monkeypatch):
+    """Whatever found it, here the closed form; the other robot goes on."""
+    problem = face_to_face(apart=20.0)
+    spoilt = control_module._free(problem)
+    spoilt[0, 1] = value
+    monkeypatch.setattr(control_module, "_free", lambda problem: spoilt.copy())
+    control = solve_control(problem)
+    np.testing.assert_array_equal(control.stopped, [True, False])
+    np.testing.assert_array_equal(control.commands[0], np.zeros(4))
+    assert control.commands[1, 0] < -0.9

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from .pricing import least_effort, steerable
-from .safety import SafetyRows
+from .safety import CALM, SafetyRows
 from .solvers import QP, SolverFailure, solve_qp
 
 TOO_NEAR = 1e3
@@ -58,15 +58,15 @@ class Control:
 
     Attributes:
         commands: v_i, shape (N, 4).
+        stopped: Robots that stand because no solver could vouch for them, shape (N,).
         free: Commands without the safety rows, shape (N, 4).
         solved: Robots whose commands a QP had to find, shape (N,).
-        stopped: Robots that stand because no solver could vouch for them, shape (N,).
     """
 
     commands: np.ndarray
+    stopped: np.ndarray
     free: np.ndarray
     solved: np.ndarray
-    stopped: np.ndarray
 
 
 def solve_control(problem: ControlProblem) -> Control:
@@ -85,7 +85,7 @@ def solve_control(problem: ControlProblem) -> Control:
     solved = np.zeros(count, dtype=bool)
     rows = problem.rows
     if not len(rows):
-        return Control(free, free, solved, solved.copy())
+        return Control(*_vouched(problem, free, solved.copy()), free, solved)
     broken = rows.slackness(_velocities(problem, free)) < -1e-9
     solved = _bound_to(rows, rows.first[broken], count)
     commands, stopped = free.copy(), np.zeros(count, dtype=bool)
@@ -97,12 +97,41 @@ def solve_control(problem: ControlProblem) -> Control:
         except SolverFailure:
             commands[robots] = 0.0
             stopped = solved.copy()
-    kept = rows.slackness(_velocities(problem, commands)) >= -KEPT
-    missed = rows.first[~kept & ~rows.violated]
-    if len(missed):
-        stopped |= _bound_to(rows, missed, count)
+    return Control(*_vouched(problem, commands, stopped), free, solved)
+
+
+def _vouched(
+    problem: ControlProblem, commands: np.ndarray, stopped: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """Check every command, whoever found it, and let robots stand where one does not hold.
+
+    Commands must be finite and within the limits, and keep every row. Where the
+    distance is not kept already, robots must not come nearer faster than
+    :data:`~allocator_node.program.safety.CALM`: between two others it may be that
+    leaving the one means nearing the other.
+
+    Args:
+        problem: The QP.
+        commands: v_i, shape (N, 4).
+        stopped: Robots that stand already, shape (N,).
+
+    Returns:
+        Commands, shape (N, 4), and who stands, shape (N,).
+    """
+    rows, count = problem.rows, len(commands)
+    within = (commands >= problem.lowest - KEPT) & (commands <= problem.highest + KEPT)
+    speed = np.linalg.norm(commands[:, :2], axis=1)
+    good = within.all(axis=1) & (~problem.round_limit | (speed <= problem.limits[:, 0] + KEPT))
+    share = np.divide(commands, problem.limits, np.zeros_like(commands), where=problem.limits > 0)
+    good &= (problem.gear == 0) | (np.abs(share[:, 3]) <= np.abs(share[:, 0]) + KEPT)
+    commands = np.where(good[:, None], commands, 0.0)
+    slackness = rows.slackness(_velocities(problem, commands))
+    kept = np.where(rows.violated, slackness + rows.bound >= -CALM, slackness >= -KEPT)
+    wrong = np.concatenate([np.flatnonzero(~good), rows.first[~kept]])
+    if len(wrong):
+        stopped = stopped | _bound_to(rows, wrong, count)
         commands[stopped] = 0.0
-    return Control(commands, free, solved, stopped)
+    return commands, stopped
 
 
 def _velocities(problem: ControlProblem, commands: np.ndarray) -> np.ndarray:
