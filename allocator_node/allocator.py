@@ -332,6 +332,8 @@ class Allocator:
 
     def _control(self, view: _View, targets: Targets) -> tuple[Course, Control, SafetyRows]:
         model, settings, places = self._model, self._settings, view.places
+        # Robots with their own navigation take goals, no commands.
+        obeys = places.steady & ~model.navigates
         lead = self._ways.lead(view.points, targets.points[:, None], targets.busy[:, None])
         course = self._guidance.course(model, targets, view.poses, view.points, lead, settings)
         course = self._steering.course(
@@ -348,7 +350,7 @@ class Allocator:
         course = make_way(
             course,
             view.points,
-            places.steady & ~targets.busy,
+            obeys & ~targets.busy,
             model.fleet.cruise,
             self._safety.reach + settings.margin / 2,
             settings.height_clearance,
@@ -356,11 +358,12 @@ class Allocator:
         lowest, highest = model.fleet.command_box(
             self._commands, view.dt, view.poses[:, 2], settings.gamma_s, self._steering.gear
         )
-        still = ~places.steady | self.orders.hold
+        still = ~obeys | self.orders.hold
         lowest[still] = highest[still] = 0.0
         silent_for = np.where(places.known & ~places.steady, places.age, 0.0)
+        silent_for[model.navigates & places.steady] = view.dt
         growth = np.minimum(model.fleet.max_speed * silent_for, settings.silent_reach)
-        rows = self._safety.rows(view.points, places.known, places.steady, growth)
+        rows = self._safety.rows(view.points, places.known, obeys, growth)
         control = solve_control(
             ControlProblem(
                 jacobians=view.jacobians,
@@ -387,8 +390,12 @@ class Allocator:
 
     def _remember(self, view: _View, course: Course, control: Control) -> None:
         """Keep what the next step's learning compares its poses with."""
-        self._commands = control.commands
+        self._commands = control.commands.copy()
         implied = np.matmul(view.jacobians, control.commands[:, :, None])[:, :, 0]
+        own = self._model.navigates & view.places.steady & (not self.orders.hold)
+        # Their own navigation is expected to bring them on at their nominal speed.
+        implied[own] = course.to_goal[own] * course.demand[own, None]
+        self._commands[own, 0] = course.demand[own]
         if not self.orders.hold:
             fleet = self._model.fleet
             free = np.matmul(view.jacobians, control.free[:, :, None])[:, :, 0]
@@ -420,6 +427,8 @@ class Allocator:
             since=self._since.copy(),
             commands=control.commands,
             goals=targets.points,
+            facing=targets.facing,
+            navigates=model.navigates,
             poses=view.places.poses,
             heard=view.places.heard,
             able=problem.eligible,

@@ -86,8 +86,11 @@ class Decision:
         tasks: Names of the M tasks.
         assignment: Task index of each robot, −1: none; shape (N,).
         since: When each robot got its present task, s, shape (N,).
-        commands: Body velocities (vx, vy, vz, ω) for each robot, m/s and rad/s, shape (N, 4).
+        commands: Body velocities (vx, vy, vz, ω) for each robot, m/s and rad/s, shape (N, 4);
+            0 for robots that bring their own navigation.
         goals: Goal point of each robot, m, shape (N, 3); NaN without a task.
+        facing: Heading each robot is to take at its goal, rad, shape (N,); NaN: any.
+        navigates: Robots that bring their own navigation, shape (N,).
         poses: Poses carried to ``time``, shape (N, 4).
         heard: Which robots are heard from, shape (N,).
         able: Which robots are eligible for which task, shape (N, M).
@@ -113,6 +116,8 @@ class Decision:
     since: np.ndarray
     commands: np.ndarray
     goals: np.ndarray
+    facing: np.ndarray
+    navigates: np.ndarray
     poses: np.ndarray
     heard: np.ndarray
     able: np.ndarray
@@ -143,3 +148,32 @@ class Decision:
         """Give the sorted names of the robots on a task."""
         return tuple(sorted(self.robots[i] for i in range(len(self.robots))
                             if self.assignment[i] == task))
+
+
+NEAR = 0.3
+"""A goal closer than this, m, gives no direction worth turning to."""
+
+
+def goal_pose(pose: np.ndarray, goal: np.ndarray, facing: float) -> np.ndarray:
+    """Give the pose a robot with its own navigation is sent to, shape (4,).
+
+    Without a goal it is where the robot is; without a heading demanded, it looks the way
+    it came.
+
+    Args:
+        pose: Where it is: x, y, z (m), heading (rad), shape (4,).
+        goal: Goal point, m, shape (3,); NaN x: none, NaN height: any.
+        facing: Heading to take, rad; NaN: any.
+    """
+    target = pose.copy()
+    if np.isnan(goal[0]):
+        return target
+    east, north = goal[:2] - pose[:2]
+    if np.isfinite(facing):
+        target[3] = facing
+    elif np.hypot(east, north) > NEAR:
+        target[3] = np.arctan2(north, east)
+    target[:2] = goal[:2]
+    if not np.isnan(goal[2]):
+        target[2] = goal[2]
+    return target

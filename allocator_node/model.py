@@ -28,7 +28,9 @@ class Model:
         charge: Power that docks put into the batteries, W, shape (N,).
         docks: Docks, m, shape (N, 2); 0 without one.
         has_dock: Which robots have one, shape (N,).
-        fleet: The drives.
+        navigates: Which robots bring their own navigation, shape (N,).
+        fleet: The drives. A robot with its own navigation is led by its axle, and how it
+            turns is its own affair.
         itself: Where a task keeps to that very robot, shape (N, M).
     """
 
@@ -74,7 +76,10 @@ class Model:
         self.charge = np.array([robot.battery.charge_w for robot in robots])
         self.docks = np.array([robot.dock or (0.0, 0.0) for robot in robots]).reshape(-1, 2)
         self.has_dock = np.array([robot.dock is not None for robot in robots])
+        self.navigates = np.array([robot.navigates for robot in robots], dtype=bool)
         self.fleet = Fleet([robot.drive for robot in robots])
+        self.fleet.ahead[self.navigates] = 0.0
+        self.fleet.steered &= ~self.navigates
         targets = [getattr(task.keeps_to, "robot", None) for task in tasks]
         self.itself = np.array(
             [[name == target for target in targets] for name in self.robots], dtype=bool

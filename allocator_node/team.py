@@ -159,6 +159,11 @@ class Robot(Checked):
             if getattr(self, key) is None:
                 object.__setattr__(self, key, value)
 
+    @property
+    def navigates(self) -> bool:
+        """Whether it brings its own navigation: it is sent goals, not velocities."""
+        return self.command.type == "geometry_msgs/msg/PoseStamped"
+
 
 @dataclass(frozen=True)
 class HeadCount(Checked):

@@ -58,6 +58,8 @@ def decision(**changes) -> Decision:
         "since": np.array([10.0, 0.0]),
         "commands": np.zeros((2, 4)),
         "goals": np.array([[5.0, 5.0, np.nan], [np.nan] * 3]),
+        "facing": np.array([np.nan, np.nan]),
+        "navigates": np.array([False, False]),
         "poses": np.array([[1.0, 2.0, 0.0, 0.5], [3.0, 4.0, 0.0, 0.0]]),
         "heard": np.array([True, True]),
         "able": np.ones((2, 2), dtype=bool),

@@ -128,7 +128,8 @@ class Safety:
             points: Control points, m, shape (N, 3); NaN where not known.
             known: Robots that were ever heard, shape (N,).
             heard: Robots heard from now, which obey commands, shape (N,).
-            growth: How far a silent robot may have moved, m, shape (N,).
+            growth: How far a robot that does not may have moved, or may move within the
+                period, m, shape (N,).
         """
         parts = [self._pairs(points, known, heard, growth)]
         if self.edge_index is not None and heard.any():

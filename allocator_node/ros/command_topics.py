@@ -13,9 +13,9 @@ from rclpy.node import Node
 from rclpy.publisher import Publisher
 from std_msgs.msg import Header
 
-from ..decision import Decision
+from ..decision import Decision, goal_pose
 from ..team import Team
-from .conversions import bearing, gap, pose_message, stamp_of, twist_of
+from .conversions import pose_message, stamp_of, twist_of
 from .qos import COMMANDS
 
 COMMAND_TYPES: dict[str, type] = {
@@ -23,9 +23,6 @@ COMMAND_TYPES: dict[str, type] = {
     "geometry_msgs/msg/Twist": Twist,
     "geometry_msgs/msg/PoseStamped": PoseStamped,
 }
-
-NEAR = 0.3
-"""A goal closer than this, m, gives no direction worth turning to."""
 
 DELIVERY = 0.3
 """How long to wait for the last commands to be delivered, s."""
@@ -62,19 +59,22 @@ class CommandTopics:
         goals = decision.goals
         if hold or broken.any():
             goals = np.where((broken | hold)[:, None], np.nan, goals)
-        self._publish(commands, goals, decision.time)
+        self._publish(commands, goals, decision.facing, decision.time)
         return [decision.robots[i] for i in np.flatnonzero(broken)]
 
     def stand(self) -> None:
         """Tell every robot to stand."""
         count = len(self._robots)
         now = self._node.get_clock().now().nanoseconds * 1e-9
-        self._publish(np.zeros((count, 4)), np.full((count, 3), np.nan), now)
+        nowhere = np.full((count, 3), np.nan)
+        self._publish(np.zeros((count, 4)), nowhere, nowhere[:, 0], now)
 
-    def _publish(self, commands: np.ndarray, goals: np.ndarray, now: float) -> None:
+    def _publish(
+        self, commands: np.ndarray, goals: np.ndarray, facing: np.ndarray, now: float
+    ) -> None:
         stamp = stamp_of(now)
         for i, (robot, make) in enumerate(zip(self._robots, self._makers, strict=True)):
-            order = Order(stamp, commands[i], goals[i], self._poses[i])
+            order = Order(stamp, commands[i], goals[i], facing[i], self._poses[i])
             message = make(order, robot, self._frame)
             if message is not None:
                 self._publishers[i].publish(message)
@@ -117,11 +117,20 @@ def other_publishers(node: Node, team: Team, own: int) -> list[str]:
 
 @dataclass(frozen=True)
 class Order:
-    """What one robot is told: body velocity (4,), goal (3,) (NaN: stand), where it is (4,)."""
+    """What one robot is told.
+
+    Attributes:
+        stamp: When.
+        command: Body velocity, shape (4,).
+        goal: Goal point, m, shape (3,); NaN: stand.
+        facing: Heading to take there, rad; NaN: any.
+        pose: Where it is, shape (4,).
+    """
 
     stamp: Time
     command: np.ndarray
     goal: np.ndarray
+    facing: float
     pose: np.ndarray
 
 
@@ -136,15 +145,9 @@ def _twist(order: Order, robot: str, frame: str) -> Twist:
 
 def _goal(order: Order, robot: str, frame: str) -> PoseStamped | None:
     """Give the goal; a robot with its own navigation stands by being sent to where it is."""
-    target = order.pose.copy()
-    if np.isnan(target).any():
+    if np.isnan(order.pose).any():
         return None
-    if not np.isnan(order.goal[0]):
-        if gap(target, order.goal) > NEAR:
-            target[3] = bearing(target, order.goal)
-        target[:2] = order.goal[:2]
-        if not np.isnan(order.goal[2]):
-            target[2] = order.goal[2]
+    target = goal_pose(order.pose, order.goal, order.facing)
     return PoseStamped(
         header=Header(stamp=order.stamp, frame_id=frame), pose=pose_message(target)
     )

@@ -93,6 +93,12 @@ class Loop:
         self._decision: Decision | None = None
         self._trace = ""
         self._last = -np.inf
+        for robot in team.robots.values():
+            if robot.navigates:
+                self._log.warning(
+                    f"{robot.name} drives by its own navigation: it is sent goals, and keeping "
+                    "clear of others and of areas is left to it"
+                )
         self._due = {"report": 0.0, "markers": 0.0, "save": 0.0}
         self._recall()
 

@@ -130,6 +130,7 @@ def robot_status(i: int, decision: Decision) -> DiagnosticStatus:
                 f"specialization.{name}": float(specialization[m])
                 for m, name in enumerate(decision.tasks)
             },
+            **({"safety": "left to its own navigation"} if decision.navigates[i] else {}),
             "energy": float(decision.charge[i]),
             "energy_source": "estimated" if decision.charge_estimated[i] else "measured",
         },

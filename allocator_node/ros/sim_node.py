@@ -28,14 +28,12 @@ from rclpy.signals import SignalHandlerOptions
 from sensor_msgs.msg import BatteryState
 from std_msgs.msg import Header
 
-from ..drives import Drive
+from ..sim.navigation import steer
 from ..sim.world import SimulatedTeam
 from ..sim.world_file import TaskEvent, World
 from ..team import Robot, Team
 from .command_topics import COMMAND_TYPES
 from .conversions import (
-    bearing,
-    gap,
     pose_message,
     pose_of,
     seen_from,
@@ -43,7 +41,6 @@ from .conversions import (
     turned,
     twist_of,
     velocity_of,
-    wrapped,
 )
 from .ending import LISTEN, Ending
 from .poses import POSE_TYPES
@@ -57,9 +54,6 @@ OBEY = 0.5
 
 HEALTH_EVERY, BATTERY_EVERY = 0.5, 1.0
 """Periods of diagnostics and batteries, s; changed diagnostics come at once."""
-
-GOAL_GAIN, GOAL_NEAR, AIM = 1.0, 0.1, 0.5
-"""A robot's own navigation: gain, 1/s; standing distance, m; aim before driving, rad."""
 
 
 class SimNode(Node):
@@ -225,23 +219,6 @@ class Obedience:
     def command(self, now: float, pose: np.ndarray) -> np.ndarray:
         """Give the body velocity (4,) to drive with now; zero when commands stopped."""
         return self._command(pose) if now - self._heard <= OBEY else _stand(pose)
-
-
-def steer(drive: Drive, pose: np.ndarray, goal: np.ndarray) -> np.ndarray:
-    """Give the body velocity (4,) of a simple navigation from a pose to a goal, both (4,)."""
-    limits = drive.limits()
-    away = gap(pose, goal)
-    if away <= GOAL_NEAR:
-        turn = GOAL_GAIN * wrapped(goal[3] - pose[3])
-        command = np.array([0.0, 0.0, GOAL_GAIN * (goal[2] - pose[2]), turn])
-    else:
-        aim = wrapped(bearing(pose, goal) - pose[3])
-        speed = min(GOAL_GAIN * away, drive.cruise)
-        sideways = limits[1] > 0
-        ahead = speed * np.cos(aim) if sideways or abs(aim) < AIM else 0.0
-        aside = speed * np.sin(aim) if sideways else 0.0
-        command = np.array([ahead, aside, GOAL_GAIN * (goal[2] - pose[2]), 2 * GOAL_GAIN * aim])
-    return np.clip(command, -limits, limits)
 
 
 def pose_report(

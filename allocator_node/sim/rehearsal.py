@@ -7,10 +7,14 @@ from collections.abc import Callable
 from dataclasses import replace
 from time import perf_counter
 
+import numpy as np
+
 from ..allocator import Allocator
+from ..decision import Decision, goal_pose
 from ..program import Assigner
 from ..settings import Settings
 from ..team import Team
+from .navigation import steer
 from .record import Recorder, Rehearsal
 from .site import Site
 from .world import SimulatedTeam, moved_goal
@@ -66,12 +70,22 @@ def rehearse(
         recorder.trace(simulated)
         events = ()
         for _ in range(substeps):
-            simulated.step(decision.commands, period / substeps)
+            simulated.step(driven(team, decision, simulated.true_poses), period / substeps)
             recorder.moved(simulated)
             events += simulated.task_events
         if on_progress is not None:
             on_progress(simulated.now)
     return recorder.result(simulated)
+
+
+def driven(team: Team, decision: Decision, poses: np.ndarray) -> np.ndarray:
+    """Give what robots at poses (N, 4) do: as commanded, or as their own navigation goes."""
+    commands = decision.commands.copy()
+    for i, robot in enumerate(team.robots.values()):
+        if robot.navigates and decision.heard[i]:
+            goal = goal_pose(poses[i], decision.goals[i], decision.facing[i])
+            commands[i] = steer(robot.drive, poses[i], goal)
+    return commands
 
 
 def edited(team: Team, events: tuple[TaskEvent, ...]) -> Team:

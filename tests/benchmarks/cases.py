@@ -153,6 +153,7 @@ def crowd(robots: int, room: float, seed: int = 0) -> ControlProblem:
         limits=fleet.limits,
         lowest=-fleet.limits,
         highest=fleet.limits,
+        gear=np.zeros(robots, dtype=int),
         round_limit=fleet.round_limit,
         gear=np.zeros(robots),
         away=away / np.linalg.norm(away, axis=1, keepdims=True),
