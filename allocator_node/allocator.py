@@ -361,9 +361,9 @@ class Allocator:
         still = ~obeys | self.orders.hold
         lowest[still] = highest[still] = 0.0
         silent_for = np.where(places.known & ~places.steady, places.age, 0.0)
-        silent_for[model.navigates & places.steady] = view.dt
         growth = np.minimum(model.fleet.max_speed * silent_for, settings.silent_reach)
-        rows = self._safety.rows(view.points, places.known, obeys, growth)
+        drift = np.where(model.navigates[:, None], places.velocities[:, :2], 0.0)
+        rows = self._safety.rows(view.points, places.known, obeys, growth, drift)
         control = solve_control(
             ControlProblem(
                 jacobians=view.jacobians,

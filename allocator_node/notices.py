@@ -59,7 +59,8 @@ def notices(
     for i in np.flatnonzero(control.stopped):
         yield Notice(names[i], Level.ERROR, "stopped: no safe command could be found")
     seen = set()
-    for i, other in zip(rows.first[rows.violated], rows.obstacle[rows.violated], strict=True):
+    near = rows.violated & (rows.room < 0)
+    for i, other in zip(rows.first[near], rows.obstacle[near], strict=True):
         if (i, other) in seen or (other >= 0 and not places.steady[other]):
             continue
         seen.add((i, other))

@@ -172,6 +172,11 @@ class Guidance:
 
         away = -_turned(to_goal, -self.aside)
         preferred = self._turning(model, targets, poses)
+        low, high = fleet.height_band.T
+        out = np.clip(poses[:, 2], low, high) - poses[:, 2]
+        # Who stands lower or higher than it may fly goes on to its band.
+        climb = np.clip(settings.gamma * out, -fleet.limits[:, 2], fleet.limits[:, 2])
+        preferred[:, 2] = np.where(targets.busy & fleet.flies, climb, 0.0)
         if exact.any():
             preferred[exact] = _commands(
                 fleet.jacobians(poses)[exact],

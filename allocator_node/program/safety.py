@@ -25,7 +25,8 @@ class SafetyRows:
         second: Robot index or −1 (a wall or a robot that takes no commands), shape (R,).
         normal: Unit vectors pointing away from the obstacle, shape (R, 2).
         bound: Right-hand sides, m/s, shape (R,).
-        violated: Where the distance asked for is not kept already, shape (R,).
+        violated: Where the distance asked for is not kept already, or would not be by
+            standing still, as the obstacle comes nearer by itself, shape (R,).
         room: Distance left before the margin is touched, m, shape (R,).
         obstacle: What the row keeps away from: a robot index, or −1 for an area.
     """
@@ -58,10 +59,15 @@ class SafetyRows:
         bound: np.ndarray,
         room: np.ndarray,
         obstacle: np.ndarray,
+        approach: np.ndarray | float = 0.0,
     ) -> SafetyRows:
-        """Give rows; violated ones ask for a calm way out."""
-        violated = room < 0
-        return cls(first, second, normal, np.minimum(bound, CALM), violated, room, obstacle)
+        """Give rows; violated ones ask for a calm way out, away from obstacles that come.
+
+        Args:
+            approach: How fast the obstacle comes along the normal, m/s, shape (R,).
+        """
+        bound = np.minimum(bound, CALM) + approach
+        return cls(first, second, normal, bound, (room < 0) | (bound > 0), room, obstacle)
 
     @classmethod
     def joined(cls, parts: list[SafetyRows]) -> SafetyRows:
@@ -120,7 +126,12 @@ class Safety:
             shapely.prepare(self.boundary)
 
     def rows(
-        self, points: np.ndarray, known: np.ndarray, heard: np.ndarray, growth: np.ndarray
+        self,
+        points: np.ndarray,
+        known: np.ndarray,
+        heard: np.ndarray,
+        growth: np.ndarray,
+        drift: np.ndarray | None = None,
     ) -> SafetyRows:
         """Give the rows of this period.
 
@@ -128,16 +139,23 @@ class Safety:
             points: Control points, m, shape (N, 3); NaN where not known.
             known: Robots that were ever heard, shape (N,).
             heard: Robots heard from now, which obey commands, shape (N,).
-            growth: How far a robot that does not may have moved, or may move within the
-                period, m, shape (N,).
+            growth: How far a silent robot may have moved, m, shape (N,).
+            drift: Velocities of robots that go their own way, m/s, shape (N, 2); 0 for
+                all others. Default 0.
         """
-        parts = [self._pairs(points, known, heard, growth)]
+        drift = np.zeros((len(points), 2)) if drift is None else drift
+        parts = [self._pairs(points, known, heard, growth, drift)]
         if self.edge_index is not None and heard.any():
             parts.append(self._areas(points, np.flatnonzero(heard)))
         return SafetyRows.joined(parts)
 
     def _pairs(
-        self, points: np.ndarray, known: np.ndarray, heard: np.ndarray, growth: np.ndarray
+        self,
+        points: np.ndarray,
+        known: np.ndarray,
+        heard: np.ndarray,
+        growth: np.ndarray,
+        drift: np.ndarray,
     ) -> SafetyRows:
         robots = np.flatnonzero(known)
         if len(robots) < 2:
@@ -180,6 +198,7 @@ class Safety:
                         np.where(both, alone, bound)[obeys],
                         room[obeys],
                         other[obeys],
+                        np.maximum((sign * normal * drift[other]).sum(axis=1), 0.0)[obeys],
                     )
                     for me, other, obeys, sign in ((i, j, heard[i], 1), (j, i, heard[j], -1))
                 ),
