@@ -159,7 +159,7 @@ class Allocator:
         situation = self._situation(view, enough, prices)
         before, self._assignment = self._assignment, found.task
         reallocations = self._reasons.explain(
-            situation, before, found.task, problem.swap_cost, now
+            situation, before, found.task, problem.swap_cost, now, not self.assigner.searching
         )
         self._take_up(before, view, goals)
         errands = self._charge(view, enough)

@@ -14,6 +14,9 @@ from .tasks import Task
 NOTICEABLE = 0.05
 """Change of efficacy or suitability that can be a reason."""
 
+PENDING = 5.0
+"""Longest time for which an event explains what a search changes later, s."""
+
 DEARER = 1.1
 """Factor by which energy must have become dearer to be a reason."""
 
@@ -100,9 +103,10 @@ class _Reason:
 class Reasons:
     """Explains changes.
 
-    What happened since the last decision is looked at first: a failure, a return,
-    an order. If nothing did, the reason crept in, and is found against the situation
-    in which the robots and tasks concerned were last decided.
+    What happened since the last settled decision is looked at first: a failure, a
+    return, an order. While a search goes on, an event may show only in a later period.
+    If nothing happened, the reason crept in, and is found against the situation in
+    which the robots and tasks concerned were last decided.
     """
 
     def __init__(self, model: Model, say_feature: Callable[[int, int], str]) -> None:
@@ -116,6 +120,8 @@ class Reasons:
         self.say_feature = say_feature
         self.last: Situation | None = None
         self.chosen: Situation | None = None
+        self.stood = np.full(0, -1)
+        self.settled_at = -np.inf
 
     def retable(self, model: Model, kept: np.ndarray) -> None:
         """Go on with another task table.
@@ -129,6 +135,9 @@ class Reasons:
             tasks = tuple(model.team.tasks.values())
             self.chosen = self.chosen.retabled(kept, tasks)
             self.last = self.last.retabled(kept, tasks)
+            new_index = np.full(max(kept.max(initial=-1), self.stood.max(initial=-1)) + 2, -1)
+            new_index[kept[kept >= 0]] = np.flatnonzero(kept >= 0)
+            self.stood = new_index[self.stood]
 
     def explain(
         self,
@@ -137,6 +146,7 @@ class Reasons:
         after: np.ndarray,
         swap_cost: np.ndarray,
         time: float,
+        settled: bool = True,
     ) -> tuple[Reallocation, ...]:
         """Give one reallocation for each task whose group changed.
 
@@ -145,8 +155,10 @@ class Reasons:
             before, after: Task of each robot, −1: none, shape (N,).
             swap_cost: ρ, Wh, shape (N,).
             time: s.
+            settled: Whether no search goes on that may still change the assignment.
         """
         if self.chosen is None or self.last is None:
+            self.stood = before
             self.last = self.chosen = replace(
                 now,
                 known=np.zeros_like(now.known),
@@ -169,9 +181,11 @@ class Reasons:
                 reason, task = own.get(m) or shared, self.model.tasks[m]
                 changes.append(Reallocation(time, task, *groups, reason.cause, reason.detail))
             decided = decided.updated(now, robots, tasks)
-        # Robots without a task are decided upon anew in every period.
-        decided = decided.updated(now, np.flatnonzero(after < 0), ())
-        self.chosen, self.last = decided, now
+        if settled or time - self.settled_at > PENDING:
+            # Robots without a task are decided upon anew in every settled period.
+            decided = decided.updated(now, np.flatnonzero(after < 0), ())
+            self.last, self.stood, self.settled_at = now, after, time
+        self.chosen = decided
         return tuple(changes)
 
     def _find(
@@ -195,7 +209,7 @@ class Reasons:
         self, m: int, then: Situation, now: Situation, before: np.ndarray, after: np.ndarray
     ) -> _Reason | None:
         """Find a reason in the task itself or in the robots of its group."""
-        left = np.flatnonzero((before == m) & (after != m))
+        left = np.flatnonzero(((before == m) | (self.stood == m)) & (after != m))
         joined = np.flatnonzero((after == m) & (before != m))
         stayed = np.flatnonzero((after == m) & (before == m))
         reasons = [

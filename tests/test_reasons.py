@@ -1,6 +1,7 @@
 """Every cause in the smallest situation that has it, and the sentence that goes with it."""
 
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -8,9 +9,15 @@ from builders import ERROR, OK, Crew, doing, robot, team_of, watch
 
 from allocator_node.decision import Cause
 from allocator_node.observation import MovedGoal
+from allocator_node.program import Assigner
 from allocator_node.settings import Settings
+from allocator_node.sim.rehearsal import rehearse
+from allocator_node.sim.world_file import read_world
 from allocator_node.tasks import Visit
 from allocator_node.team import Battery, HeadCount
+from allocator_node.team_file import read_team
+
+CONFIG = Path(__file__).parents[1] / "config"
 
 
 def pair(**settings) -> Crew:
@@ -328,3 +335,29 @@ def test_groups_are_sorted():
     crew = Crew(team_of(robots, [watch("gate", 9, 0, count=3)]))
     crew.step()
     assert only(crew).after == ("a", "b", "c")
+
+
+class Late(Assigner):
+    """Searches beside the loop, and has found whatever it looks for one period later."""
+
+    def __init__(self) -> None:
+        super().__init__(budget=0.0)
+
+    def assign(self, *problem):
+        """Wait for the search that the last period began."""
+        self.wait()
+        return super().assign(*problem)
+
+
+def test_a_search_that_takes_longer_than_a_period_loses_no_reason():
+    """The demo's mishaps: the same causes whether the assignment is found at once or later."""
+    team = read_team(CONFIG / "solar_farm.yaml")
+    world = read_world(CONFIG / "solar_farm_world.yaml", team)
+    at_once, later = (
+        rehearse(team, world, seconds=150.0, assigner=assigner) for assigner in (None, Late())
+    )
+    causes = [{(e["task"], e["cause"]) for e in run.events} for run in (at_once, later)]
+    assert causes[0] == causes[1]
+    assert {cause for _, cause in causes[0]} == {
+        "start", "efficacy", "task", "feature", "silent", "returned", "energy"
+    }  # fmt: skip

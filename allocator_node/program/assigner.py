@@ -83,6 +83,11 @@ class Assigner:
         self._thread: ThreadPoolExecutor | None = None
         self._closing = threading.Event()
 
+    @property
+    def searching(self) -> bool:
+        """Whether a search is under way that may still change the assignment."""
+        return self._search is not None
+
     def close(self) -> None:
         """End the thread, if there is one, and the search under way in it."""
         if self._thread is not None:
