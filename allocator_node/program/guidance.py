@@ -160,14 +160,17 @@ class Guidance:
 
         closing = targets.pace * np.minimum(settings.gamma * distance, fleet.cruise)
         demand = closing + (to_goal * targets.velocities).sum(axis=1)
-        demand = np.where(targets.busy & ~self.standing, np.maximum(demand, 0.0), 0.0)
+        # What no command can reach must not look as if somebody stood in the way.
+        demand = np.clip(demand, 0.0, fleet.max_speed)
+        demand[~targets.busy | self.standing] = 0.0
 
         exact = self.standing & (np.linalg.norm(targets.velocities, axis=1) > MOVING)
         if exact.any():
             wanted = targets.velocities[exact] + settings.gamma * offset[exact]
             wanted[:, 2] *= fleet.flies[exact]
-            demand[exact] = np.linalg.norm(wanted, axis=1)
-            to_goal[exact] = wanted / np.maximum(demand[exact], 1e-9)[:, None]
+            speed = np.linalg.norm(wanted, axis=1)
+            to_goal[exact] = wanted / np.maximum(speed, 1e-9)[:, None]
+            demand[exact] = np.minimum(speed, fleet.max_speed[exact])
             to_corner[exact] = HORIZON * demand[exact]
 
         away = -_turned(to_goal, -self.aside)

@@ -124,7 +124,8 @@ class Sweep(Task):
     def progress(self, state: Swept) -> float:
         """Give the share of the lanes' length that is done."""
         left = sum(high - low for low, high in state.left)
-        return 1.0 - left / float((self.lanes.length + 2 * NEAR).sum())
+        whole = float((self.lanes.length + 2 * NEAR).sum())
+        return min(max(1.0 - left / whole, 0.0), 1.0)
 
     def advance(self, state: Swept, scene: Scene) -> Swept:
         """Take off what was swept since, and give whoever is free the next lane."""
