@@ -361,14 +361,30 @@ BAD_TEAMS = [
 
 
 BAD_WORLDS = [
+    ("ground:\n", "faults: {feature_mtbf_h: 0}\nground:\n",
+     "2: faults.feature_mtbf_h: found 0; must be greater than 0"),
+    ("ground:\n", "faults: {feature_mtbf: 2}\nground:\n",
+     "2: faults.feature_mtbf: found an unknown key; must be one of feature_mtbf_h, feature_mttr_h, "
+     "features, robot_mtbf_h, robot_mttr_h, stall_mtbf_h, stall_mttr_h (did you mean "
+     "feature_mtbf_h?)"),
+    ("ground:\n", "faults: {robot_mttr_h: 2}\nground:\n",
+     "2: faults.robot_mttr_h: found a time to repair what never fails; must come with "
+     "robot_mtbf_h"),
+    ("ground:\n", "faults: {feature_mtbf_h: 2, features: [camra]}\nground:\n",
+     '2: faults.features[0]: found the text "camra"; must be one of camera, gimbal (did you mean '
+     "camera?)"),
+    ("ground:\n", "faults: {robot_mtbf_h: 2, features: [camera]}\nground:\n",
+     "2: faults.features: found features that never fail; must come with feature_mtbf_h"),
+    ("ground:\n", "faults: [2]\nground:\n",
+     "2: faults: found a list with 1 entry; must be a mapping (key: value)"),
     ("position_m: 0.02", "position_m: -1",
      "1: noise.position_m: found -1; must be at least 0"),
     ("position_m: 0.02", "position: 0.02",
      "1: noise.position: found an unknown key; must be one of heading_rad, position_m (did you "
      "mean position_m?)"),
     ("ground:\n", "grounds:\n",
-     "2: grounds: found an unknown key; must be one of events, ground, noise, targets (did you mean "
-     "ground?)"),
+     "2: grounds: found an unknown key; must be one of events, faults, ground, noise, targets "
+     "(did you mean ground?)"),
     ("circle: [55, 41, 6]", "circle: [55, 41]",
      "3: ground[0].circle: found a list with 2 entries; must have 3 entries"),
     ("circle: [55, 41, 6]", "circle: [55, 41, 0]",

@@ -8,10 +8,14 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from ..files.document import FileError
+from ..sim.faults import with_faults
 from ..sim.world_file import World, read_world
 from ..team_file import read_team
 from .allocator import split
 from .team_rehearse import positive
+
+FAULTS_FOR = 24 * 3600.0
+"""Random faults are drawn for so long, s of simulated time."""
 
 
 def parser() -> argparse.ArgumentParser:
@@ -58,6 +62,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
             return 2
     from ..ros.sim_node import run
 
+    world = with_faults(world, team, FAULTS_FOR, asked.seed)
     return run(team, world, asked.seed, asked.speed, asked.allocator, ros)
 
 

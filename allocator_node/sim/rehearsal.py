@@ -14,6 +14,7 @@ from ..decision import Decision, goal_pose
 from ..program import Assigner
 from ..settings import Settings
 from ..team import Team
+from .faults import with_faults
 from .navigation import steer
 from .record import Recorder, Rehearsal
 from .site import Site
@@ -38,9 +39,9 @@ def rehearse(
 
     Args:
         team: The team.
-        world: Noise, ground and events; None: good ground and no events.
+        world: Noise, ground, events and faults; None: good ground and nothing happens.
         seconds: How long, s of simulated time.
-        seed: Seed of the pose noise.
+        seed: Seed of the pose noise and of the faults.
         settings: Weights and times; default as in :class:`Settings`.
         period: Time between two decisions, s.
         on_progress: Called with the simulated time, s, after every period.
@@ -53,6 +54,7 @@ def rehearse(
     allocator = Allocator(team, settings=settings, period=period)
     if assigner is not None:
         allocator.assigner = assigner
+    world = with_faults(world or World(), team, seconds, seed)
     simulated = SimulatedTeam(team, world, seed)
     recorder = Recorder(team, Site(team, settings.height_clearance))
     substeps = math.ceil(period / SUBSTEP - 1e-9)

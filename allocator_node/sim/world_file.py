@@ -133,6 +133,32 @@ class MovingTarget(Checked):
 
 
 @dataclass(frozen=True)
+class Faults(Checked):
+    """How often things fail at random, and how soon they are well again.
+
+    Times between failures and times to repair are exponential; what is left out never
+    happens, and without a time to repair a failure lasts.
+
+    Attributes:
+        feature_mtbf_h: Mean time a feature works until its diagnostics say ERROR, h.
+        feature_mttr_h: Mean time until it works again, h.
+        features: Features that fail so; empty: all.
+        robot_mtbf_h: Mean time a robot is heard until it falls silent, h.
+        robot_mttr_h: Mean time until it is heard again, h.
+        stall_mtbf_h: Mean time a robot can drive until it cannot, h.
+        stall_mttr_h: Mean time until it can again, h.
+    """
+
+    feature_mtbf_h: Positive | None = None
+    feature_mttr_h: Positive | None = None
+    features: tuple[Name, ...] = ()
+    robot_mtbf_h: Positive | None = None
+    robot_mttr_h: Positive | None = None
+    stall_mtbf_h: Positive | None = None
+    stall_mttr_h: Positive | None = None
+
+
+@dataclass(frozen=True)
 class World(Checked):
     """What a simulated team meets; by default nothing.
 
@@ -140,12 +166,14 @@ class World(Checked):
         noise: Noise of the reported poses.
         ground: Patches of bad ground.
         targets: What moves on the pose topics that tasks keep to.
+        faults: What fails at random; None: nothing does.
         events: What happens, in the order of time.
     """
 
     noise: Noise = field(default_factory=Noise)
     ground: tuple[GroundPatch, ...] = ()
     targets: tuple[MovingTarget, ...] = ()
+    faults: Faults | None = None
     events: tuple[Event, ...] = ()
 
 
@@ -169,6 +197,7 @@ def _world(document: Document, team: Team) -> World:
     draft = read_fields(document, (), document.value, World, elsewhere=("events",))
     _check_ground(document, draft.get("ground") or (), team)
     _check_targets(document, draft.get("targets") or (), team)
+    _check_faults(document, draft.get("faults"), team)
     events = []
     if isinstance(document.value, Mapping):
         listed = document.value.get("events")
@@ -197,6 +226,25 @@ def _check_ground(document: Document, ground: tuple[GroundPatch, ...], team: Tea
             if feature not in features:
                 where = (*place, "affects", entry)
                 document.refuse(where, described(feature), one_of(features, feature))
+
+
+def _check_faults(document: Document, faults: Faults | None, team: Team) -> None:
+    if faults is None:
+        return
+    features = {feature for robot in team.robots.values() for feature in robot.features}
+    check_distinct(document, ("faults", "features"), faults.features)
+    for index, feature in enumerate(faults.features):
+        if feature not in features:
+            where = ("faults", "features", index)
+            document.refuse(where, described(feature), one_of(features, feature))
+    for what in ("feature", "robot", "stall"):
+        often, repair = f"{what}_mtbf_h", f"{what}_mttr_h"
+        if getattr(faults, repair) is not None and getattr(faults, often) is None:
+            found = "a time to repair what never fails"
+            document.refuse(("faults", repair), found, f"must come with {often}")
+    if faults.features and faults.feature_mtbf_h is None:
+        found = "features that never fail"
+        document.refuse(("faults", "features"), found, "must come with feature_mtbf_h")
 
 
 def _check_targets(
