@@ -178,6 +178,8 @@ class Allocator:
             # The clock jumped or the loop was paused: nothing is learned from the gap.
             dt, self._last = self.period, None
             self._features.forget_times(now)
+        if self._now is not None and now < self._now:
+            self._poses.forget_times()
         self._now = now
         for moved in observation.goals:
             self._move(moved)
@@ -506,7 +508,15 @@ class Allocator:
 
     def memory(self) -> dict[str, Any]:
         """Give what should survive a restart, as plain JSON-able data."""
-        return remember(self._model, self._efficacy, self._work.finished(), self._assignment)
+        return remember(
+            self._model,
+            self._efficacy,
+            self._work.finished(),
+            self._assignment,
+            self._features.troubles(self._now or 0.0, self._settings),
+            self._energy.charge,
+            self._charging.on,
+        )
 
     def recall(self, data: Mapping[str, Any]) -> None:
         """Take up what an earlier run left; names that no longer exist are passed over.
@@ -525,6 +535,14 @@ class Allocator:
         for robot, task in memory.assignment.items():
             if robot in robot_of and task in task_of:
                 self._assignment[robot_of[robot]] = task_of[task]
+        for name, (level, text) in memory.troubles.items():
+            self._features.recall(name, level, text)
+        for robot, charge in memory.charges.items():
+            if robot in robot_of:
+                self._energy.recall(robot_of[robot], charge)
+        for robot in memory.charging:
+            if robot in robot_of:
+                self._charging.on[robot_of[robot]] = True
 
 
 @contextmanager

@@ -1,4 +1,8 @@
-"""What survives a restart: efficacies, finished tasks, the assignment; plain JSON-able data."""
+"""What survives a restart: what was learned, done, heard and decided; plain JSON-able data.
+
+With the assignment goes what it rests on, failed features and charges: without them
+the first decisions after a restart would be made as if all were well.
+"""
 
 from __future__ import annotations
 
@@ -20,11 +24,17 @@ class Memory:
         learned: (robot, task, efficacy, failed tries, waiting for the next try).
         finished: Names of tasks that have come to their end.
         assignment: Robot to task.
+        troubles: Diagnostic status that was not OK to its level and text.
+        charges: Robot to charge, 0..1.
+        charging: Robots that were charging or on their way to it.
     """
 
     learned: tuple[tuple[str, str, float, int, bool], ...]
     finished: tuple[str, ...]
     assignment: Mapping[str, str]
+    troubles: Mapping[str, tuple[int, str]]
+    charges: Mapping[str, float]
+    charging: tuple[str, ...]
 
     @classmethod
     def read(cls, data: Mapping[str, Any]) -> Memory:
@@ -46,17 +56,29 @@ class Memory:
             )
             finished = tuple(str(name) for name in data["finished"])
             assignment = {str(robot): str(task) for robot, task in data["assignment"].items()}
-        except (KeyError, TypeError, ValueError, AttributeError) as error:
+            troubles = {
+                str(name): (int(level), str(text))
+                for name, (level, text) in data.get("troubles", {}).items()
+            }
+            charges = {str(k): float(charge) for k, charge in data.get("charges", {}).items()}
+            charging = tuple(str(name) for name in data.get("charging", ()))
+        except (LookupError, TypeError, ValueError, AttributeError, OverflowError) as error:
             raise ValueError(f"not an allocator's memory: {error!r}") from error
-        if not all(0 <= value <= 1 for _, _, value, _, _ in learned):
-            raise ValueError("not an allocator's memory: an efficacy is not between 0 and 1")
-        return cls(learned, finished, assignment)
+        if not all(0 <= value <= 1 for value in (*(row[2] for row in learned), *charges.values())):
+            raise ValueError("not an allocator's memory: an efficacy or charge is not within 0..1")
+        return cls(learned, finished, assignment, troubles, charges, charging)
 
 
 def remember(
-    model: Model, efficacy: EfficacyBelief, finished: frozenset[str], assignment: np.ndarray
+    model: Model,
+    efficacy: EfficacyBelief,
+    finished: frozenset[str],
+    assignment: np.ndarray,
+    troubles: Mapping[str, tuple[int, str]],
+    charge: np.ndarray,
+    charging: np.ndarray,
 ) -> dict[str, Any]:
-    """Give what should survive a restart; assignment (N,)."""
+    """Give what should survive a restart; assignment, charge and charging are (N,)."""
     robots, tasks = np.nonzero((efficacy.eta < 0.999) | (efficacy.failures > 0))
     return {
         "efficacy": [
@@ -73,4 +95,10 @@ def remember(
         "assignment": {
             model.robots[i]: model.tasks[m] for i, m in enumerate(assignment) if m >= 0
         },
+        "troubles": {name: list(status) for name, status in sorted(troubles.items())},
+        "charges": {
+            name: round(float(share), 4)
+            for name, share in zip(model.robots, charge, strict=True)
+        },
+        "charging": [model.robots[i] for i in np.flatnonzero(charging)],
     }

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -66,6 +66,15 @@ class Observation:
     goals: tuple[MovedGoal, ...] = ()
     quality: Mapping[tuple[str, str], float] = field(default_factory=dict)
     targets: Mapping[str, TargetPose] = field(default_factory=dict)
+
+    def since(self, earlier: Observation) -> Observation:
+        """Give this observation with the news of an earlier one that nobody looked at."""
+        return replace(
+            self,
+            health=earlier.health + self.health,
+            goals=earlier.goals + self.goals,
+            quality=dict(earlier.quality) | dict(self.quality),
+        )
 
     @classmethod
     def nothing(cls, count: int) -> Observation:

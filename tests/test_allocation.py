@@ -382,6 +382,26 @@ def test_what_was_learned_and_done_survives_a_restart():
     assert again.log == [], "what goes on is no change"
 
 
+def test_a_restart_does_not_take_broken_or_empty_robots_for_good_ones():
+    """Diagnostics and charges come again only after a while; until then the last ones hold."""
+    near = Battery(capacity_wh=500)
+    robots = [robot("broken", 20, 0), robot("empty", 20, 5, battery=near), robot("far")]
+    crew = Crew(team_of(robots, [watch("gate", 30, 0, needs={"scan": 1.0})]))
+    crew.says("broken: camera", ERROR, "no picture")
+    crew.charges = np.array([0.9, 0.1, 0.9])
+    assert groups(crew.step())["gate"] == ("far",)
+    again = Crew(crew.allocator.team)
+    again.allocator.recall(json.loads(json.dumps(crew.allocator.memory())))
+    again.order(driving=False)
+    assert groups(again.wait(20.0))["gate"] == ("far",)
+    assert again.log == []
+    again.says("broken: camera", OK)
+    again.charges[:] = 0.9
+    again.wait(1.0)
+    again.says("broken: camera", OK)
+    assert groups(again.wait(1.0))["gate"] == ("broken",)
+
+
 def test_a_memory_of_another_team_is_passed_over():
     crew = Crew(team_of([robot("one")], [watch("gate", 3, 0)]))
     learned = {"robot": "stranger", "task": "gate", "value": 0.1, "failures": 1, "barred": True}

@@ -20,7 +20,7 @@ from sensor_msgs.msg import BatteryState  # noqa: E402
 from std_msgs.msg import Float32  # noqa: E402
 
 from allocator_node.ros import polling  # noqa: E402
-from allocator_node.ros.clockwork import StampReader, arrival_time  # noqa: E402
+from allocator_node.ros.clockwork import ClockWatch, StampReader, arrival_time  # noqa: E402
 from allocator_node.ros.complaints import Complaints  # noqa: E402
 from allocator_node.ros.inbox import Inbox  # noqa: E402
 from allocator_node.ros.poses import PoseTransform  # noqa: E402
@@ -254,6 +254,28 @@ def test_stamps_alone() -> None:
     assert reader.time_of(100.2, 100.0, 20.0)[0] == 100.0  # a restarted clock
     reader.forget()
     assert reader.time_of(50.0, 49.9, 49.8) == (49.8, "")
+
+
+def test_a_clock_that_was_set_is_noticed(monkeypatch) -> None:
+    """Back at once; ahead only where less time went by, and not where time runs fast."""
+    real = [50.0]
+    monkeypatch.setattr("time.monotonic", lambda: real[0])
+    watch = ClockWatch()
+
+    def look(now: float, later: float = 0.1) -> float:
+        real[0] += later
+        return watch.look(now)
+
+    assert look(1000.0) == 0.0
+    assert look(1000.1) == 0.0
+    assert look(999.9) == pytest.approx(-0.2)
+    assert look(1000.0) == 0.0
+    assert look(1300.0) == 300.0
+    assert look(1300.1) == 0.0
+    assert look(1310.0, later=9.9) == 0.0  # the machine slept, or the loop was stopped
+    assert look(1315.0) == 5.0  # a simulation that runs fast: once,
+    assert [look(1315.0 + 5 * k) for k in range(1, 9)] == [0.0] * 8  # then it is believed
+    assert look(20.0) == pytest.approx(-1335.0)
 
 
 def test_arrival_lies_between_two_looks() -> None:

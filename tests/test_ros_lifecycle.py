@@ -289,16 +289,16 @@ def test_best_effort_publishers_that_come_late_are_heard(tmp_path: Path) -> None
         until(lambda: standing(rovers), "robots that fell silent are told to stand")
 
 
-def test_a_clock_that_is_set_back_stops_robots_and_the_loop_goes_on(tmp_path: Path) -> None:
-    """Simulated time jumps from 100 s back to 20 s."""
+def test_a_clock_that_is_set_stops_robots_and_the_loop_goes_on(tmp_path: Path) -> None:
+    """Simulated time jumps from 100 s back to 20 s, then ahead; it stops, and runs fast."""
     from rosgraph_msgs.msg import Clock
 
     with bench(tmp_path, use_sim_time=True) as made:
         clock = made.probe.node.create_publisher(Clock, "/clock", 10)
-        now = [100.0]
+        now, going, rate = [100.0], [True], [1.0]
 
         def tick() -> None:
-            now[0] += 0.05
+            now[0] += 0.05 * rate[0] * going[0]
             message = Clock()
             message.clock.sec = int(now[0])
             message.clock.nanosec = int(now[0] % 1 * 1e9)
@@ -314,8 +314,26 @@ def test_a_clock_that_is_set_back_stops_robots_and_the_loop_goes_on(tmp_path: Pa
         now[0] = 20.0
         until(lambda: "the clock was set back" in made.probe.log(), "a warning")
         until(lambda: not all(moving(m) for _, m in record[before:]), "it stands for a moment")
-        until(lambda: busy(rovers), "a rover drives again")
+        until(lambda: busy(rovers), "it goes on")
         assert record[-1][1].header.stamp.sec < 60
+        history = made.probe.listen("/allocator/reallocations", DiagnosticStatus, LATE)
+        until(lambda: history, "the start")
+        before, known = len(record), len(history)
+        now[0] += 500.0
+        until(lambda: "the clock was set ahead by 50" in made.probe.log(), "a warning")
+        until(lambda: not all(moving(m) for _, m in record[before:]), "it stands for a moment")
+        until(lambda: busy(rovers), "it goes on")
+        until(lambda: len(record) > before + 10, "more commands")
+        going[0] = False  # paused
+        time.sleep(0.5)
+        paused = len(record)
+        time.sleep(0.5)
+        assert len(record) <= paused + 1, "no time goes by, nothing is decided"
+        assert len(history) == known, [m.message for _, m in history]
+        going[0], rate[0] = True, 10.0
+        until(lambda: len(record) > paused + 20, "ten times as fast")
+        assert made.node.loop._health.failures == 0
+        until(lambda: busy(rovers), "a rover drives again")
 
 
 def _unstamped(message: PoseStamped) -> PoseStamped:

@@ -71,6 +71,10 @@ class EnergyBelief:
         self.measured_at[fresh] = observation.charge_times[fresh]
         self.estimated = now - self.measured_at > timeout
 
+    def recall(self, robot: int, charge: float) -> None:
+        """Take up what an earlier run knew; it counts as an estimate."""
+        self.charge[robot] = charge
+
     def spendable(self, model: Model) -> np.ndarray:
         """Give what each robot may still spend above its reserve, Wh, shape (N,)."""
         return model.capacity * np.maximum(self.charge - model.reserve, 0.0)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from fnmatch import fnmatchcase
 
@@ -94,6 +95,20 @@ class FeatureBelief:
             for name, i, f in self.rules
             if (i, f) not in self.heard
         ]
+
+    def troubles(self, now: float, settings: Settings) -> dict[str, tuple[int, str]]:
+        """Give the statuses that are not OK: name to level and text."""
+        return {
+            name: (self._level(status, now, settings), status.message)
+            for statuses in self.heard.values()
+            for name, status in statuses.items()
+            if self._level(status, now, settings) != OK
+        }
+
+    def recall(self, name: str, level: int, message: str) -> None:
+        """Take up a status of an earlier run: it stands until the next one of its name."""
+        for place in self._spoken_for(name):
+            self.heard.setdefault(place, {})[name] = _Heard(level, math.inf, message)
 
     def forget_times(self, now: float) -> None:
         """Treat every status as heard now: the clock jumped."""

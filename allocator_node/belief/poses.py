@@ -112,6 +112,11 @@ class PoseBelief:
         far = np.where(waiting, np.maximum(np.nan_to_num(leap), 1e-9), 0.0)
         return Places(carried, known, heard, age, velocities, far, driven & ~settled)
 
+    def forget_times(self) -> None:
+        """Take the next poses as the first: the clock was set back."""
+        for times in (self.times, self._newest_times, self._jump_times):
+            times[:] = np.nan
+
     def _leaps(self, poses: np.ndarray, times: np.ndarray) -> np.ndarray:
         """Tell which poses (N, 4) no robot can have reached since its newest one, (N,)."""
         step = (times - self._newest_times)[:, None]

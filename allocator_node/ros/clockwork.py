@@ -11,6 +11,33 @@ EARLY = 0.1
 """A stamp may be this much ahead of now, s: clocks of two hosts in good agreement."""
 
 
+SET_AHEAD = 1.0
+"""A clock further ahead than this, while less time went by, was set, s."""
+
+
+class ClockWatch:
+    """Notices that the clock was set."""
+
+    def __init__(self) -> None:
+        self._last: float | None = None
+        self._last_real = 0.0
+        self._set_ahead = False
+
+    def look(self, now: float) -> float:
+        """Give by how much the clock was set since the last look, s; 0: it runs on.
+
+        Simulated time that runs fast skips much in every look; so only the first of
+        several skips counts.
+        """
+        real = time.monotonic()
+        ahead = 0.0 if self._last is None else now - self._last
+        went_by, self._last, self._last_real = real - self._last_real, now, real
+        if ahead < 0:
+            return ahead
+        first, self._set_ahead = not self._set_ahead, ahead > SET_AHEAD and went_by < ahead / 2
+        return ahead if first and self._set_ahead else 0.0
+
+
 def arrival_time(now: float, received: int, last_look: float) -> float:
     """Give when a message arrived, on the clock of ``now``, s.
 

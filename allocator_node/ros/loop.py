@@ -16,9 +16,10 @@ from rclpy.timer import Timer
 from visualization_msgs.msg import MarkerArray
 
 from ..decision import Decision
-from ..observation import Orders
+from ..observation import Observation, Orders
 from ..settings import Settings
 from ..team import Team
+from .clockwork import ClockWatch
 from .command_topics import CommandTopics, other_publishers
 from .inbox import Inbox
 from .loop_health import LoopHealth
@@ -92,7 +93,9 @@ class Loop:
         self._timer: Timer | None = None
         self._decision: Decision | None = None
         self._trace = ""
-        self._last = -np.inf
+        self._clock = ClockWatch()
+        self._awaited_until = 0.0
+        self._missed: Observation | None = None
         for robot in team.robots.values():
             if robot.navigates:
                 self._log.warning(
@@ -113,6 +116,7 @@ class Loop:
         if self._options.command_robots:
             self._take_over()
         self._renew()
+        self._await_robots()
         if self._options.record_to:
             self._record(Path(self._options.record_to))
         self.active = True
@@ -219,11 +223,18 @@ class Loop:
 
     def _decide(self) -> None:
         now = self._now()
-        if now < self._last:
-            self._set_back(now)
+        if by := self._clock.look(now):
+            self._stand()
+            self._forget_times(by)
             return
-        self._last = now
-        decision = self.allocator.step(self._inbox.observation(now), now)
+        observation = self._inbox.observation(now)
+        if self._missed is not None:
+            observation, self._missed = observation.since(self._missed), None
+        if self._awaits(observation):
+            self._missed = observation
+            self._stand()
+            return
+        decision = self.allocator.step(observation, now)
         self._decision = decision
         self._board.note(decision)
         if self._commands is not None:
@@ -234,16 +245,30 @@ class Loop:
                 self._log.error(f"{error}: told to stand", throttle_duration_sec=TELL_EVERY)
         self._outbox.publish(decision)
 
-    def _set_back(self, now: float) -> None:
-        back, self._last = self._last - now, now
+    def _forget_times(self, by: float) -> None:
+        """Start anew in time: the clock was set by so many seconds."""
         self._log.warning(
-            f"the clock was set back by {back:.2f} s: what was heard is dropped, "
-            "what was learned stays"
+            f"the clock was set {'ahead' if by > 0 else 'back'} by {abs(by):.2f} s: "
+            "what was heard is dropped, what was learned stays"
         )
-        self._stand()
         self._inbox.forget_times()
-        if back > SET_BACK:
+        if by < -SET_BACK:
             self._renew()
+        self._await_robots()
+
+    def _await_robots(self) -> None:
+        """Give robots that have a task the time to be heard, before others get it."""
+        self._awaited_until = time.monotonic() + self.allocator.settings.pose_timeout
+
+    def _awaits(self, observation: Observation) -> bool:
+        """Tell whether a robot that has a task may still be heard in time."""
+        if time.monotonic() > self._awaited_until:
+            return False
+        busy = self.allocator.memory()["assignment"]
+        heard = np.isfinite(observation.pose_times)
+        return any(
+            name in busy and not heard[i] for i, name in enumerate(self.allocator.team.robots)
+        )
 
     def _renew(self) -> None:
         """Start beliefs about the present anew; keep what was learned, orders and tasks."""
