@@ -30,6 +30,10 @@ from ..team import Team
 from .start import task_points
 
 
+HELD = 1e-5
+"""Share a class may lose to those below it: well above the solver's tolerance of 1e-7."""
+
+
 @dataclass(frozen=True)
 class Endurance:
     """How long one standing task can be held.
@@ -127,5 +131,5 @@ def _shares(
         if len(at):
             problem = cp.Problem(cp.Maximize(cp.sum(z[at])), rules)
             problem.solve(solver=cp.SCIPY)
-            rules.append(cp.sum(z[at]) >= problem.value - 1e-7)
+            rules.append(cp.sum(z[at]) >= problem.value - HELD)
     return np.clip(z.value, 0.0, 1.0)
