@@ -307,6 +307,7 @@ class Allocator:
             charge=self._energy.charge,
             spare=self._assignment < 0,
             exhausted=wanted.any(axis=1) & ~(wanted & enough).any(axis=1),
+            above=self._energy.charge - self._model.reserve,
             called=(pinned & wanted & enough).any(axis=1),
             reach=self._safety.reach,
         )

@@ -20,6 +20,12 @@ SAME_DOCK = 1.0
 ENOUGH_MORE = 0.05
 """Charge above ``charge_below`` from which the dock is left to one that can do nothing."""
 
+HEAD_START = 0.05
+"""Charge by which the one in the dock must be ahead to make room for one at its last."""
+
+LAST = 1 / 3
+"""Share of ``dock_margin`` above the reserve from which a robot is at its last."""
+
 APART = 0.5
 """Distance between bodies that wait, beside the margin, m."""
 
@@ -44,6 +50,7 @@ class Crew:
         charge: 0..1, shape (N,).
         spare: Robots without a task, shape (N,).
         exhausted: Robots whose energy allows none of their tasks, shape (N,).
+        above: Charge above the reserve, shape (N,).
         called: Robots that an operator's order takes off the dock, shape (N,).
         reach: Distance from the control point that holds the body, m, shape (N,).
     """
@@ -55,6 +62,7 @@ class Crew:
     charge: np.ndarray
     spare: np.ndarray
     exhausted: np.ndarray
+    above: np.ndarray
     called: np.ndarray
     reach: np.ndarray
 
@@ -79,9 +87,10 @@ class Charging:
 
     A robot without a task goes when its energy allows none of the tasks it is able
     to do, or is down to ``charge_below``, and is not asked for again before
-    ``charge_until``. A dock goes to those first who can do nothing else, then to
-    whoever came first. The one that has it leaves early only for one that can do
-    nothing, and steps aside once it is charged, if somebody waits.
+    ``charge_until``. A dock goes first to those that are at their last, then to those
+    that can do nothing else, then to whoever came first. The one that has it leaves
+    early only for one of the former, and steps aside once it is charged, if somebody
+    waits: so nobody that waits falls below its reserve.
 
     Attributes:
         on: Robots that are to charge, shape (N,).
@@ -131,13 +140,16 @@ class Charging:
     ) -> None:
         """Give the dock to one robot, and the others places around it."""
         users = np.flatnonzero(self._dock == dock)
+        last = crew.above <= LAST * settings.dock_margin
         queue = sorted(
             users[self.on[users] & crew.heard[users]],
-            key=lambda i: (not crew.exhausted[i], self._since[i], i),
+            key=lambda i: (not last[i], not crew.exhausted[i], self._since[i], i),
         )
         holder = self._holder.get(dock)
         if holder not in queue:
             holder = queue[0] if queue else None
+        elif last[queue[0]] and crew.above[holder] > crew.above[queue[0]] + HEAD_START:
+            holder = queue[0]
         elif (
             crew.exhausted[queue[0]]
             and not crew.exhausted[holder]
