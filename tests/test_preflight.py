@@ -186,18 +186,18 @@ def test_the_only_probe_is_the_weak_point_and_a_second_one_removes_it() -> None:
 
 
 def test_endurance_by_hand() -> None:
-    """One robot of 100 Wh at 20 W that charges in an hour, at its dock's own place.
+    """One robot of 100 Wh at 20 W that charges with 100 W, at its dock's own place.
 
     With 20 % kept it works 80 Wh / 20 W = 4 h and needs 80 Wh / 100 W = 0.8 h of charging:
     4 / 4.8 of all time. Two such robots hold the post without a gap; at one shared dock too.
     """
-    battery = Battery(capacity_wh=100, reserve=0.2, idle_w=20, drive_w=50)
+    battery = Battery(capacity_wh=100, reserve=0.2, idle_w=20, drive_w=50, charge_w=100)
     post = watch("post", 0, 0)
 
     def held(count: int, docks: list[tuple[float, float]]) -> tuple[float, float]:
         robots = [robot(f"r{i}", 0, 0.0, dock=docks[i], battery=battery) for i in range(count)]
         team = team_of(robots, [post])
-        (one,) = endurance(team, decide(team, Settings()), charge_hours=1.0)
+        (one,) = endurance(team, decide(team, Settings()))
         return one.hours, one.share
 
     hours, share = held(1, [(0.0, 0.0)])
@@ -210,10 +210,10 @@ def test_the_shared_dock_is_the_bottleneck() -> None:
 
     Work for W robot-hours takes 0.2 W dock-hours, so one dock carries 5 robots of the ten.
     """
-    battery = Battery(capacity_wh=100, reserve=0.2, idle_w=20, drive_w=50)
+    battery = Battery(capacity_wh=100, reserve=0.2, idle_w=20, drive_w=50, charge_w=100)
     robots = [robot(f"r{i}", 0, 2.0 * i, dock=(0.0, 0.0), battery=battery) for i in range(10)]
     team = team_of(robots, [watch("posts", 0, 0, count=10)])
-    (one,) = endurance(team, decide(team, Settings()), charge_hours=1.0)
+    (one,) = endurance(team, decide(team, Settings()))
     assert one.share == pytest.approx(0.5, abs=0.01)
 
 

@@ -31,9 +31,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     from ..preflight.page import write_page
     from ..preflight.terminal import parts
 
-    assumed = Assumptions(
-        rate=asked.rate, latency=asked.latency, charge_hours=asked.charge_hours
-    )
+    assumed = Assumptions(rate=asked.rate, latency=asked.latency)
     progress = Progress(
         TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(),
         console=Console(stderr=True), transient=True, disable=not sys.stderr.isatty(),
@@ -79,9 +77,6 @@ def parser() -> argparse.ArgumentParser:
         "--latency", type=positive, default=0.2,
         help="from a pose to the robot's answer to it, s (0.2)",
     )  # fmt: skip
-    parser.add_argument(
-        "--charge-hours", type=positive, default=2.0, help="from empty to full at a dock, h (2)"
-    )
     return parser
 
 

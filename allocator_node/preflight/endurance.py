@@ -29,7 +29,6 @@ from ..program.problem import LEVELS
 from ..team import Team
 from .start import task_points
 
-
 HELD = 1e-5
 """Share a class may lose to those below it: well above the solver's tolerance of 1e-7."""
 
@@ -52,18 +51,17 @@ class Endurance:
     share: float
 
 
-def endurance(team: Team, start: Decision, charge_hours: float) -> list[Endurance]:
+def endurance(team: Team, start: Decision) -> list[Endurance]:
     """Give the endurance of each standing task.
 
     Args:
         team: The team.
         start: Who starts where.
-        charge_hours: Time from empty to full at a dock, h.
     """
     model = Model(team)
     standing = np.array([t.active and not t.ends for t in team.tasks.values()], dtype=bool)
     hours, trips = stints(team, model, start)
-    shares = _shares(model, start, standing, hours, trips, charge_hours)
+    shares = _shares(model, start, standing, hours, trips)
     result = []
     for m in np.flatnonzero(standing):
         group = np.flatnonzero(start.assignment == m)
@@ -101,7 +99,6 @@ def _shares(
     standing: np.ndarray,
     hours: np.ndarray,
     trips: np.ndarray,
-    charge_hours: float,
 ) -> np.ndarray:
     """Give z_m, (M,)."""
     robots, tasks = hours.shape
@@ -117,7 +114,7 @@ def _shares(
     capability = model.capability(model.declared.astype(float))
     rules = [
         cp.sum(cp.multiply(time, x), axis=1) + y <= 1,
-        cp.sum(cp.multiply(used, x), axis=1) <= cp.multiply(model.capacity / charge_hours, y),
+        cp.sum(cp.multiply(used, x), axis=1) <= cp.multiply(model.charge, y),
         x[~able] == 0,
         z <= standing.astype(float),
         cp.sum(x, axis=0) >= cp.multiply(model.least, z),

@@ -29,12 +29,10 @@ class Assumptions:
     Attributes:
         rate: Decisions a second, Hz.
         latency: From a pose to the robot's answer, s; 0.2 is common practice.
-        charge_hours: From empty to full at a dock, h; 2 is common practice.
     """
 
     rate: float = 10.0
     latency: float = 0.2
-    charge_hours: float = 2.0
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -140,7 +138,7 @@ def inspect(
         losses=singles,
         pairs=worse,
         extras=_extras(team, settings, start, singles, on_progress),
-        endurance=endurance(team, start, assumed.charge_hours),
+        endurance=endurance(team, start),
         stopping=stopping(team, settings, 1 / assumed.rate, assumed.latency),
         unwatched=[
             (robot.name, feature)

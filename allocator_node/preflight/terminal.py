@@ -243,8 +243,7 @@ def _endurance(findings: Findings) -> Iterator[RenderableType]:
         table.add_row(one.task, listed(one.robots, 4) or "nobody", hours, share)
     yield table
     yield _note(
-        f"For ever: taking turns at the docks, {findings.assumed.charge_hours:g} h from empty to "
-        "full (--charge-hours)."
+        "For ever: taking turns at the docks, one robot at each, charged as charge_w says."
     )
 
 
