@@ -192,7 +192,7 @@ def run(team_file: str | None, autostart: bool, arguments: list[str]) -> int:
         arguments: ROS arguments.
 
     Returns:
-        0, or 1 where autostart failed.
+        0, or 1 where autostart failed, or somebody else drives the robots.
     """
     # rclpy's own handlers would end the context before the last commands are sent.
     rclpy.init(args=arguments, signal_handler_options=SignalHandlerOptions.NO)
@@ -206,6 +206,8 @@ def run(team_file: str | None, autostart: bool, arguments: list[str]) -> int:
             return 1
         while not ending.asked:
             executor.spin_once(timeout_sec=LISTEN)
+            if autostart and node.loop is not None and node.loop.occupied:
+                return 1
         return 0
     finally:
         node.destroy_node()

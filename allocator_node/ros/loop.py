@@ -33,6 +33,9 @@ from .state_file import StateFile
 DISCOVERY = 1.0
 """Time a node needs to see the publishers of others, s."""
 
+NEWCOMER = 3.0
+"""Who has driven for less than this and finds somebody else driving gives way, s."""
+
 REPORT_EVERY, MARKERS_EVERY, SAVE_EVERY = 1.0, 0.5, 2.0
 """Periods of diagnostics, markers and the state file, s."""
 
@@ -59,6 +62,7 @@ class Loop:
     Attributes:
         allocator: The allocator.
         active: Whether the loop runs.
+        occupied: Who drives our robots, where we gave way to it; "" if nobody.
     """
 
     def __init__(
@@ -80,6 +84,7 @@ class Loop:
         self._make = make_allocator
         self._options = options
         self.active = False
+        self.occupied = ""
         self.allocator = self._made(team, settings, orders)
         self._inbox = Inbox(node, team)
         self._outbox = Outbox(node, team)
@@ -94,7 +99,7 @@ class Loop:
         self._decision: Decision | None = None
         self._trace = ""
         self._clock = ClockWatch()
-        self._awaited_until = 0.0
+        self._awaited_until = self._drives_since = 0.0
         self._missed: Observation | None = None
         for robot in team.robots.values():
             if robot.navigates:
@@ -128,6 +133,7 @@ class Loop:
             self._node.destroy_timer(self._timer)
             self._timer = None
         self._let_go()
+        self.occupied = ""
         if not self.active:
             return
         self.active = False
@@ -162,21 +168,28 @@ class Loop:
         Raises:
             Occupied: Driving is asked for and somebody else drives.
         """
-        if self.active and options.command_robots and self._commands is None:
+        if self._is_to_take_over(options):
             self._refuse_if_occupied()
+
+    def _is_to_take_over(self, options: Options) -> bool:
+        """Tell whether robots are to be driven that are not yet."""
+        wanted = options.command_robots and not self.occupied
+        return self.active and wanted and self._commands is None
 
     def apply(self, options: Options, settings: Settings, orders: Orders, team: Team) -> None:
         """Take new options, settings, orders and, if it is another one, team."""
         rate, self._options = self._options.rate, options
+        if not options.command_robots:
+            self.occupied = ""
         self.allocator.settings = settings
-        self.allocator.orders = orders
+        self.allocator.orders = replace(orders, driving=orders.driving and not self.occupied)
         if team is not self.allocator.team:
             self.allocator.edit(team, self._now())
             self._inbox.watch(team)
         if options.rate != rate:
             self._change_rate()
-        if self.active and options.command_robots and self._commands is None:
-            self._commands = CommandTopics(self._node, self.allocator.team)
+        if self._is_to_take_over(options):
+            self._drive()
         elif not options.command_robots:
             self._let_go()
 
@@ -290,6 +303,10 @@ class Loop:
             others = other_publishers(self._node, self.allocator.team, own=1)
             for sentence in others:
                 self._log.error(f"{sentence} too", throttle_duration_sec=10.0)
+            if others and time.monotonic() - self._drives_since < NEWCOMER:
+                self._give_way("; ".join(others))
+        elif self.occupied:
+            others = [f"not driving: {self.occupied}"]
         self._diagnostics.publish(
             self._health.diagnostics(
                 self._decision,
@@ -327,7 +344,21 @@ class Loop:
         # A publisher that was there before us may not have been discovered yet.
         time.sleep(max(0.0, DISCOVERY - (time.monotonic() - self._born)))
         self._refuse_if_occupied()
+        self._drive()
+
+    def _drive(self) -> None:
+        self.occupied, self._drives_since = "", time.monotonic()
         self._commands = CommandTopics(self._node, self.allocator.team)
+
+    def _give_way(self, others: str) -> None:
+        """Stop to drive: a node that was there before us was discovered late."""
+        self.occupied = others
+        self.allocator.orders = replace(self.allocator.orders, driving=False)
+        self._log.error(
+            f"{others}: this node came later and drives nobody; stop the other, then set "
+            "command_robots to false and to true again"
+        )
+        self._let_go()
 
     def _refuse_if_occupied(self) -> None:
         others = other_publishers(self._node, self.allocator.team, own=0)
