@@ -34,6 +34,8 @@ def test_a_row_says_what_the_status_says_beyond_the_task():
     row = row_of(status("r1", "gate", "r1 does gate; nearer to r2 than allowed", energy="0.420"))
     assert row == Row("r1", "gate", dict.fromkeys(TASKS, 0.5), 0.42, 0, "nearer to r2 than allowed")
     assert row_of(status("r1", "", "r1 has no task")).text == ""
+    assert row_of(status("r1", "", "r1 has no task and charges")).text == "charges"
+    assert row_of(status("r1", "", "r1 has no task, not heard from")).text == "not heard from"
 
 
 @pytest.mark.parametrize(

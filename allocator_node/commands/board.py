@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from threading import Lock
@@ -113,7 +114,7 @@ def row_of(status: Mapping[str, Any]) -> Row:
         },
         charge=number(values.get("energy", "")),
         level=status["level"],
-        text=status["text"].removeprefix(known).lstrip(",; "),
+        text=re.sub(r"^(,|;| and) ", "", status["text"].removeprefix(known)),
     )
 
 
