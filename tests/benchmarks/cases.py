@@ -155,7 +155,6 @@ def crowd(robots: int, room: float, seed: int = 0) -> ControlProblem:
         highest=fleet.limits,
         gear=np.zeros(robots, dtype=int),
         round_limit=fleet.round_limit,
-        gear=np.zeros(robots),
         away=away / np.linalg.norm(away, axis=1, keepdims=True),
         demand=fleet.cruise,
         preferred=np.zeros((robots, 4)),
