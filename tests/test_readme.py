@@ -23,7 +23,15 @@ from allocator_node.files.document import FileError
 from allocator_node.observation import Orders
 from allocator_node.settings import Settings
 from allocator_node.sim.rehearsal import rehearse
-from allocator_node.sim.world_file import parse_world
+from allocator_node.sim.world_file import (
+    ROBOT_EVENTS,
+    GroundPatch,
+    MovingTarget,
+    Noise,
+    TaskEvent,
+    World,
+    parse_world,
+)
 from allocator_node.tasks import KINDS, Task
 from allocator_node.team import Battery, CommandSink, HealthRule, PoseSource, Robot, Team
 from allocator_node.team_file import merge_tasks, parse_team, read_team
@@ -163,6 +171,19 @@ def test_keys_of_commands_and_health_are_there() -> None:
         key = "command" if kind is CommandSink else "health"
         row = re.search(rf"^\| `{key}` .*$", README, re.MULTILINE).group()
         assert all(field.name in row for field in fields(kind))
+
+
+def test_every_key_of_the_world_file_is_shown() -> None:
+    text = README.split("### World file")[1].split("\n## ")[0]
+    for kind in (World, Noise, GroundPatch, MovingTarget, *ROBOT_EVENTS.values(), TaskEvent):
+        for field in fields(kind):
+            assert re.search(rf"\b{field.name}:", text), field.name
+
+
+def test_every_example_is_listed() -> None:
+    listed = re.findall(r"^\| `config/(\w+)\.yaml`", README, re.MULTILINE)
+    there = {path.stem for path in (ROOT / "config").glob("*.yaml")}
+    assert set(listed) == {name for name in there if not name.endswith("_world")}
 
 
 def test_every_cause_is_there() -> None:
