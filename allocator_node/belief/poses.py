@@ -120,7 +120,7 @@ class PoseBelief:
     def _leaps(self, poses: np.ndarray, times: np.ndarray) -> np.ndarray:
         """Tell which poses (N, 4) no robot can have reached since its newest one, (N,)."""
         step = (times - self._newest_times)[:, None]
-        moved = poses - self._newest
+        moved = np.where(np.isfinite(step), poses - self._newest, 0.0)
         turn = np.abs(np.angle(np.exp(1j * moved[:, 3])))
         way = np.column_stack([np.linalg.norm(moved[:, :3], axis=1), turn])
         return (way > CORRECTION + self.fastest * step).any(axis=1)

@@ -124,7 +124,7 @@ def formulate(
 
     s = known.suitability * known.efficacy
     dearness = known.dearness[:, None]
-    urgent = model.urgency * path / (SECONDS_PER_HOUR * cruise)
+    urgent = model.urgency * np.where(np.isfinite(path), path, 0.0) / (SECONDS_PER_HOUR * cruise)
     eligible = may & enough
     pins = known.pinned & eligible
     pinned = np.full(robots, -1)
