@@ -16,6 +16,7 @@ from allocator_node.charging import Charging
 from allocator_node.charging import Crew as Party
 from allocator_node.decision import Cause
 from allocator_node.files import plugins
+from allocator_node.files.document import FileError
 from allocator_node.model import Model
 from allocator_node.settings import Settings
 from allocator_node.sim import rehearsal as rehearsals
@@ -473,6 +474,27 @@ def test_followers_of_an_unknown_topic_hold_and_set_out_when_it_is_heard():
     assert pose(rehearse(team, world, 30.0), "one", 29)[:2] == pytest.approx([8, 9], abs=0.3)
 
 
+def test_a_world_whose_targets_are_wrong_says_where():
+    follow = Follow(name="f", target=Target(topic="tag"), offset=(-1.0, 0.0))
+    team = team_of([robot("one", 4, 0)], [follow])
+    text = """
+targets:
+  - {topic: tak, path: [[0, 9, 9], [0, 1, 1]]}
+  - {topic: tag, path: []}
+"""
+    with pytest.raises(FileError) as caught:
+        parse_world(text, team, "w")
+    assert str(caught.value).splitlines() == [
+        "w:4: targets[1].path: found an empty list; must have at least 1 entry",
+    ]
+    with pytest.raises(FileError) as caught:
+        parse_world(text.replace("path: []", "path: [[0, 0, 0]]"), team, "w")
+    assert str(caught.value).splitlines() == [
+        'w:3: targets[0].topic: found the text "tak"; must be tag, the only one there is',
+        "w:3: targets[0].path[1]: found the time 0 after 0; must be later than the one before",
+    ]
+
+
 def test_nobody_follows_itself():
     follow = Follow(name="f", target=Target(robot="one"), offset=(-1.0, 0.0))
     crew = Crew(team_of([robot("one", 0, 0), robot("two", 9, 0)], [follow]))
@@ -628,13 +650,13 @@ def test_an_order_takes_a_robot_off_its_dock():
 
 
 def test_ten_hours_on_two_hour_batteries(request, monkeypatch):
-    """Scaled by 0.12, batteries and all, unless whole: eighty minutes of real dock changes.
+    """Scaled by 0.12, batteries and all, unless whole: most of an hour of dock changes.
 
     Motion is integrated exactly between commands, so the simulation's steps may be long.
     """
     monkeypatch.setattr(rehearsals, "SUBSTEP", 0.5)
     team, world = story("long_watch")
-    hours, scale = (10.0, 1.0) if request.config.option.whole else (1.2, 0.12)
+    hours, scale = (10.0, 1.0) if request.config.option.whole else (0.9, 0.12)
     robots = {
         name: replace(
             rover, battery=replace(rover.battery, capacity_wh=scale * rover.battery.capacity_wh)

@@ -263,9 +263,9 @@ events:
         farm,
     )
     assert world == World(
-        Noise(0.02, 0.01),
-        (GroundPatch("washout", (55, 41, 6), 0.05, ("wheels",)),),
-        (
+        noise=Noise(0.02, 0.01),
+        ground=(GroundPatch("washout", (55, 41, 6), 0.05, ("wheels",)),),
+        events=(
             FeatureEvent(40, "rover_1", "thermal_camera", "warn"),
             FeatureEvent(41, "rover_1", "gimbal", "error"),
             PoseEvent(60, "drone_1", "silent"),
