@@ -53,7 +53,7 @@ robots:
     command: {topic: mule/goal_pose, type: geometry_msgs/msg/PoseStamped}
 tasks:
   gate: {kind: watch, at: [40, 2], needs: {thermal_scan: 1.0}}
-  ring: {kind: watch, at: [40, 10], robots: {min: 1, max: 1}}
+  ring: {kind: watch, at: [40, 10], face: [40, 20], robots: {min: 1, max: 1}}
 """
 
 WORLD = """
@@ -155,6 +155,8 @@ def test_the_two_commands_together(probe: Probe, tmp_path: Path) -> None:
         until(lambda: change("gate", "start") and change("ring", "start"), "a start")
         until(lambda: told and goals and told[-1][1].data == "ring", "a goal for the mule")
         assert goals[-1][1].pose.position.x == pytest.approx(40.0, abs=0.5)
+        facing = conversions.yaw_of(goals[-1][1].pose.orientation)
+        assert facing == pytest.approx(np.pi / 2, abs=0.05)
         failed = until(lambda: change("gate", "feature"), "a camera fails")
         assert (failed["from"], failed["to"]) == ("rover_1", "rover_2")
         ended = until(lambda: change("ring", "task"), "a task ends")
@@ -167,6 +169,8 @@ def test_the_two_commands_together(probe: Probe, tmp_path: Path) -> None:
 
         until(lambda: of("rover_2").level == DiagnosticStatus.ERROR, "it shows")
         assert float(values_of(of("rover_2"))["energy"]) == pytest.approx(0.6, abs=0.02)
+        assert values_of(of("mule"))["safety"] == "left to its own navigation"
+        assert "safety" not in values_of(of("rover_1"))
         assert node.poll() is None
 
         def stays() -> bool:
