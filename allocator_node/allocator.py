@@ -236,7 +236,8 @@ class Allocator:
             poses=view.poses,
             points=view.points,
             jacobians=view.jacobians,
-            gear=self._steering.gear,
+            # Priced as if driving forward: nobody loses a task for backing up a little.
+            gear=self._model.fleet.steered.astype(int),
             heard=view.places.heard,
             capability=view.capability,
             suitability=view.suitability,
@@ -345,9 +346,11 @@ class Allocator:
             targets,
             view.poses,
             view.points,
+            places.velocities,
+            places.known,
             self._guidance.held,
             self._guidance.aside,
-            settings.gamma,
+            settings,
             view.dt,
         )
         course = make_way(

@@ -14,7 +14,7 @@ from builders import ROVER, Crew, robot, team_of, watch
 
 from allocator_node.decision import Level, goal_pose
 from allocator_node.drives import Aerial, Carlike, Differential, Fleet, Holonomic
-from allocator_node.program.dubins import SIDES, WORDS, dubins, traced
+from allocator_node.program.dubins import SIDES, TURNS, WORDS, dubins, sampled, traced
 from allocator_node.sim import rehearsal as rehearsals
 from allocator_node.sim.motion import advance
 from allocator_node.sim.navigation import steer
@@ -93,6 +93,21 @@ def test_shortest_paths_by_hand():
     ):
         found = dubins(here, np.array([end]), radius=2.0).sum(axis=-1).min()
         assert found == pytest.approx(length)
+
+
+def test_many_paths_at_once_are_the_paths_one_by_one():
+    random = np.random.default_rng(2)
+    starts, ends = poses_anywhere(random, 30), poses_anywhere(random, 30)
+    pieces, curvatures = dubins(starts, ends, 1.5)[:, 0], np.tile(TURNS[0] / 1.5, (30, 1))
+    many = sampled(starts, curvatures, pieces, 20)
+    for i, path in enumerate(many):
+        for share in (7, 20):
+            way, parts = pieces[i].sum() * share / 20, []
+            for curvature, length in zip(curvatures[i], pieces[i], strict=True):
+                parts.append((curvature, min(length, way)))
+                way -= parts[-1][1]
+            alone = traced(starts[i], parts, 0.1)[-1]
+            np.testing.assert_allclose(path[share - 1], alone, atol=1e-9)
 
 
 def test_no_sampled_way_is_shorter_than_the_shortest():
@@ -186,6 +201,27 @@ def test_cars_never_turn_tighter_than_they_can(seed, watched):
     assert (turned * radius <= arc + 1e-9).all()
 
 
+@pytest.mark.parametrize("offset", [0.0, 0.4, -0.4])
+def test_cars_that_meet_head_on_pass(offset):
+    """Neither may back up; exactly face to face, and a little beside each other."""
+    cars = [
+        robot("east", 0, 0, 0, drive=CAR, features=("camera",)),
+        robot("west", 24, offset, np.pi, drive=CAR, features=("tracks",)),
+    ]
+    goals = [watch("e", 24, 0, needs={"scan": 0.6}), watch("w", 0, offset, needs={"rough": 1.0})]
+    team = team_of(cars, goals)
+    simulated, crew = SimulatedTeam(team), Crew(team)
+    apart = np.inf
+    for step in range(350):
+        decision = crew.allocator.step(simulated.observation(), 0.1 * step)
+        simulated.step(decision.commands, 0.1)
+        apart = min(apart, np.hypot(*(np.diff(simulated.true_poses[:, :2], axis=0)[0])) - 0.8)
+    assert apart > 0
+    points = Fleet([CAR, CAR]).control_points(simulated.true_poses)
+    assert np.hypot(*(points[0, :2] - (24, 0))) < 0.5
+    assert np.hypot(*(points[1, :2] - (0, offset))) < 0.5
+
+
 def test_a_simulated_car_does_no_more_than_a_car_can():
     """It is told to spin, to back up, and to do both."""
     fleet = Fleet([CAR, replace(CAR, reverse=True)])
@@ -198,12 +234,12 @@ def test_a_simulated_car_does_no_more_than_a_car_can():
 def test_carts_bring_modules(watched):
     team = read_team(CONFIG / "module_carts.yaml")
     rehearsal = rehearse(team, World(noise=Noise(0.02, 0.01)), seconds=150, seed=1)
-    assert set(rehearsal.finished) == {"unload", "hoist"}
+    assert set(rehearsal.finished) == {"unload", "hook_on", "hoist"}
     assert rehearsal.coverage["supply_round"] > 0.95
     assert rehearsal.min_separation_m > 0
     assert rehearsal.body_violations == rehearsal.boundary_violations == 0
     backwards = sum(dt for commands, dt in watched[0].told if commands[2, 0] < 0)
-    assert backwards > 0.5  # the loader's goal is beside and behind it
+    assert backwards > 1.0  # the loader's first goal is right behind it
     assert all((commands[:2, 0] >= 0).all() for commands, _ in watched[0].told)
 
 

@@ -10,6 +10,9 @@ WORDS = ("LSL", "RSR", "LSR", "RSL", "LRL", "RLR")
 SIDES = {"L": 1.0, "S": 0.0, "R": -1.0}
 """Curvature of a piece, times the turning radius."""
 
+TURNS = np.array([[SIDES[letter] for letter in word] for word in WORDS])
+"""The same for the pieces of every word, shape (6, 3)."""
+
 FULL = 2 * np.pi
 ROUND = 1e-7
 """Turns short of a full one by less than this are none, rad."""
@@ -102,3 +105,29 @@ def traced(
         path.append(poses)
         here = poses[-1]
     return np.concatenate(path)
+
+
+def sampled(
+    starts: np.ndarray, curvatures: np.ndarray, lengths: np.ndarray, count: int
+) -> np.ndarray:
+    """Give poses at equal distances along many paths at once.
+
+    Args:
+        starts: x, y (m), heading (rad), shape (n, 3).
+        curvatures: Curvatures of the pieces, 1/m, shape (n, k).
+        lengths: Their lengths, m, shape (n, k).
+        count: Poses on each path, its end included.
+
+    Returns:
+        Poses, shape (n, count, 3).
+    """
+    left = lengths.sum(axis=1)[:, None] * np.arange(1, count + 1) / count
+    x, y, heading = (np.repeat(part[:, None], count, axis=1) for part in starts.T)
+    for curvature, length in zip(curvatures.T[..., None], lengths.T[..., None], strict=True):
+        s = np.minimum(left, length)
+        left = left - s
+        half = 0.5 * curvature * s
+        chord = s * np.sinc(half / np.pi)
+        x, y = x + chord * np.cos(heading + half), y + chord * np.sin(heading + half)
+        heading = heading + 2 * half
+    return np.stack([x, y, heading], axis=-1)

@@ -9,9 +9,11 @@ import shapely
 
 from ..drives import Fleet
 from ..model import Model
+from ..settings import Settings
 from ..team import Team
-from .dubins import SIDES, WORDS, dubins, traced
+from .dubins import TURNS, dubins, sampled, traced
 from .guidance import Course, Targets
+from .lookout import lookout
 from .ways import grown
 
 SPARE = 1.15
@@ -22,6 +24,9 @@ STEP = 0.05
 
 CARROT = 0.4
 """Distance ahead on the path at which a robot aims, as a share of the turning radius."""
+
+FAR = 3.0
+"""The same for who turns aside: the way in which it wants to go on in the long run."""
 
 OFF = 0.3
 """Distance from its path at which a robot makes another, as a share of the turning radius."""
@@ -35,6 +40,9 @@ ANY = np.linspace(-np.pi, np.pi, 36, endpoint=False)
 BACKING = np.arange(1, 9) * 0.25
 """Distances a path may begin with in reverse, as shares of the turning radius."""
 
+OUT = 1.0
+"""Who is stuck backs up so far at least, as a share of the turning radius."""
+
 BACKING_COST = 2.0
 """A metre in reverse counts as so many forward ones."""
 
@@ -44,8 +52,8 @@ BLOCKED_COST = 20.0
 GRAZING = 0.05
 """Distance paths keep from where the safety rows would slow a robot to a halt, m."""
 
-COMPARED = 64
-"""Shortest paths that are looked at when areas are near."""
+BATCH, SAMPLES = 128, 64
+"""Where areas are near, so many paths are looked at together, at so many poses each."""
 
 STUCK = 4.0
 """Time after which a robot that is held back makes another path, backing if it may, s."""
@@ -136,6 +144,7 @@ class Steering:
         fleet = model.fleet
         self.gear = fleet.steered.astype(int)
         self._robots = np.flatnonzero(fleet.steered)
+        self._clearance = clearance
         self._plans: dict[int, _Plan] = {}
         areas = [shapely.Polygon(area.polygon) for area in team.keep_out]
         boundary = shapely.Polygon(team.boundary) if team.boundary else None
@@ -152,9 +161,11 @@ class Steering:
         targets: Targets,
         poses: np.ndarray,
         points: np.ndarray,
+        velocities: np.ndarray,
+        known: np.ndarray,
         held: np.ndarray,
         aside: np.ndarray,
-        gamma: float,
+        settings: Settings,
         dt: float,
     ) -> Course:
         """Give the course with what steered robots do to get where it leads.
@@ -169,9 +180,11 @@ class Steering:
             targets: Goals of the robots' own tasks.
             poses: Poses, shape (N, 4).
             points: Control points, m, shape (N, 3).
+            velocities: Velocities, m/s, shape (N, 4).
+            known: Robots ever heard, shape (N,).
             held: How long each robot has been held back, s, shape (N,).
             aside: Angle by which each turns aside for others, rad, shape (N,).
-            gamma: Gain γ of the task rows, 1/s.
+            settings: Weights and times.
             dt: Time since the last period, s.
         """
         fleet = model.fleet
@@ -190,12 +203,27 @@ class Steering:
             plan = self._plan(
                 i, here, np.array([*corner, facing]), 1 / curvature, fleet, held[i], dt
             )
-            turn = _pursuit(
-                here, plan.carrot(CARROT / curvature), aside[i] if plan.gear > 0 else 0.0
-            )
+            carrot, avoid = plan.carrot(CARROT / curvature), 0.0
+            if plan.gear > 0:
+                others = known & (
+                    np.abs(points[:, 2] - points[i, 2]) < settings.height_clearance
+                )
+                others[i] = False
+                keep = self._clearance[i] + self._clearance - settings.margin
+                pace = targets.pace[i] * fleet.cruise[i]
+                far = plan.carrot(FAR / curvature)
+                way = np.arctan2(*(far - here[:2])[::-1])
+                avoid = lookout(i, way, pace, points, velocities, keep, others)
+                avoid = aside[i] if abs(aside[i]) > abs(avoid) else avoid
+                if avoid:
+                    # Away from the path, which would pull it back.
+                    carrot = here[:2] + CARROT / curvature * np.array([
+                        np.cos(way - avoid), np.sin(way - avoid)
+                    ])
+            turn = _pursuit(here, carrot)
             turn = np.clip(turn, -curvature, curvature)
             cruise = fleet.cruise[i]
-            speed = max(min(gamma * (plan.left + beyond), cruise), SLOWEST * cruise)
+            speed = max(min(settings.gamma * (plan.left + beyond), cruise), SLOWEST * cruise)
             keeps_up = max(float(course.to_goal[i] @ targets.velocities[i]), 0.0)
             speed = min(targets.pace[i] * speed + keeps_up, fleet.limits[i, 0])
             self.gear[i] = plan.gear
@@ -242,16 +270,11 @@ class Steering:
         return plan
 
 
-def _pursuit(here: np.ndarray, carrot: np.ndarray, aside: float) -> float:
-    """Give the curvature of the arc from a pose (3,) to a point (2,), 1/m.
-
-    The point is turned clockwise by ``aside``, rad, but not to behind the robot.
-    """
+def _pursuit(here: np.ndarray, carrot: np.ndarray) -> float:
+    """Give the curvature of the arc from a pose (3,) to a point (2,), 1/m."""
     x, y = carrot - here[:2]
-    bearing = np.angle(np.exp(1j * (np.arctan2(y, x) - here[2])))
-    if aside > 0:
-        bearing = max(bearing - aside, -np.pi / 2)
-    return float(2 * np.sin(bearing) / max(np.hypot(x, y), 1e-3))
+    across = np.cos(here[2]) * y - np.sin(here[2]) * x
+    return float(2 * across / max(x * x + y * y, 1e-6))
 
 
 def _planned(
@@ -270,29 +293,61 @@ def _planned(
     ])
     begins: list[tuple[float, float]] = [(0.0, 0.0)]
     if len(backing):
-        starts = [(side / radius, -length) for side in (0, 1, -1) for length in backing]
+        far = backing[backing >= OUT * radius] if must_back else backing
+        starts = [(side / radius, -length) for side in (0, 1, -1) for length in far]
         begins = starts if must_back else begins + starts
-    starts = np.array([traced(here, [piece], radius)[-1] for piece in begins])
+    backed = [traced(here, [piece], STEP * radius) for piece in begins]
+    starts = np.array([path[-1] for path in backed])
     pieces = dubins(starts[:, None], ends[None], radius)
     cost = pieces.sum(axis=-1) + BACKING_COST * np.abs([b for _, b in begins])[:, None, None]
-    order = np.argsort(cost, axis=None)[: 1 if blocked is None else COMPARED]
-    best: tuple[float, np.ndarray, int] | None = None
-    for flat in order:
-        if best is not None and cost.flat[flat] >= best[0]:
-            break
-        b, e, w = np.unravel_index(flat, cost.shape)
-        word = [SIDES[letter] / radius for letter in WORDS[w]]
-        parts = list(zip(word, pieces[b, e, w], strict=True))
-        step = STEP * radius
-        back = traced(here, [begins[b]], step)
-        poses = np.concatenate([back[:-1], traced(back[-1], parts, step)])
-        total = cost.flat[flat]
-        if blocked is not None:
-            x = poses[:, 0] + ahead * np.cos(poses[:, 2])
-            y = poses[:, 1] + ahead * np.sin(poses[:, 2])
-            total += BLOCKED_COST * step * shapely.contains_xy(blocked, x, y).sum()
-        if best is None or total < best[0]:
-            best = total, poses, len(back) if len(back) > 1 else 0
-    _, poses, count = best
+    b, e, w = _best(cost, starts, backed, pieces, radius, ahead, blocked)
+    parts = list(zip(TURNS[w] / radius, pieces[b, e, w], strict=True))
+    poses = np.concatenate([backed[b][:-1], traced(starts[b], parts, STEP * radius)])
     steps = np.hypot(*np.diff(poses[:, :2], axis=0).T)
+    count = len(backed[b]) if len(backed[b]) > 1 else 0
     return _Plan(goal, poses, count, np.concatenate([[0.0], np.cumsum(steps)]))
+
+
+def _best(
+    cost: np.ndarray,
+    starts: np.ndarray,
+    backed: list[np.ndarray],
+    pieces: np.ndarray,
+    radius: float,
+    ahead: float,
+    blocked: shapely.Geometry | None,
+) -> tuple[int, int, int]:
+    """Give begin, end and word of the path that is shortest with what is blocked counted.
+
+    Args:
+        cost: Lengths as they count, m, shape (B, E, 6).
+        starts: Poses after backing, shape (B, 3).
+        backed: The way there, each (P, 3).
+        pieces: Lengths of the pieces, m, shape (B, E, 6, 3).
+        radius: Turning radius, m.
+        ahead: Distance of the control point ahead of the axle, m.
+        blocked: What control points keep out of.
+    """
+    order = np.argsort(cost, axis=None)
+    if blocked is None:
+        return np.unravel_index(order[0], cost.shape)
+    backing = np.array([STEP * radius * _inside(blocked, p[:-1], ahead).sum() for p in backed])
+    least, chosen = np.inf, order[0]
+    for batch in np.split(order, range(BATCH, len(order), BATCH)):
+        if cost.flat[batch[0]] >= least:
+            break
+        b, e, w = np.unravel_index(batch, cost.shape)
+        lengths = np.where(np.isfinite(pieces[b, e, w]), pieces[b, e, w], 0.0)
+        path = sampled(starts[b], TURNS[w] / radius, lengths, SAMPLES)
+        within = _inside(blocked, path, ahead).mean(axis=1) * lengths.sum(axis=1)
+        total = cost.flat[batch] + BLOCKED_COST * (within + backing[b])
+        if total.min() < least:
+            least, chosen = total.min(), batch[total.argmin()]
+    return np.unravel_index(chosen, cost.shape)
+
+
+def _inside(blocked: shapely.Geometry, poses: np.ndarray, ahead: float) -> np.ndarray:
+    """Tell at which poses (..., 3) of the axle the control point is blocked, shape (...)."""
+    x = poses[..., 0] + ahead * np.cos(poses[..., 2])
+    y = poses[..., 1] + ahead * np.sin(poses[..., 2])
+    return shapely.contains_xy(blocked, x.ravel(), y.ravel()).reshape(x.shape)
