@@ -520,6 +520,7 @@ class Allocator:
             self._features.troubles(self._now or 0.0, self._settings),
             self._energy.charge,
             self._charging.on,
+            self._poses.poses,
         )
 
     def recall(self, data: Mapping[str, Any]) -> None:
@@ -544,6 +545,9 @@ class Allocator:
         for robot, charge in memory.charges.items():
             if robot in robot_of:
                 self._energy.recall(robot_of[robot], charge)
+        for robot, pose in memory.places.items():
+            if robot in robot_of:
+                self._poses.recall(robot_of[robot], pose)
         for robot in memory.charging:
             if robot in robot_of:
                 self._charging.on[robot_of[robot]] = True

@@ -15,6 +15,9 @@ import numpy as np
 from .belief import EfficacyBelief
 from .model import Model
 
+FARTHEST = 1e6
+"""Coordinates beyond this, m, are no places of robots."""
+
 
 @dataclass(frozen=True)
 class Memory:
@@ -27,6 +30,8 @@ class Memory:
         troubles: Diagnostic status that was not OK to its level and text.
         charges: Robot to charge, 0..1.
         charging: Robots that were charging or on their way to it.
+        places: Robot to where it was last: x, y, z (m), heading (rad). One that is silent
+            after a restart is still in the way.
     """
 
     learned: tuple[tuple[str, str, float, int, bool], ...]
@@ -35,6 +40,7 @@ class Memory:
     troubles: Mapping[str, tuple[int, str]]
     charges: Mapping[str, float]
     charging: tuple[str, ...]
+    places: Mapping[str, tuple[float, ...]]
 
     @classmethod
     def read(cls, data: Mapping[str, Any]) -> Memory:
@@ -62,11 +68,16 @@ class Memory:
             }
             charges = {str(k): float(charge) for k, charge in data.get("charges", {}).items()}
             charging = tuple(str(name) for name in data.get("charging", ()))
+            places = {
+                str(name): tuple(map(float, pose)) for name, pose in data.get("places", {}).items()
+            }
         except (LookupError, TypeError, ValueError, AttributeError, OverflowError) as error:
             raise ValueError(f"not an allocator's memory: {error!r}") from error
         if not all(0 <= value <= 1 for value in (*(row[2] for row in learned), *charges.values())):
             raise ValueError("not an allocator's memory: an efficacy or charge is not within 0..1")
-        return cls(learned, finished, assignment, troubles, charges, charging)
+        if not all(len(p) == 4 and all(abs(v) <= FARTHEST for v in p) for p in places.values()):
+            raise ValueError("not an allocator's memory: a place is not x, y, z, heading")
+        return cls(learned, finished, assignment, troubles, charges, charging, places)
 
 
 def remember(
@@ -77,8 +88,12 @@ def remember(
     troubles: Mapping[str, tuple[int, str]],
     charge: np.ndarray,
     charging: np.ndarray,
+    poses: np.ndarray,
 ) -> dict[str, Any]:
-    """Give what should survive a restart; assignment, charge and charging are (N,)."""
+    """Give what should survive a restart; assignment, charge and charging are (N,).
+
+    Poses are (N, 4), NaN where not known.
+    """
     robots, tasks = np.nonzero((efficacy.eta < 0.999) | (efficacy.failures > 0))
     return {
         "efficacy": [
@@ -101,4 +116,9 @@ def remember(
             for name, share in zip(model.robots, charge, strict=True)
         },
         "charging": [model.robots[i] for i in np.flatnonzero(charging)],
+        "places": {
+            name: [round(float(value), 3) for value in pose]
+            for name, pose in zip(model.robots, poses, strict=True)
+            if np.isfinite(pose).all()
+        },
     }

@@ -45,7 +45,8 @@ def notices(
     """
     names = model.robots
     for i in np.flatnonzero(~places.heard):
-        text = f"not heard for {places.age[i]:.1f} s" if places.known[i] else "never heard"
+        timed = np.isfinite(places.age[i])
+        text = f"not heard for {places.age[i]:.1f} s" if timed else "never heard"
         yield Notice(names[i], Level.WARN, text)
     for i in np.flatnonzero(places.heard & ~places.steady):
         text = f"its pose jumped by {places.jumped[i]:.1f} m: it stands until its poses agree"

@@ -213,19 +213,13 @@ class Saboteur:
         """A part of the team on the far side for 30 s: not heard, and hears nothing."""
         far = self.random.random(self.count) < 0.4
         self._lost_until[far] = now + 30.0
-        last: list[Observation] = []
-
-        def change(seen: Observation, step: int) -> dict[str, np.ndarray]:
-            last.append(seen)
-            return {
-                name: np.where(
-                    far if getattr(seen, name).ndim == 1 else far[:, None],
-                    getattr(last[0], name), getattr(seen, name),
-                )
-                for name in ("poses", "pose_times", "velocities", "charges", "charge_times")
-            }  # fmt: skip
-
-        self._spoil(now + 30.0, change)
+        self._spoil(
+            now + 30.0,
+            lambda seen, step: {
+                "pose_times": np.where(far, np.nan, seen.pose_times),
+                "charges": np.where(far, np.nan, seen.charges),
+            },
+        )
 
     def commands_lost(self, now: float) -> None:
         self._lost_until[self._one()] = now + self.random.uniform(0.1, 3.0)

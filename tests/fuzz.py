@@ -122,6 +122,7 @@ class Fuzz:
                 "troubles": {"rover_1: thermal camera": [2, "no picture"]},
                 "charges": dict.fromkeys(self.team.robots, 0.5),
                 "charging": list(self.team.robots)[:1],
+                "places": {robot: [1.0, 2.0, 0.0, 0.5] for robot in self.team.robots},
             },
         }
 

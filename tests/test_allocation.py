@@ -402,6 +402,22 @@ def test_a_restart_does_not_take_broken_or_empty_robots_for_good_ones():
     assert groups(again.wait(1.0))["gate"] == ("broken",)
 
 
+def test_after_a_restart_a_silent_robot_is_still_in_the_way():
+    """It may be heard never again; whoever drives through its last place would hit it."""
+    robots = [robot("driver", 0, 0), robot("silent", 8, 0, features=())]
+    team = team_of(robots, [watch("gate", 16, 0, needs={"scan": 1.0})])
+    crew = Crew(team)
+    crew.wait(0.2)
+    crew.silent.add("silent")
+    again = Crew(team)
+    again.silent.add("silent")
+    again.allocator.recall(json.loads(json.dumps(crew.allocator.memory())))
+    for _ in range(400):
+        decision = again.drive(0.1)
+        assert np.linalg.norm(again.poses[0, :2] - [8, 0]) > 0.8
+    assert {n.text for n in decision.notices if n.about == "silent"} == {"never heard"}
+
+
 def test_a_memory_of_another_team_is_passed_over():
     crew = Crew(team_of([robot("one")], [watch("gate", 3, 0)]))
     learned = {"robot": "stranger", "task": "gate", "value": 0.1, "failures": 1, "barred": True}

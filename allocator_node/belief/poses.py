@@ -27,9 +27,9 @@ class Places:
 
     Attributes:
         poses: x, y, z (m), heading (rad), carried to now, shape (N, 4); NaN: unknown.
-        known: Robots ever heard, shape (N,).
+        known: Robots ever heard, if only by an earlier run, shape (N,).
         heard: Robots heard within the timeout, shape (N,).
-        age: Age of the last pose, s, shape (N,); inf: never heard.
+        age: Age of the last pose, s, shape (N,); inf: not heard since the start.
         velocities: m/s three times, rad/s, shape (N, 4); 0 for robots not heard.
         jumped: How far the pose of a robot jumped that is not believed yet, m,
             shape (N,); 0 where poses follow from one another. Such a robot is where
@@ -99,8 +99,9 @@ class PoseBelief:
         self.times[fresh] = times[fresh]
 
         waiting &= ~settled
-        known = np.isfinite(self.times)
-        age = np.where(known, np.maximum(now - np.nan_to_num(self.times), 0.0), np.inf)
+        known = np.isfinite(self.poses[:, 0])
+        timed = np.isfinite(self.times)
+        age = np.where(timed, np.maximum(now - np.nan_to_num(self.times), 0.0), np.inf)
         heard = age <= timeout
         # A silent robot stands where it was last seen, within a circle that grows.
         driven = heard & ~waiting
@@ -112,8 +113,12 @@ class PoseBelief:
         far = np.where(waiting, np.maximum(np.nan_to_num(leap), 1e-9), 0.0)
         return Places(carried, known, heard, age, velocities, far, driven & ~settled)
 
+    def recall(self, robot: int, pose: tuple[float, ...]) -> None:
+        """Take up where an earlier run last saw a robot: it is an obstacle until it is heard."""
+        self.poses[robot] = pose
+
     def forget_times(self) -> None:
-        """Take the next poses as the first: the clock was set back."""
+        """Take the next poses as the first, for the clock was set back; places stay."""
         for times in (self.times, self._newest_times, self._jump_times):
             times[:] = np.nan
 
