@@ -60,7 +60,7 @@ setup(
         ("share/ament_index/resource_index/packages", [f"{NAME}/resource/{NAME}"]),
         (f"share/{NAME}", ["package.xml"]),
         (f"share/{NAME}/launch", sorted(glob("launch/*.launch.py"))),
-        (f"share/{NAME}/config", sorted(glob("config/*.yaml") + glob("config/*.rviz"))),
+        (f"share/{NAME}/config", sorted(glob("config/*.*"))),
     ],
     install_requires=[
         "annotated-types>=0.6",

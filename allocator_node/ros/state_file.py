@@ -86,7 +86,10 @@ class StateFile:
     def _write(self, text: str) -> None:
         self.path.parent.mkdir(parents=True, exist_ok=True)
         new = self.path.with_name(self.path.name + ".new")
-        with new.open("w", encoding="utf-8") as file:
+        # Never through a link that somebody left there, and for nobody else to write.
+        new.unlink(missing_ok=True)
+        handle = os.open(new, os.O_WRONLY | os.O_CREAT | os.O_EXCL, 0o600)
+        with open(handle, "w", encoding="utf-8") as file:
             file.write(text)
             file.flush()
             os.fsync(file.fileno())
