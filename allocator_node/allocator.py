@@ -5,13 +5,12 @@ from __future__ import annotations
 import time
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from .belief import EfficacyBelief, EnergyBelief, FeatureBelief, PoseBelief, TargetBelief
-from .belief.efficacy import Step
 from .belief.poses import Places
 from .charging import Charging, Crew, Errands
 from .decision import Decision
@@ -19,49 +18,19 @@ from .memory import Memory, remember
 from .model import Model
 from .notices import notices, shortfalls
 from .observation import MovedGoal, Observation, Orders
-from .program import (
-    Assigner,
-    Assignment,
-    Control,
-    ControlProblem,
-    Problem,
-    Safety,
-    SafetyRows,
-    price,
-    solve_control,
-)
-from .program.courtesy import make_way
+from .pilot import Motion, Pilot
+from .program import Assigner, Assignment, Problem, price
 from .program.formulate import Known, formulate
-from .program.guidance import Course, Guidance, Targets
-from .program.steering import Steering
-from .program.ways import Ways
+from .program.guidance import Targets
 from .reasons import Reasons, Situation
 from .settings import Settings
 from .tasks import Goals, Scene
 from .team import Team
+from .view import View
 from .work import Whereabouts, Work, scene_of
 
 LONGEST_STEP = 1.0
 """Longest time one step counts for; beyond it the loop was paused, s."""
-
-
-@dataclass(frozen=True)
-class _View:
-    """What is known in one period, before anything is decided.
-
-    Poses and points are those of ``places``, with zeros for robots never heard.
-    """
-
-    now: float
-    dt: float
-    places: Places
-    poses: np.ndarray
-    points: np.ndarray
-    jacobians: np.ndarray
-    health: np.ndarray
-    capability: np.ndarray
-    suitability: np.ndarray
-    topics: Mapping[str, tuple[np.ndarray, np.ndarray]]
 
 
 class Allocator:
@@ -95,11 +64,8 @@ class Allocator:
         self._now: float | None = None
         count = len(team.robots)
         self._topics = TargetBelief()
-        self._guidance = Guidance(count)
         self.assigner = Assigner(budget)
-        self._commands = np.zeros((count, 4))
         self._since = np.full(count, np.nan)
-        self._last: tuple[np.ndarray, np.ndarray, Course] | None = None
         self._work = Work(team)
         self._model = Model(team)
         self._poses = PoseBelief(self._model.fleet.fastest)
@@ -109,14 +75,7 @@ class Allocator:
         self._efficacy = EfficacyBelief(count, len(team.tasks))
         self._charging = Charging(self._model)
         self._reasons = Reasons(self._model, self._say_feature)
-        self._survey()
-
-    def _survey(self) -> None:
-        """Look at the site anew: its areas, and the distances to keep."""
-        self._safety = Safety(self.team, self._model, self._settings)
-        clearance = self._safety.reach + self._settings.margin
-        self._ways = Ways(self.team, clearance)
-        self._steering = Steering(self.team, self._model, clearance)
+        self._pilot = Pilot(team, self._model, self._settings)
 
     @property
     def team(self) -> Team:
@@ -131,7 +90,7 @@ class Allocator:
     @settings.setter
     def settings(self, settings: Settings) -> None:
         self._settings = settings
-        self._survey()
+        self._pilot.survey(self.team, self._model, settings)
 
     # -- one period ---------------------------------------------------------------
 
@@ -165,18 +124,20 @@ class Allocator:
         errands = self._charge(view, enough)
         with _timed(seconds, "control"):
             targets = self._targets(goals, errands, view.places.steady)
-            course, control, rows = self._control(view, targets)
-        self._remember(view, course, control)
+            motion = self._pilot.drive(
+                view, self._model, targets, self._insistence(), self.orders.hold, self._settings
+            )
         return self._decision(
-            view, found, targets, enough, problem, reallocations, control, rows, seconds, errands
+            view, found, targets, enough, problem, reallocations, motion, seconds, errands
         )
 
-    def _believe(self, observation: Observation, now: float) -> _View:
+    def _believe(self, observation: Observation, now: float) -> View:
         model, settings = self._model, self._settings
         dt = self.period if self._now is None else now - self._now
         if not 0 < dt <= LONGEST_STEP:
             # The clock jumped or the loop was paused: nothing is learned from the gap.
-            dt, self._last = self.period, None
+            dt = self.period
+            self._pilot.forget()
             self._features.forget_times(now)
         if self._now is not None and now < self._now:
             self._poses.forget_times()
@@ -189,11 +150,11 @@ class Allocator:
         poses = np.where(places.known[:, None], places.poses, 0.0)
         points = model.fleet.control_points(poses)
         self._energy.update(
-            observation, model, self._commands, points, now, dt, settings.battery_timeout
+            observation, model, self._pilot.commands, points, now, dt, settings.battery_timeout
         )
         self._learn(observation, places, points, now, dt)
         capability = model.capability(health)
-        return _View(
+        return View(
             now, dt, places, poses, points, model.fleet.jacobians(poses), health, capability,
             model.suitability(capability),
             self._topics.update(observation.targets, now, settings.pose_timeout),
@@ -208,19 +169,16 @@ class Allocator:
             if robot in self.team.robots and task in self.team.tasks:
                 i, m = model.robots.index(robot), model.tasks.index(task)
                 self._efficacy.outside(i, m, quality, settings)
-        if self._last is None:
+        progress = self._pilot.progress(points, now, dt)
+        if progress is None:
             return
-        former, implied, course = self._last
-        moved = points - former
-        expected = (course.to_goal * implied).sum(axis=1) * dt
-        measured = (course.to_goal * moved).sum(axis=1)
-        counted = places.moved & (course.demand > 0) & self.orders.driving
-        step = Step(now, expected, measured, counted)
-        self._efficacy.update(step, self._assignment, course.distance, dt, settings)
+        counted = progress.step.counted & places.moved & self.orders.driving
+        step = replace(progress.step, counted=counted)
+        self._efficacy.update(step, self._assignment, progress.distance, dt, settings)
 
-    def _scene(self, view: _View, m: int) -> Scene:
+    def _scene(self, view: View, m: int) -> Scene:
         members = np.flatnonzero((self._assignment == m) & view.places.heard)
-        reach = self._safety.reach[members].max(initial=0.0)
+        reach = self._pilot.safety.reach[members].max(initial=0.0)
         spacing = 2 * reach + 1.5 * self._settings.margin
         where = Whereabouts(
             self._model, view.poses, view.places.velocities, view.places.known,
@@ -231,7 +189,7 @@ class Allocator:
             where.find,
         )  # fmt: skip
 
-    def _formulate(self, view: _View, goals: list[Goals]) -> tuple[Problem, np.ndarray]:
+    def _formulate(self, view: View, goals: list[Goals]) -> tuple[Problem, np.ndarray]:
         known = Known(
             poses=view.poses,
             points=view.points,
@@ -251,9 +209,9 @@ class Allocator:
             banned=self._pairs(self.orders.bans),
             previous=self._assignment,
         )
-        return formulate(self._model, self._settings, known, goals, self._ways)
+        return formulate(self._model, self._settings, known, goals, self._pilot.ways)
 
-    def _trusted(self, view: _View) -> np.ndarray:
+    def _trusted(self, view: View) -> np.ndarray:
         """Tell where the specialization suffices, or would but for the features, (N, M)."""
         s = np.where(view.suitability > 0, view.suitability, 1.0) * self._efficacy.eta
         return (s >= self._settings.s_min) & ~self._efficacy.barred
@@ -266,7 +224,7 @@ class Allocator:
                 mask[self._model.robots.index(robot), self._model.tasks.index(task)] = True
         return mask
 
-    def _situation(self, view: _View, enough: np.ndarray, prices: np.ndarray) -> Situation:
+    def _situation(self, view: View, enough: np.ndarray, prices: np.ndarray) -> Situation:
         return Situation(
             known=view.places.known,
             heard=view.places.heard,
@@ -284,19 +242,19 @@ class Allocator:
             finished=self._work.finished(),
         )
 
-    def _take_up(self, before: np.ndarray, view: _View, goals: list[Goals]) -> None:
+    def _take_up(self, before: np.ndarray, view: View, goals: list[Goals]) -> None:
         """Hand the changed robots their new tasks, and these their new groups."""
         changed = np.flatnonzero(before != self._assignment)
         if not len(changed):
             return
         self._since[changed] = view.now
-        self._guidance.restart(changed)
+        self._pilot.restart(changed)
         self._efficacy.reassigned(changed, before[changed], view.now, self._settings)
         groups = (set(before[changed]) | set(self._assignment[changed])) - {-1}
         for m in groups | self._work.keeping_to(groups):
             goals[m] = self._work.advance(int(m), self._scene(view, m))
 
-    def _charge(self, view: _View, enough: np.ndarray) -> Errands:
+    def _charge(self, view: View, enough: np.ndarray) -> Errands:
         """Send robots without a task to their docks where their energy is low."""
         pinned = self._pairs(self.orders.pins)
         wanted = (view.suitability > 0) & self._work.active()
@@ -310,9 +268,9 @@ class Allocator:
             exhausted=wanted.any(axis=1) & ~(wanted & enough).any(axis=1),
             above=self._energy.charge - self._model.reserve,
             called=(pinned & wanted & enough).any(axis=1),
-            reach=self._safety.reach,
+            reach=self._pilot.safety.reach,
         )
-        return self._charging.update(crew, self._settings, self._safety.clear)
+        return self._charging.update(crew, self._settings, self._pilot.safety.clear)
 
     def _targets(self, goals: list[Goals], errands: Errands, steady: np.ndarray) -> Targets:
         """Give the goal of each robot's own task or errand; those not steady have none now."""
@@ -334,59 +292,6 @@ class Allocator:
         busy = ((self._assignment >= 0) | sent) & steady
         return Targets(busy, points, velocities, facing, pace, tolerance)
 
-    def _control(self, view: _View, targets: Targets) -> tuple[Course, Control, SafetyRows]:
-        model, settings, places = self._model, self._settings, view.places
-        # Robots with their own navigation take goals, no commands.
-        obeys = places.steady & ~model.navigates
-        lead = self._ways.lead(view.points, targets.points[:, None], targets.busy[:, None])
-        course = self._guidance.course(model, targets, view.poses, view.points, lead, settings)
-        course = self._steering.course(
-            course,
-            model,
-            targets,
-            view.poses,
-            view.points,
-            places.velocities,
-            places.known,
-            self._guidance.held,
-            self._guidance.aside,
-            settings,
-            view.dt,
-        )
-        course = make_way(
-            course,
-            view.points,
-            obeys & ~targets.busy,
-            model.fleet.cruise,
-            self._safety.reach + settings.margin / 2,
-            settings.height_clearance,
-        )
-        lowest, highest = model.fleet.command_box(
-            self._commands, view.dt, view.poses[:, 2], settings.gamma_s, self._steering.gear
-        )
-        still = ~obeys | self.orders.hold
-        lowest[still] = highest[still] = 0.0
-        silent_for = np.where(places.known & ~places.steady, places.age, 0.0)
-        growth = np.minimum(model.fleet.max_speed * silent_for, settings.silent_reach)
-        drift = np.where(model.navigates[:, None], places.velocities[:, :2], 0.0)
-        rows = self._safety.rows(view.points, places.known, obeys, growth, drift)
-        control = solve_control(
-            ControlProblem(
-                jacobians=view.jacobians,
-                limits=model.fleet.limits,
-                lowest=lowest,
-                highest=highest,
-                gear=self._steering.gear,
-                round_limit=model.fleet.round_limit,
-                away=course.away,
-                demand=np.where(still | course.exact, 0.0, course.demand),
-                preferred=course.preferred,
-                rows=rows,
-                slack_weight=settings.slack_weight * self._insistence(),
-            )
-        )
-        return course, control, rows
-
     def _insistence(self) -> np.ndarray:
         """Give how much each robot insists on its way: double for each priority class, (N,)."""
         busy = self._assignment >= 0
@@ -394,33 +299,17 @@ class Allocator:
         priority[busy] = self._model.priority[self._assignment[busy]]
         return 2.0 ** (priority - 2)
 
-    def _remember(self, view: _View, course: Course, control: Control) -> None:
-        """Keep what the next step's learning compares its poses with."""
-        self._commands = control.commands.copy()
-        implied = np.matmul(view.jacobians, control.commands[:, :, None])[:, :, 0]
-        own = self._model.navigates & view.places.steady & (not self.orders.hold)
-        # Their own navigation is expected to bring them on at their nominal speed.
-        implied[own] = course.to_goal[own] * course.demand[own, None]
-        self._commands[own, 0] = course.demand[own]
-        if not self.orders.hold:
-            fleet = self._model.fleet
-            free = np.matmul(view.jacobians, control.free[:, :, None])[:, :, 0]
-            free[~fleet.steered & np.isinf(fleet.speed_up)] = np.nan
-            self._guidance.notice(course, implied, free, view.dt)
-        self._last = (view.points, implied, course)
-
     # -- what comes out -----------------------------------------------------------
 
     def _decision(
         self,
-        view: _View,
+        view: View,
         found: Assignment,
         targets: Targets,
         enough: np.ndarray,
         problem: Problem,
         reallocations: tuple,
-        control: Control,
-        rows: SafetyRows,
+        motion: Motion,
         seconds: Mapping[str, float],
         errands: Errands,
     ) -> Decision:
@@ -431,7 +320,7 @@ class Allocator:
             tasks=model.tasks,
             assignment=found.task.copy(),
             since=self._since.copy(),
-            commands=control.commands,
+            commands=motion.control.commands,
             goals=targets.points,
             facing=targets.facing,
             navigates=model.navigates,
@@ -447,12 +336,16 @@ class Allocator:
             activity=self._activity(view, errands),
             reallocations=reallocations,
             shortfalls=shortfalls(model, found),
-            notices=tuple(notices(model, view.places, enough, self._charging.on, control, rows)),
+            notices=tuple(
+                notices(
+                    model, view.places, enough, self._charging.on, motion.control, motion.rows
+                )
+            ),
             seconds=seconds,
             gap=found.gap,
         )
 
-    def _activity(self, view: _View, errands: Errands) -> tuple[str, ...]:
+    def _activity(self, view: View, errands: Errands) -> tuple[str, ...]:
         """Say in a word what each robot does."""
         return tuple(
             "silent" if not heard
@@ -494,7 +387,7 @@ class Allocator:
             [position.get(int(m), -1) for m in self._assignment], dtype=int
         )
         self._model = model
-        self._last = None
+        self._pilot.forget()
 
     def _move(self, moved: MovedGoal) -> None:
         task = self.team.tasks.get(moved.task)

@@ -21,6 +21,8 @@ LEVELS = (
     {"team_file", "model"},
     {"belief"},
     {"program"},
+    {"view"},
+    {"pilot"},
     {"charging", "memory", "notices", "reasons", "work"},
     {"allocator"},
     {"sim"},
