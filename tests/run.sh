@@ -6,4 +6,4 @@ set -eu
 
 cd "$ROOT"
 echo "Tests on ROS 2 $distro ($source), $("$PYTHON" -V)."
-exec "$PYTHON" -m pytest -n 2 --dist loadfile "$@"
+exec "$PYTHON" -m pytest -n 2 --dist loadfile --no-loadscope-reorder "$@"

@@ -475,7 +475,7 @@ def test_forgetting():
 
 
 @pytest.mark.slow
-@pytest.mark.campaign(slice=2, whole=10)
+@pytest.mark.campaign(slice=1, whole=10)
 def test_pose_noise_is_not_taken_for_inability(seed):
     """5 cm and 2° at 10 Hz, ten minutes of honest driving: nothing below 0.9.
 

@@ -10,7 +10,7 @@ from allocator_node.sim.rehearsal import rehearse
 SECONDS = 300.0
 
 
-@pytest.mark.campaign(slice=2, whole=50)
+@pytest.mark.campaign(slice=1, whole=50)
 def test_no_contact(seed):
     team, world = mission(seed, SECONDS)
     rehearsal = rehearse(team, world, SECONDS, seed=seed)

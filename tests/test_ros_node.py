@@ -339,6 +339,8 @@ def test_the_takeover_after_a_failed_feature_is_in_the_next_period(running: Benc
 
     waits, zeros = [], []
     for repetition in range(20):
+        # The commands of one period arrive one by one: in between, both or none may move.
+        until(lambda: len(busy(rovers)) == 1, "one rover drives")
         (failing,) = busy(rovers)
         spare = next(robot for robot in CAMERA if robot != failing)
         time.sleep(0.03 + 0.007 * repetition)  # at any phase of the period
