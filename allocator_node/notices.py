@@ -11,6 +11,9 @@ from .decision import Level, Notice, Shortfall
 from .model import Model
 from .program import Assignment, Control, SafetyRows
 
+NOTICED = 0.05
+"""How far into a margin a robot must be to be named, m: less is pose noise."""
+
 
 def shortfalls(model: Model, found: Assignment) -> tuple[Shortfall, ...]:
     """Name what active tasks lack: robots first, then amounts of capabilities."""

@@ -11,6 +11,7 @@ from .model import Model
 from .program import Control, ControlProblem, Safety, SafetyRows, solve_control
 from .program.courtesy import make_way
 from .program.guidance import Course, Guidance, Targets
+from .program.safety import rolled
 from .program.steering import Steering
 from .program.ways import Ways
 from .settings import Settings
@@ -115,7 +116,7 @@ class Pilot:
         still = ~obeys | hold
         lowest[still] = highest[still] = 0.0
         silent_for = np.where(places.known & ~places.steady, places.age, 0.0)
-        growth = np.minimum(model.fleet.max_speed * silent_for, settings.silent_reach)
+        growth = rolled(model.fleet.max_speed, silent_for, settings)
         drift = np.where(model.navigates[:, None], places.velocities[:, :2], 0.0)
         rows = self.safety.rows(view.points, places.known, obeys, growth, drift)
         control = solve_control(

@@ -27,7 +27,7 @@ class Settings(Checked):
         health_timeout: Age from which a diagnostic counts as STALE, s.
         pose_timeout: Age of the last pose from which a robot counts as silent, s.
         battery_timeout: Age from which the charge is counted on from the last value, s.
-        silent_reach: How far a silent robot is assumed to roll on at most, m.
+        silent_reach: How far a robot is assumed to roll on at most once it is silent, m.
         efficacy_law: "ratio" (measured over expected progress) or the published
             "additive" law.
         efficacy_gain: β of the additive law, 1/m².
@@ -54,7 +54,7 @@ class Settings(Checked):
     health_timeout: Positive = 5.0
     pose_timeout: Positive = 1.0
     battery_timeout: Positive = 30.0
-    silent_reach: NonNegative = 2.0
+    silent_reach: NonNegative = 1.0
     efficacy_law: Literal["ratio", "additive"] = "ratio"
     efficacy_gain: NonNegative = 0.05
     efficacy_window: Positive = 4.0

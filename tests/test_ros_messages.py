@@ -204,7 +204,7 @@ def test_nothing_stale_stays_in_a_viewer() -> None:
 
 
 def test_the_circle_of_a_silent_robot_grows_as_the_safety_rows_say() -> None:
-    """Speed times silence, up to ``silent_reach``, around its body."""
+    """Speed times silence, ``silent_reach`` at most once it is silent, around its body."""
     board, settings = markers.MarkerBoard(TEAM), Settings()
     board.note(decision())
     robot = list(TEAM.robots.values())[1]
@@ -213,7 +213,9 @@ def test_the_circle_of_a_silent_robot_grows_as_the_safety_rows_say() -> None:
         gone = replace(decision(heard=np.array([True, False])), time=decision().time + later)
         (circle,) = (m for m in board.markers(gone, settings).markers if m.ns == "silent")
         silent_for = later + settings.pose_timeout
-        grown = min(robot.drive.max_speed * silent_for, settings.silent_reach)
+        speed = robot.drive.max_speed
+        most = speed * settings.pose_timeout + settings.silent_reach
+        grown = min(speed * silent_for, most)
         assert circle.scale.x == pytest.approx(2 * (robot.radius + grown))
         radii.append(circle.scale.x)
     assert radii == sorted(radii)

@@ -87,6 +87,20 @@ class SafetyRows:
         return (self.normal * relative).sum(axis=1) - self.bound
 
 
+def rolled(speed: np.ndarray, silent_for: np.ndarray, settings: Settings) -> np.ndarray:
+    """Give how far silent robots may be from their last pose, m, shape (N,).
+
+    A robot moves on under our commands until it counts as silent, and from then on
+    no farther than ``silent_reach``.
+
+    Args:
+        speed: Highest speeds, m/s, shape (N,).
+        silent_for: Time since the last pose, s, shape (N,); 0 for robots heard.
+        settings: Weights and times.
+    """
+    return np.minimum(speed * silent_for, speed * settings.pose_timeout + settings.silent_reach)
+
+
 class Safety:
     """Makes the rows of one period; keeps what does not change of a team and its site.
 

@@ -11,6 +11,7 @@ from std_msgs.msg import ColorRGBA, Header
 from visualization_msgs.msg import Marker, MarkerArray
 
 from ..decision import Decision
+from ..program.safety import rolled
 from ..settings import Settings
 from ..team import Polygon, Robot, Team
 from .conversions import pose_message, stamp_of
@@ -73,8 +74,8 @@ class MarkerBoard:
     def _growth(self, decision: Decision, settings: Settings) -> np.ndarray:
         """Give how far each silent robot may have rolled on, m, (N,), as the safety rows do."""
         silent_for = decision.time - self._heard_at + settings.pose_timeout
-        rolled = np.minimum(self._fastest * np.nan_to_num(silent_for), settings.silent_reach)
-        return np.where(decision.heard, 0.0, rolled)
+        growth = rolled(self._fastest, np.nan_to_num(silent_for), settings)
+        return np.where(decision.heard, 0.0, growth)
 
     def clear(self) -> MarkerArray:
         """Give the message that takes everything away."""
