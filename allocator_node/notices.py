@@ -63,7 +63,7 @@ def notices(
     for i in np.flatnonzero(control.stopped):
         yield Notice(names[i], Level.ERROR, "stopped: no safe command could be found")
     seen = set()
-    near = rows.violated & (rows.room < 0)
+    near = rows.violated & (rows.room < -NOTICED)
     for i, other in zip(rows.first[near], rows.obstacle[near], strict=True):
         if (i, other) in seen or (other >= 0 and not places.steady[other]):
             continue
