@@ -32,6 +32,9 @@ from .work import Whereabouts, Work, scene_of
 LONGEST_STEP = 1.0
 """Longest time one step counts for; beyond it the loop was paused, s."""
 
+INSISTENCE = 1.4
+"""How much more a robot insists on its way with each priority class of its task."""
+
 
 class Allocator:
     """Decides who does what and how everybody moves; knows nothing of ROS.
@@ -293,11 +296,11 @@ class Allocator:
         return Targets(busy, points, velocities, facing, pace, tolerance)
 
     def _insistence(self) -> np.ndarray:
-        """Give how much each robot insists on its way: double for each priority class, (N,)."""
+        """Give how much each robot insists on its way: more with each priority class, (N,)."""
         busy = self._assignment >= 0
         priority = np.zeros(len(busy), dtype=int)
         priority[busy] = self._model.priority[self._assignment[busy]]
-        return 2.0 ** (priority - 2)
+        return INSISTENCE ** (priority - 2)
 
     # -- what comes out -----------------------------------------------------------
 

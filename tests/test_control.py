@@ -15,7 +15,7 @@ from allocator_node.drives import Aerial, Carlike, Differential, Holonomic
 from allocator_node.model import Model
 from allocator_node.program import ControlProblem, Safety, SafetyRows, solve_control, solvers
 from allocator_node.program import control as control_module
-from allocator_node.program.control import CORNERS, TOO_NEAR
+from allocator_node.program.control import CORNERS, OFF_SITE, TOO_NEAR
 from allocator_node.settings import Settings
 from allocator_node.team import KeepOut, Robot
 
@@ -126,9 +126,8 @@ def dense(
             [2 * R.ravel(), 2 * p.slack_weight, np.full(len(eased), 2.0)]
         )
     )
-    q = np.concatenate(
-        [(-2 * R * p.preferred).ravel(), np.zeros(count), np.full(len(eased), TOO_NEAR)]
-    )
+    prices = np.where(rows.obstacle[eased] < 0, OFF_SITE, TOO_NEAR)
+    q = np.concatenate([(-2 * R * p.preferred).ravel(), np.zeros(count), prices])
     unit = np.eye(len(q))
     A, b = [], []
 

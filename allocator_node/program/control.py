@@ -11,7 +11,10 @@ from .safety import CALM, SafetyRows
 from .solvers import QP, SolverFailure, solve_qp
 
 TOO_NEAR = 1e3
-"""Price of each m/s by which a row that is violated already is missed."""
+"""Price of each m/s by which a row between robots that is violated already is missed."""
+
+OFF_SITE = 4e3
+"""The same for edges of areas: robots that crowd each other push nobody over one."""
 
 KEPT = 1e-4
 """How far a solved row may be missed before its robots are stopped, m/s."""
@@ -106,9 +109,9 @@ def _vouched(
     """Check every command, whoever found it, and let robots stand where one does not hold.
 
     Commands must be finite and within the limits, and keep every row. Where the
-    distance is not kept already, robots must not come nearer faster than
-    :data:`~allocator_node.program.safety.CALM`: between two others it may be that
-    leaving the one means nearing the other.
+    distance is not kept already, robots must not come nearer faster than twice
+    :data:`~allocator_node.program.safety.CALM`: between two others, or an area and
+    another, it may be that leaving the one means nearing the other.
 
     Args:
         problem: The QP.
@@ -126,7 +129,7 @@ def _vouched(
     good &= (problem.gear == 0) | (np.abs(share[:, 3]) <= np.abs(share[:, 0]) + KEPT)
     commands = np.where(good[:, None], commands, 0.0)
     slackness = rows.slackness(_velocities(problem, commands))
-    kept = np.where(rows.violated, slackness + rows.bound >= -CALM, slackness >= -KEPT)
+    kept = np.where(rows.violated, slackness + rows.bound >= -2 * CALM, slackness >= -KEPT)
     wrong = np.concatenate([np.flatnonzero(~good), rows.first[~kept]])
     if len(wrong):
         stopped = stopped | _bound_to(rows, wrong, count)
@@ -230,7 +233,9 @@ def joint(problem: ControlProblem, robots: np.ndarray) -> Joint:
     scale = np.where(has, limits, 1.0)
     linear = np.zeros(size)
     linear[:shares] = -2.0 * (problem.preferred[robots] / scale)[has]
-    linear[shares + moving.sum() :] = TOO_NEAR
+    linear[shares + moving.sum() :] = np.where(
+        rows.obstacle[index][eased] < 0, OFF_SITE, TOO_NEAR
+    )
     lowest = np.concatenate(
         [(problem.lowest[robots] / scale)[has], np.zeros(size - shares)]
     )
