@@ -70,7 +70,7 @@ def default(kind: type, name: str) -> str:
 
 
 def commands() -> Iterator[list[str]]:
-    """Give the commands of the shell blocks and of the session transcripts, as words."""
+    """Give the commands of the shell blocks and of the examples of a terminal, as words."""
     for block in blocks("sh"):
         for line in block.replace("\\\n", " ").splitlines():
             if words := shlex.split(line, comments=True):
