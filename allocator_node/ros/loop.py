@@ -52,6 +52,10 @@ STOP_REPEATS = 3
 """The last command is sent so often: a robot may listen with best effort."""
 
 
+DISCOVERY = 3.0
+"""How long robots that have a task may take to be discovered after an activation, s."""
+
+
 class Occupied(Exception):
     """Somebody else commands a robot of ours."""
 
@@ -121,7 +125,7 @@ class Loop:
         if self._options.command_robots:
             self._take_over()
         self._renew()
-        self._await_robots()
+        self._await_robots(max(DISCOVERY, self.allocator.settings.pose_timeout))
         if self._options.record_to:
             self._record(Path(self._options.record_to))
         self.active = True
@@ -267,11 +271,11 @@ class Loop:
         self._inbox.forget_times()
         if by < -SET_BACK:
             self._renew()
-        self._await_robots()
+        self._await_robots(self.allocator.settings.pose_timeout)
 
-    def _await_robots(self) -> None:
+    def _await_robots(self, seconds: float) -> None:
         """Give robots that have a task the time to be heard, before others get it."""
-        self._awaited_until = time.monotonic() + self.allocator.settings.pose_timeout
+        self._awaited_until = time.monotonic() + seconds
 
     def _awaits(self, observation: Observation) -> bool:
         """Tell whether a robot that has a task may still be heard in time."""
