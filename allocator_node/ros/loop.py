@@ -51,7 +51,6 @@ SEARCH_SHARE = 0.1
 STOP_REPEATS = 3
 """The last command is sent so often: a robot may listen with best effort."""
 
-
 DISCOVERY = 3.0
 """How long robots that have a task may take to be discovered after an activation, s."""
 
