@@ -121,7 +121,7 @@ def test_a_child_that_fails_is_told_with_its_last_lines(tmp_path, monkeypatch):
     while child.status is None:
         time.sleep(0.02)
     with pytest.raises(team_demo.ChildFailed, match=r"(?s)status 3.*the valve is stuck"):
-        team_demo.check([child])
+        team_demo.check([child], lambda: False)
 
 
 def test_the_demo_tells_a_wrong_file_and_starts_nothing(tmp_path, capsys):

@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import argparse
 import os
-import signal
 import sys
 import time
 from collections.abc import Callable, Mapping, Sequence
 from contextlib import ExitStack
 from datetime import datetime
+from functools import partial
 from pathlib import Path
 
 from rich.console import Console
@@ -63,7 +63,6 @@ def main(arguments: Sequence[str] | None = None) -> int:
     out.mkdir(parents=True, exist_ok=True)
     environment = ros_environment()
     os.environ.update(environment)
-    signal.signal(signal.SIGTERM, interrupt)
     screen.print(
         f"{len(team.robots)} robots, {len(team.tasks)} tasks, {asked.seconds:.0f} s; "
         f"ROS_DOMAIN_ID={environment['ROS_DOMAIN_ID']}, on this machine only; logs in {out}"
@@ -71,7 +70,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     board = Board()
     try:
         run(board, team_file, world_file, asked.seconds, out, environment, screen)
-    except KeyboardInterrupt:
+    except Interrupted:
         screen.print("interrupted")
         return 130
     except ChildFailed as failure:
@@ -96,25 +95,27 @@ def run(
 
     Raises:
         ChildFailed: A child process ended before the time was over.
+        Interrupted: A signal asked to end.
     """
+    from ..ros.ending import Ending
+
+    ending = Ending()
     simulated = [str(path) for path in (team_file, world_file) if path]
     commands = {
         "team_sim": simulated, "allocator": ["--team", str(team_file), "--autostart"]
     }
     with ExitStack() as stack:
-        try:
-            children = []
-            for command, arguments in commands.items():
-                child = Child(command, arguments, out / f"{command}.log", environment)
-                stack.callback(child.stop)
-                children.append(child)
-            stack.callback(listen(board))
-            stack.callback(record(team_file, out / RECORDING))
-            watch(board, children, seconds, screen)
-        finally:
-            # Nothing interrupts the ending of the children.
-            for sign in (signal.SIGINT, signal.SIGTERM):
-                signal.signal(sign, signal.SIG_IGN)
+        children = []
+        for command, arguments in commands.items():
+            child = Child(command, arguments, out / f"{command}.log", environment)
+            stack.callback(child.stop)
+            children.append(child)
+        stack.callback(listen(board))
+        stack.callback(record(team_file, out / RECORDING))
+        go_on = partial(check, children, lambda: ending.asked)
+        wait_for_life(board, children[-1], go_on)
+        show = redraw if screen.is_terminal else print_lines
+        show(board, go_on, seconds, screen)
 
 
 def parser() -> argparse.ArgumentParser:
@@ -138,11 +139,6 @@ def ros_environment() -> dict[str, str]:
         "ROS_DOMAIN_ID": str(20 + os.getpid() % 71),
     }
     return {**defaults, **os.environ}
-
-
-def interrupt(*_: object) -> None:
-    """Turn a request to end into the interrupt that ends the children first."""
-    raise KeyboardInterrupt
 
 
 def record(team_file: Path, path: Path) -> Callable[[], None]:
@@ -190,30 +186,41 @@ class ChildFailed(Exception):
         super().__init__(f"{child.name} {what}; the end of {child.log}:\n{lines}")
 
 
-def watch(board: Board, children: Sequence[Child], seconds: float, screen: Console) -> None:
-    """Show the board until the time is over.
+class Interrupted(Exception):
+    """A signal asked the demo to end."""
+
+
+def check(children: Sequence[Child], ended: Callable[[], bool]) -> None:
+    """Raise where the run cannot go on.
 
     Raises:
-        ChildFailed: A child process ended before the time was over.
+        ChildFailed: A child process is no longer there.
+        Interrupted: A signal asked to end.
     """
-    began = time.monotonic()
-    while not board.rows:
-        check(children)
-        if time.monotonic() - began > STARTUP:
-            raise ChildFailed(children[-1], f"published no assignments within {STARTUP:.0f} s")
-        time.sleep(0.1)
-    show = redraw if screen.is_terminal else print_lines
-    show(board, children, seconds, screen)
-
-
-def check(children: Sequence[Child]) -> None:
-    """Raise where a child process is no longer there."""
+    if ended():
+        raise Interrupted
     for child in children:
         if child.status is not None:
             raise ChildFailed(child, f"ended with status {child.status}")
 
 
-def redraw(board: Board, children: Sequence[Child], seconds: float, screen: Console) -> None:
+def wait_for_life(board: Board, allocator: Child, go_on: Callable[[], None]) -> None:
+    """Wait for the allocator's first assignments.
+
+    Raises:
+        ChildFailed: They did not come.
+    """
+    began = time.monotonic()
+    while not board.rows:
+        go_on()
+        if time.monotonic() - began > STARTUP:
+            raise ChildFailed(allocator, f"published no assignments within {STARTUP:.0f} s")
+        time.sleep(0.1)
+
+
+def redraw(
+    board: Board, go_on: Callable[[], None], seconds: float, screen: Console
+) -> None:
     """Redraw the whole view a few times a second."""
     progress = Progress(
         BarColumn(bar_width=60), TextColumn("{task.completed:.0f} of {task.total:.0f} s")
@@ -223,7 +230,7 @@ def redraw(board: Board, children: Sequence[Child], seconds: float, screen: Cons
     width = min(screen.width, WIDTH)
     with Live(console=screen, auto_refresh=False, transient=True) as live:
         while (t := time.monotonic() - began) < seconds:
-            check(children)
+            go_on()
             progress.update(bar, completed=t)
             with board.lock:
                 view = live_view(board.rows, list(board.changes), board.lack.now, progress, width)
@@ -231,11 +238,13 @@ def redraw(board: Board, children: Sequence[Child], seconds: float, screen: Cons
             time.sleep(0.2)
 
 
-def print_lines(board: Board, children: Sequence[Child], seconds: float, screen: Console) -> None:
+def print_lines(
+    board: Board, go_on: Callable[[], None], seconds: float, screen: Console
+) -> None:
     """Print a line for each reallocation, and one of state now and then."""
     began, printed, due = time.monotonic(), 0, 1.0
     while (t := time.monotonic() - began) < seconds:
-        check(children)
+        go_on()
         with board.lock:
             rows, changes, lack = board.rows, board.changes[printed:], board.lack.now
         for change in changes:
