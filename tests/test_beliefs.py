@@ -159,6 +159,53 @@ def test_two_localizations_in_turn_never_settle():
         assert places.heard[0] == (now < 1.05)
 
 
+def begun_anew(how):
+    """Give a belief for which the robot at (0, 0) begins anew: no time is known any more."""
+    belief = PoseBelief(FASTEST)
+    if how == "restart":
+        belief.recall(0, (0.0, 0.0, 0.0, 0.0))
+        return belief
+    belief.update(seen([0, 0, 0, 0], 400.0), 400.0, 1.0)
+    belief.update(seen([30, 0, 0, 0], 400.1), 400.1, 1.0)
+    if how == "clock set back":
+        belief.forget_times()
+    return belief
+
+
+BEGINNINGS = [("restart", 0.0), ("clock set back", 300.0), ("future", 300.0), ("silence", 460.0)]
+
+
+@pytest.mark.parametrize("how, start", BEGINNINGS)
+def test_two_localizations_never_settle_after_a_new_beginning_either(how, start):
+    """Nothing but the last good place tells which of the two is wrong."""
+    belief = begun_anew(how)
+    for step in range(40):
+        now = start + 0.1 * step
+        places = belief.update(seen([30.0 * (step % 2 == 0), 0, 0, 0], now), now, 1.0)
+        assert not places.steady[0]
+        np.testing.assert_allclose(places.poses, [[0, 0, 0, 0]])
+
+
+@pytest.mark.parametrize("how, start", BEGINNINGS)
+def test_after_a_new_beginning_a_robot_near_its_last_place_counts_at_once(how, start):
+    belief = begun_anew(how)
+    near = [1.5 * 2 * 0.9, 0, 0, 0]  # what it may have rolled
+    if how == "silence":  # its last pose was far away: that one is compared
+        belief.update(seen(near, start), start, 1.0)
+        start += 0.8
+    places = belief.update(seen(near, start), start, 1.0)
+    assert places.steady[0]
+    np.testing.assert_allclose(places.poses, [near])
+
+
+def test_a_robot_carried_away_while_silent_counts_once_it_has_settled():
+    belief = PoseBelief(FASTEST)
+    belief.update(seen([0, 0, 0, 0], 0.0), 0.0, 1.0)
+    for now in np.arange(60.0, 60.65, 0.1):
+        assert not belief.update(seen([30, 0, 0, 0], now), now, 1.0).steady[0]
+    assert belief.update(seen([30, 0, 0, 0], 60.71), 60.71, 1.0).steady[0]
+
+
 @pytest.mark.parametrize("hz", [1.5, 5.0, 50.0])
 def test_driving_downhill_and_small_corrections_are_no_jumps(hz):
     """1.5 times the highest speed, and 0.9 m at once: common practice of a map match."""

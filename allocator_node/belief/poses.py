@@ -57,7 +57,7 @@ class PoseBelief:
     A pose the robot cannot have reached since the last one, however it was
     driven or pushed, is a localization that was reset, or wrong. The last good
     pose stays, and ages, until the new ones have followed from one another for
-    :data:`SETTLED` seconds.
+    :data:`SETTLED` seconds. Silence excuses no leap: who gets no commands stops.
     """
 
     def __init__(self, fastest: np.ndarray) -> None:
@@ -82,9 +82,12 @@ class PoseBelief:
         times = np.where(np.isfinite(observation.poses).all(axis=1), observation.pose_times, np.nan)
         # A clock that was set back leaves poses from the future: they are forgotten.
         future = self._newest_times > now + timeout
-        self.times[future] = self._newest_times[future] = self._jump_times[future] = np.nan
+        self._begin_anew(future)
         news = np.isfinite(times) & ~(times <= self._newest_times) & (times <= now + timeout)
-        jumped = news & self._leaps(observation.poses, times)
+        jumped = news.copy()
+        jumped[news] = self._leaps(news, observation.poses, times, 2 * timeout)
+        # Silence settles nothing: whoever waits after it begins to wait.
+        jumped |= np.isfinite(self._jump_times) & (times - self._newest_times > timeout)
         self._jump_times[jumped] = times[jumped]
         self._newest[news] = observation.poses[news]
         self._newest_times[news] = times[news]
@@ -115,20 +118,37 @@ class PoseBelief:
 
     def recall(self, robot: int, pose: tuple[float, ...]) -> None:
         """Take up where an earlier run last saw a robot: it is an obstacle until it is heard."""
-        self.poses[robot] = pose
+        self.poses[robot] = self._newest[robot] = pose
 
     def forget_times(self) -> None:
-        """Take the next poses as the first, for the clock was set back; places stay."""
-        for times in (self.times, self._newest_times, self._jump_times):
-            times[:] = np.nan
+        """Take the next poses as news, for the clock was set back; places stay."""
+        self._begin_anew(np.ones(len(self.times), dtype=bool))
 
-    def _leaps(self, poses: np.ndarray, times: np.ndarray) -> np.ndarray:
-        """Tell which poses (N, 4) no robot can have reached since its newest one, (N,)."""
-        step = (times - self._newest_times)[:, None]
-        moved = np.where(np.isfinite(step), poses - self._newest, 0.0)
+    def _begin_anew(self, robots: np.ndarray) -> None:
+        """Forget the times of robots (N,), and every pose that is not believed."""
+        self.times[robots] = self._newest_times[robots] = self._jump_times[robots] = np.nan
+        self._newest[robots] = self.poses[robots]
+
+    def _leaps(
+        self, robots: np.ndarray, poses: np.ndarray, times: np.ndarray, longest: float
+    ) -> np.ndarray:
+        """Tell which of robots (N,) cannot have reached their poses since their newest ones.
+
+        Args:
+            robots: Robots asked about; n of them.
+            poses: New poses, finite for them, shape (N, 4).
+            times: Their times, s, shape (N,).
+            longest: Longest time a robot may have moved unheard, s.
+
+        Returns:
+            The answers, shape (n,).
+        """
+        before = self._newest[robots]
+        step = np.fmin(times - self._newest_times, longest)[robots, None]
+        moved = np.where(np.isfinite(before), poses[robots] - before, 0.0)
         turn = np.abs(np.angle(np.exp(1j * moved[:, 3])))
         way = np.column_stack([np.linalg.norm(moved[:, :3], axis=1), turn])
-        return (way > CORRECTION + self.fastest * step).any(axis=1)
+        return (way > CORRECTION + self.fastest[robots] * step).any(axis=1)
 
     def _learn_velocity(
         self, observation: Observation, times: np.ndarray, fresh: np.ndarray
