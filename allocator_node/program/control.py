@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -54,6 +55,25 @@ class ControlProblem:
     rows: SafetyRows
     slack_weight: np.ndarray
 
+    @cached_property
+    def scale(self) -> np.ndarray:
+        """Limits to divide by: 1 where a robot lacks the axis, shape (N, 4)."""
+        return np.where(self.limits > 0, self.limits, 1.0)
+
+    @cached_property
+    def speed(self) -> np.ndarray:
+        """Velocity of each control point by share of each axis, m/s, shape (N, 3, 4)."""
+        return self.jacobians * self.limits[:, None, :]
+
+    @cached_property
+    def reach(self) -> np.ndarray:
+        """Closing speed each axis brings at its limit, m/s, shape (N, 4)."""
+        return -np.einsum("ni,nij->nj", self.away, self.speed)
+
+    def velocities(self, commands: np.ndarray) -> np.ndarray:
+        """Give the velocities of the control points under commands (N, 4), m/s, (N, 3)."""
+        return np.einsum("nij,nj->ni", self.jacobians, commands)
+
 
 @dataclass(frozen=True)
 class Control:
@@ -89,7 +109,7 @@ def solve_control(problem: ControlProblem) -> Control:
     rows = problem.rows
     if not len(rows):
         return Control(*_vouched(problem, free, solved.copy()), free, solved)
-    broken = rows.slackness(_velocities(problem, free)) < -1e-9
+    broken = rows.slackness(problem.velocities(free)) < -1e-9
     solved = _bound_to(rows, rows.first[broken], count)
     commands, stopped = free.copy(), np.zeros(count, dtype=bool)
     if solved.any():
@@ -122,13 +142,13 @@ def _vouched(
         Commands, shape (N, 4), and who stands, shape (N,).
     """
     rows, count = problem.rows, len(commands)
-    within = (commands >= problem.lowest - KEPT) & (commands <= problem.highest + KEPT)
-    speed = np.linalg.norm(commands[:, :2], axis=1)
-    good = within.all(axis=1) & (~problem.round_limit | (speed <= problem.limits[:, 0] + KEPT))
-    share = np.divide(commands, problem.limits, np.zeros_like(commands), where=problem.limits > 0)
-    good &= (problem.gear == 0) | (np.abs(share[:, 3]) <= np.abs(share[:, 0]) + KEPT)
+    good = ((commands >= problem.lowest - KEPT) & (commands <= problem.highest + KEPT)).all(axis=1)
+    speed = np.hypot(commands[:, 0], commands[:, 1])
+    good &= ~problem.round_limit | (speed <= problem.limits[:, 0] + KEPT)
+    share = np.abs(commands / problem.scale)
+    good &= (problem.gear == 0) | (share[:, 3] <= share[:, 0] + KEPT)
     commands = np.where(good[:, None], commands, 0.0)
-    slackness = rows.slackness(_velocities(problem, commands))
+    slackness = rows.slackness(problem.velocities(commands))
     kept = np.where(rows.violated, slackness + rows.bound >= -2 * CALM, slackness >= -KEPT)
     wrong = np.concatenate([np.flatnonzero(~good), rows.first[~kept]])
     if len(wrong):
@@ -137,25 +157,17 @@ def _vouched(
     return commands, stopped
 
 
-def _velocities(problem: ControlProblem, commands: np.ndarray) -> np.ndarray:
-    return np.matmul(problem.jacobians, commands[:, :, None])[:, :, 0]
-
-
 def _free(problem: ControlProblem) -> np.ndarray:
     """Give the optimum without safety rows, shape (N, 4)."""
-    reach = -np.matmul(problem.away[:, None, :], problem.jacobians)[:, 0] * problem.limits
-    reach = steerable(reach, problem.gear)
-    useful = np.where(reach >= 0, problem.highest, -problem.lowest)
-    room = np.divide(
-        useful, problem.limits, out=np.zeros_like(useful), where=problem.limits > 0
-    )
+    reach = steerable(problem.reach, problem.gear)
+    room = np.where(reach >= 0, problem.highest, -problem.lowest) / problem.scale
     geared = problem.gear != 0
     room[geared, 3] = np.minimum(room[geared, 3], room[geared, 0])
     effort = least_effort(reach, problem.demand, problem.slack_weight, room)
     unused = (effort.command == 0) | (problem.demand <= 0)[:, None]
     command = np.where(unused, problem.preferred, effort.command * problem.limits)
-    command = np.clip(command, problem.lowest, problem.highest)
-    speed = np.linalg.norm(command[:, :2], axis=1)
+    command = np.minimum(np.maximum(command, problem.lowest), problem.highest)
+    speed = np.hypot(command[:, 0], command[:, 1])
     over = problem.round_limit & (speed > problem.limits[:, 0])
     command[over, :2] *= (problem.limits[over, 0] / speed[over])[:, None]
     return _steerable(command, problem.limits, geared)
@@ -163,6 +175,8 @@ def _free(problem: ControlProblem) -> np.ndarray:
 
 def _steerable(commands: np.ndarray, limits: np.ndarray, geared: np.ndarray) -> np.ndarray:
     """Give commands (n, 4) that turn no more than the speed allows, to the last digit."""
+    if not geared.any():
+        return commands
     speed = np.abs(commands[geared, 0])
     turn = limits[geared, 3] * (speed / limits[geared, 0])
     commands[geared, 3] = np.clip(commands[geared, 3], -turn, turn)
@@ -202,109 +216,92 @@ class Joint:
         """Give the commands in an answer, shape (n, 4)."""
         shares = int(self.has.sum())
         commands = np.zeros(self.has.shape)
-        commands[self.has] = np.clip(
-            answer[:shares], self.qp.lowest[:shares], self.qp.highest[:shares]
-        )
+        lowest, highest = self.qp.lowest[:shares], self.qp.highest[:shares]
+        commands[self.has] = np.minimum(np.maximum(answer[:shares], lowest), highest)
         return _steerable(commands * self.limits, self.limits, self.geared)
 
 
 def joint(problem: ControlProblem, robots: np.ndarray) -> Joint:
     """Give the QP of some robots (n,) with all rows on them; no row binds them to others."""
-    count = len(robots)
     limits = problem.limits[robots]
     has = limits > 0
-    column = np.where(has, np.cumsum(has.ravel()).reshape(has.shape) - 1, -1)
-    shares = int(has.sum())
-    moving = problem.demand[robots] > 0
-    rows = problem.rows
+    column = has.ravel().cumsum().reshape(has.shape) - 1
+    demand = problem.demand[robots]
+    tasks = np.flatnonzero(demand > 0)
     position = np.full(len(problem.limits), -1)
-    position[robots] = np.arange(count)
+    position[robots] = np.arange(len(robots))
+    rows = problem.rows
     index = np.flatnonzero(position[rows.first] >= 0)
-    eased = rows.violated[index]
+    second = rows.second[index]
+    paired = np.flatnonzero(second >= 0)
+    eased = np.flatnonzero(rows.violated[index])
 
-    size = shares + int(moving.sum()) + int(eased.sum())
-    quadratic = np.concatenate(
-        [
-            np.full(shares, 2.0),
-            2.0 * problem.slack_weight[robots][moving],
-            np.full(eased.sum(), 2.0),
-        ]
-    )
-    scale = np.where(has, limits, 1.0)
-    linear = np.zeros(size)
-    linear[:shares] = -2.0 * (problem.preferred[robots] / scale)[has]
-    linear[shares + moving.sum() :] = np.where(
-        rows.obstacle[index][eased] < 0, OFF_SITE, TOO_NEAR
-    )
-    lowest = np.concatenate(
-        [(problem.lowest[robots] / scale)[has], np.zeros(size - shares)]
-    )
-    highest = np.concatenate(
-        [(problem.highest[robots] / scale)[has], np.full(size - shares, np.inf)]
-    )
+    shares = int(column[-1, -1]) + 1
+    slacks = shares + len(tasks)
+    size = slacks + len(eased)
+    scale = limits[has]
+    quadratic, linear = np.full(size, 2.0), np.zeros(size)
+    lowest, highest = np.zeros(size), np.full(size, np.inf)
+    quadratic[shares:slacks] *= problem.slack_weight[robots[tasks]]
+    linear[:shares] = -2.0 * problem.preferred[robots][has] / scale
+    linear[slacks:] = np.where(rows.obstacle[index[eased]] < 0, OFF_SITE, TOO_NEAR)
+    lowest[:shares] = problem.lowest[robots][has] / scale
+    highest[:shares] = problem.highest[robots][has] / scale
 
-    # Velocity of each control point by share of each axis, m/s: (n, 3, 4).
-    speed = problem.jacobians[robots] * limits[:, None, :]
-    entries: list[tuple[np.ndarray, np.ndarray, np.ndarray]] = []
-    right: list[np.ndarray] = []
-
-    def add(row: np.ndarray, who: np.ndarray, coefficients: np.ndarray) -> None:
-        """Add coefficients (r, 4) on the command of robots who (r,) to rows row (r,)."""
-        wanted = has[who]
-        where = np.broadcast_to(row[:, None], wanted.shape)[wanted]
-        entries.append((where, column[who][wanted], coefficients[wanted]))
-
-    # Task rows: n·G v − δ ≤ −demand.
-    tasks = np.flatnonzero(moving)
-    row = np.arange(len(tasks))
-    along = np.matmul(problem.away[robots][tasks][:, None, :], speed[tasks])[:, 0]
-    add(row, tasks, along)
-    entries.append((row, shares + row, -np.ones(len(tasks))))
-    right.append(-problem.demand[robots][tasks])
-
-    # Safety rows: −normal·(ṗ_first − ṗ_second) − slack ≤ −bound.
-    top = len(tasks)
-    row = top + np.arange(len(index))
-    first, second = position[rows.first[index]], rows.second[index]
+    # Task rows: n·G v − δ ≤ −demand. Safety rows: −normal·(ṗ_first − ṗ_second) − slack ≤ −bound.
+    # Each is a sum of direction · G v over one or two robots.
+    safety = len(tasks) + np.arange(len(index))
+    who = [tasks, position[rows.first[index]], position[second[paired]]]
     normal = rows.normal[index]
-    add(row, first, -np.matmul(normal[:, None, :], speed[first][:, :2])[:, 0])
-    paired = second >= 0
-    other = position[second[paired]]
-    add(row[paired], other, np.matmul(normal[paired][:, None, :], speed[other][:, :2])[:, 0])
-    entries.append(
-        (row[eased], shares + len(tasks) + np.arange(eased.sum()), -np.ones(eased.sum()))
+    direction = [problem.away[robots[tasks], :2], -normal, normal[paired]]
+    along = np.einsum(
+        "ri,rij->rj", np.concatenate(direction), problem.speed[robots[np.concatenate(who)], :2]
     )
-    right.append(-rows.bound[index])
+    along[: len(tasks)] = -problem.reach[robots[tasks]]
+    coefficients = [along]
+    row = [np.arange(len(tasks)), safety, safety[paired]]
+    right = [-demand[tasks], -rows.bound[index]]
+    top = len(tasks) + len(index)
 
     # Speed limits that are round: an octagon with a corner in the way to go.
-    top += len(index)
     rounds = np.flatnonzero(problem.round_limit[robots])
     if len(rounds):
-        steer = -np.matmul(problem.away[robots][rounds][:, None, :], speed[rounds])[:, 0, :2]
+        steer = problem.reach[robots[rounds]]
         side = np.arctan2(steer[:, 1], steer[:, 0])[:, None] + CORNERS
         normals = np.zeros((*side.shape, 4))
         normals[..., 0], normals[..., 1] = np.cos(side), np.sin(side)
         normals = normals.reshape(-1, 4)
-        who = np.repeat(rounds, len(CORNERS))
-        row = top + np.arange(len(who))
-        add(row, who, normals)
-        add(row + len(who), who, -normals)
-        right.append(np.full(2 * len(who), np.cos(np.pi / 8)))
-        top += 2 * len(who)
+        who += 2 * [np.repeat(rounds, len(CORNERS))]
+        coefficients += [normals, -normals]
+        right.append(np.full(2 * len(normals), np.cos(np.pi / 8)))
+        row.append(top + np.arange(2 * len(normals)))
+        top += 2 * len(normals)
 
     # Robots that turn only as they drive: ±u_ω − gear · u_x ≤ 0.
     geared = problem.gear[robots] != 0
-    who = np.flatnonzero(geared)
-    if len(who):
-        for offset, sign in ((0, 1.0), (len(who), -1.0)):
-            edge = np.zeros((len(who), 4))
-            edge[:, 0], edge[:, 3] = -problem.gear[robots][who], sign
-            add(top + offset + np.arange(len(who)), who, edge)
-        right.append(np.zeros(2 * len(who)))
+    if geared.any():
+        edge = np.zeros((geared.sum(), 4))
+        edge[:, 0], edge[:, 3] = -problem.gear[robots[geared]], 1.0
+        who += 2 * [np.flatnonzero(geared)]
+        coefficients += [edge, edge * [1, 1, 1, -1]]
+        right.append(np.zeros(2 * len(edge)))
+        row.append(top + np.arange(2 * len(edge)))
 
-    parts = [np.concatenate(part) for part in zip(*entries, strict=True)]
+    wanted = has[who := np.concatenate(who)]
+    entry, axis = wanted.nonzero()
+    given_up = np.concatenate([np.arange(len(tasks)), len(tasks) + eased])
+    value = np.concatenate(coefficients)[entry, axis]
     return Joint(
-        QP(quadratic, linear, *parts, np.concatenate(right), lowest, highest),
+        QP(
+            quadratic,
+            linear,
+            np.concatenate([np.concatenate(row)[entry], given_up]),
+            np.concatenate([column[who[entry], axis], np.arange(shares, size)]),
+            np.concatenate([value, np.full(size - shares, -1.0)]),
+            np.concatenate(right),
+            lowest,
+            highest,
+        ),
         has,
         limits,
         geared,

@@ -8,6 +8,12 @@ import numpy as np
 
 from .problem import Problem
 
+SUBSETS = (np.arange(16)[:, None] >> np.arange(4) & 1).astype(float)
+"""Every set of axes, one a row: 1 where it has the axis."""
+
+GREATEST = np.tri(5, 4, -1)[:, ::-1].copy()
+"""The sets of the last 0, 1, 2, 3, 4 axes."""
+
 
 @dataclass(frozen=True)
 class Effort:
@@ -49,26 +55,19 @@ def least_effort(
     """
     size = np.abs(reach)
     if room is None:
-        # The axis of greatest reach clips first, whatever λ.
-        ordered = np.sort(size, axis=-1)[..., ::-1]
-        clipped = ordered
+        # Axes of greater reach clip first, whatever λ.
+        size = np.sort(size, axis=-1)
+        capped, clipped = size, GREATEST
     else:
-        with np.errstate(divide="ignore", invalid="ignore"):
-            clips_at = np.where(size > 0, room / size, np.inf)
-        order = np.argsort(clips_at, axis=-1)
-        ordered = np.take_along_axis(size, order, axis=-1)
-        clipped = ordered * np.take_along_axis(np.broadcast_to(room, size.shape), order, axis=-1)
-    slope = 0.5 * (ordered**2).sum(axis=-1) + 0.5 / slack_weight
-    left = np.maximum(demand, 0.0)
-    multiplier = np.asarray(left / slope)
-    for axis in range(ordered.shape[-1]):
-        slope = slope - 0.5 * ordered[..., axis] ** 2
-        left = left - clipped[..., axis]
-        np.maximum(
-            multiplier, left / np.maximum(slope, 0.5 / slack_weight), out=multiplier
-        )
-    share = np.minimum(0.5 * multiplier[..., None] * size, 1.0 if room is None else room)
-    given_up = multiplier / (2 * slack_weight)
+        capped, clipped = size * room, SUBSETS
+    lines = len(clipped), *size.shape[:-1]
+    left = np.maximum(demand, 0.0) - (clipped @ capped.reshape(-1, 4).T).reshape(lines)
+    free = 0.5 * (1.0 - clipped)
+    half = 0.5 / slack_weight
+    slope = (free @ np.square(size).reshape(-1, 4).T).reshape(lines) + half
+    multiplier = np.maximum((left / slope).max(axis=0), 0.0)
+    share = np.minimum(0.5 * multiplier[..., None] * np.abs(reach), 1.0 if room is None else room)
+    given_up = multiplier * half
     value = (share**2).sum(axis=-1) + slack_weight * given_up**2
     return Effort(value, np.copysign(share, reach), given_up)
 

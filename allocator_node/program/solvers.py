@@ -18,7 +18,7 @@ TOLERANCE = 1e-8
 GAP = 1e-12
 """Duality gap: small beside the price of violated rows, so that small commands come out right."""
 
-SMALL = 60
+SMALL = 80
 """Up to so many unknowns the active-set method is the quickest, by measure on crowded scenes."""
 
 
@@ -69,8 +69,8 @@ class QP:
     def hessian(self) -> sparse.csc_matrix:
         """The Hessian, shape (n, n)."""
         size = len(self.linear)
-        parts = (self.quadratic, np.arange(size, dtype=np.int32))
-        return sparse.csc_matrix((*parts, np.arange(size + 1, dtype=np.int32)))
+        start = np.arange(size + 1, dtype=np.int32)
+        return sparse.csc_matrix((self.quadratic, start[:-1], start), shape=(size, size))
 
     @cached_property
     def matrix(self) -> sparse.csc_matrix:
