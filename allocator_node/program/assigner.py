@@ -14,7 +14,7 @@ from .highs import Limit, SearchFailed
 from .integers import Integers
 from .problem import Problem
 from .repair import repair
-from .slots import solve_slots
+from .slots import Slots
 
 WORTH_PROVING = 0.25
 """Share of a mean swap cost from which a possible gain is worth another search."""
@@ -27,9 +27,6 @@ FADES = 0.98
 
 LONGEST_SEARCH = 20.0
 """Time after which a search beside the loop ends with the best it has, s."""
-
-DISCRETE = ("capability", "needs", "least", "most", "priority", "eligible", "pinned")
-"""Parts of a problem a change of which makes an earlier proof worthless."""
 
 
 @dataclass(frozen=True)
@@ -79,6 +76,8 @@ class Assigner:
         self._proof: Proof | None = None
         self._program: Integers | None = None
         self._program_key = b""
+        self._slots: Slots | None = None
+        self._slots_key = b""
         self._search: Future[tuple[Proof | None, float]] | None = None
         self._thread: ThreadPoolExecutor | None = None
         self._closing = threading.Event()
@@ -103,10 +102,7 @@ class Assigner:
 
     def assign(self, problem: Problem, prices: np.ndarray) -> Assignment:
         """Give this period's assignment."""
-        if not problem.eligible.any():
-            return evaluate(problem, prices, np.full(len(prices), -1), proven=True)
-        task = solve_slots(problem, prices)
-        if task is not None:
+        if (task := self._by_slots(problem, prices)) is not None:
             return evaluate(problem, prices, task, proven=True)
         if self._search is not None and self._search.done():
             search, self._search = self._search, None
@@ -125,10 +121,18 @@ class Assigner:
             self._lasted *= FADES
         return self._beside(problem, prices)
 
+    def _by_slots(self, problem: Problem, prices: np.ndarray) -> np.ndarray | None:
+        """Give the optimal task of each robot, (N,); None where slots are not the way."""
+        key = problem.situation + problem.holding.tobytes()
+        if self._slots_key != key:
+            self._slots, self._slots_key = Slots.of(problem), key
+        costs = reduced_costs(problem, prices)
+        return None if self._slots is None else self._slots.solve(costs)
+
     def _beside(self, problem: Problem, prices: np.ndarray) -> Assignment:
         """Stand by the standing assignment until a better one is proven."""
         candidates = [evaluate(problem, prices, repair(problem, prices, problem.previous))]
-        key = _key(problem)
+        key = problem.situation
         if self._proof is not None:
             proposed = repair(problem, prices, self._proof.found.task)
             candidates.append(evaluate(problem, prices, proposed))
@@ -157,7 +161,7 @@ class Assigner:
         begun = time.perf_counter()
         hint = repair(problem, prices, start)
         costs, constant = _costs(problem, prices)
-        key = _key(problem)
+        key = problem.situation
         if self._program is None or self._program_key != key:
             self._program, self._program_key = Integers(problem), key
         try:
@@ -171,9 +175,4 @@ class Assigner:
 def _costs(problem: Problem, prices: np.ndarray) -> tuple[np.ndarray, float]:
     """Give the cost of each eligible α_im = 1, and the swap costs they are counted from."""
     costs = np.where(problem.eligible, reduced_costs(problem, prices), 0.0)
-    return costs, float(problem.swap_cost[problem.keeps_on.any(axis=1)].sum())
-
-
-def _key(problem: Problem) -> bytes:
-    """Give the discrete data of a problem, as something that can be compared."""
-    return b"".join(getattr(problem, name).tobytes() for name in DISCRETE)
+    return costs, float(problem.swap_cost[problem.settled].sum())

@@ -8,7 +8,7 @@ from .assignment import Assignment, evaluate, reduced_costs
 from .highs import Limit
 from .integers import Integers
 from .problem import Problem
-from .slots import solve_slots
+from .slots import Slots
 
 
 def assign(problem: Problem, prices: np.ndarray, time_limit: float = np.inf) -> Assignment:
@@ -22,12 +22,9 @@ def assign(problem: Problem, prices: np.ndarray, time_limit: float = np.inf) -> 
     Returns:
         The optimum; ``proven`` tells whether the time sufficed to prove it.
     """
-    if not problem.eligible.any():
-        return evaluate(problem, prices, np.full(len(prices), -1), proven=True)
-    task = solve_slots(problem, prices)
+    costs = reduced_costs(problem, prices)
+    slots = Slots.of(problem)
+    task = None if slots is None else slots.solve(costs)
     if task is not None:
         return evaluate(problem, prices, task, proven=True)
-    costs = reduced_costs(problem, prices)
-    return evaluate(
-        problem, prices, *Integers(problem).solve(costs, limit=Limit(time_limit))
-    )
+    return evaluate(problem, prices, *Integers(problem).solve(costs, limit=Limit(time_limit)))

@@ -60,14 +60,14 @@ def evaluate(
     share = ratio(missing_robots, problem.least)
     missing_needs = np.zeros(problem.needs.shape)
     if problem.needs.any():
-        brought = np.zeros(problem.needs.shape)
+        brought = missing_needs.copy()
         np.add.at(brought, on, problem.capability[busy])
         missing_needs = np.maximum(problem.needs - brought, 0)
         missing_needs[missing_needs < 1e-9 * np.maximum(problem.needs, 1)] = 0
         share += ratio(missing_needs, problem.needs).sum(axis=1)
     levels = np.bincount(problem.priority, share, minlength=len(LEVELS))[list(LEVELS)]
-    taken_off = problem.keeps_on.any(axis=1)
-    taken_off[busy[problem.keeps_on[busy, on]]] = False
+    settled = problem.settled
+    taken_off = settled[task[settled] != problem.previous[settled]]
     cost = prices[busy, on].sum() + problem.swap_cost[taken_off].sum()
     return Assignment(
         task, missing_robots, missing_needs, levels, float(cost), proven, 0.0 if proven else gap
@@ -81,4 +81,6 @@ def ratio(part: np.ndarray, whole: np.ndarray) -> np.ndarray:
 
 def reduced_costs(problem: Problem, prices: np.ndarray) -> np.ndarray:
     """Give the cost of each α_im = 1, Wh, (N, M): its price less the swap it avoids."""
-    return prices - problem.swap_cost[:, None] * problem.keeps_on
+    costs, settled = prices.copy(), problem.settled
+    costs[settled, problem.previous[settled]] -= problem.swap_cost[settled]
+    return costs

@@ -10,6 +10,9 @@ import numpy as np
 LEVELS = (4, 3, 2, 1, 0)
 """Priority classes in the order they are served."""
 
+DISCRETE = ("capability", "needs", "least", "most", "priority", "eligible", "pinned")
+"""Parts of a problem a change of which makes an earlier proof worthless."""
+
 
 @dataclass(frozen=True, kw_only=True)
 class Problem:
@@ -64,9 +67,24 @@ class Problem:
         return np.where(self.closing > 0, self.closing - self.goal_speed, 0.0)
 
     @cached_property
+    def situation(self) -> bytes:
+        """The discrete data, as something that can be compared from period to period."""
+        return b"".join(getattr(self, name).tobytes() for name in DISCRETE)
+
+    @cached_property
+    def settled(self) -> np.ndarray:
+        """Robots that could go on with the task they have, shape (n,)."""
+        busy = np.flatnonzero(self.previous >= 0)
+        return busy[self.eligible[busy, self.previous[busy]]]
+
+    @cached_property
+    def holding(self) -> np.ndarray:
+        """How many robots could go on with each task, shape (M,)."""
+        return np.bincount(self.previous[self.settled], minlength=len(self.most))
+
+    @cached_property
     def keeps_on(self) -> np.ndarray:
         """Where a robot could go on with the task it has, shape (N, M)."""
         keeps = np.zeros(self.eligible.shape, dtype=bool)
-        busy = np.flatnonzero(self.previous >= 0)
-        keeps[busy, self.previous[busy]] = True
-        return keeps & self.eligible
+        keeps[self.settled, self.previous[self.settled]] = True
+        return keeps

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 from scipy.optimize import linear_sum_assignment
 
-from .assignment import ratio, reduced_costs
+from .assignment import ratio
 from .problem import LEVELS, Problem
 
 PRECISION = 1e-15
@@ -15,60 +17,92 @@ FINEST = 5040
 """Largest common denominator of shortfalls for which levels are told apart by weight."""
 
 
-def solve_slots(problem: Problem, prices: np.ndarray) -> np.ndarray | None:
-    """Solve the assignment problem where robots eligible for a task are alike to it.
+@dataclass(frozen=True)
+class Slots:
+    """A linear assignment of robots to slots; F robots to be placed, S slots.
 
-    Where all of them bring the same amounts, the shortfall of a task depends on
-    their number only, and every robot more helps less than the one before. So
-    the task is a row of slots, each with a reward for the shortfall it removes,
-    and the whole is a linear assignment problem. Rewards of one level outweigh
-    all below it; where double precision cannot hold such weights, or a task
-    needs graded amounts, this is not the way.
+    Where all robots eligible for a task bring the same amounts, the shortfall of
+    the task depends on their number only, and every robot more helps less than
+    the one before. So the task is a row of slots, each with a reward for the
+    shortfall it removes, and the whole is a linear assignment problem. Rewards of
+    one level outweigh all below it. All this holds whatever the costs: it is found
+    once for a discrete situation.
 
-    Args:
-        problem: The period's program.
-        prices: κ w_im + e_im, Wh, shape (N, M).
-
-    Returns:
-        Task of each robot, −1: none, shape (N,); None where this is not the way.
+    Attributes:
+        pinned: Task of each robot that is pinned, −1: none, shape (N,).
+        free: Robots that are not pinned, shape (F,).
+        task: Task of each slot, shape (S,).
+        barred: Where a robot is not eligible for a slot's task, shape (S, F).
+        gain: Relative shortfall that a slot removes, shape (S,).
+        reward: What that is worth, as a multiple of all costs together, shape (S,).
+        ordered: Whether the rewards put the levels in their order, too.
     """
-    eligible = problem.eligible
-    amounts = _common_amounts(problem)
-    if amounts is None:
-        return None
-    pinned = problem.pinned
-    pins = np.bincount(pinned[pinned >= 0], minlength=len(problem.most))
-    useful = np.maximum(
-        problem.least, np.ceil(ratio(problem.needs, amounts) - 1e-9).max(axis=1, initial=0)
-    ).astype(int)
-    holding = problem.keeps_on.sum(axis=0) + pins
-    most = np.minimum(np.maximum(problem.most, pins), eligible.sum(axis=0))
-    # Pinned robots take the first slots of their tasks; the others choose among the rest.
-    slots = np.maximum(np.minimum(np.maximum(useful, holding), most) - pins, 0)
-    found = pinned.copy()
-    task = np.repeat(np.arange(len(slots)), slots)
-    if not len(task):
-        return found
-    number = np.arange(len(task)) - np.repeat(np.cumsum(slots) - slots - pins, slots)
-    shortfall = _shortfall(problem, amounts, task, number[:, None] + [0, 1])
-    gain = shortfall[:, 0] - shortfall[:, 1]
-    costs = reduced_costs(problem, prices)
-    weight, ordered = _weights(problem, costs, task, gain)
-    if weight is None:
-        return None
 
-    # What costs is left undone: an entry 0 stands for idling. It takes a slot nobody
-    # misses, since another robot could have it in exchange for a slot no better.
-    free = np.flatnonzero(pinned < 0)
-    costs = np.where(eligible, costs, np.inf)[free]
-    table = np.minimum(costs[:, task] - weight * gain, 0.0)
-    # Slots as rows: what is the same along a row costs the algorithm no search.
-    slot, robot = linear_sum_assignment(table.T)
-    busy = table[robot, slot] < 0
-    if not ordered and gain[slot[busy]].sum() < gain.sum() - 1e-9:
-        return None
-    found[free[robot[busy]]] = task[slot[busy]]
-    return found
+    pinned: np.ndarray
+    free: np.ndarray
+    task: np.ndarray
+    barred: np.ndarray
+    gain: np.ndarray
+    reward: np.ndarray
+    ordered: bool
+
+    @classmethod
+    def of(cls, problem: Problem) -> Slots | None:
+        """Give the slots of a problem; its prices and swap costs are not looked at.
+
+        Returns:
+            The slots; None where a task needs graded amounts, or where double
+            precision cannot hold the rewards: then this is not the way.
+        """
+        amounts = _common_amounts(problem)
+        if amounts is None:
+            return None
+        pinned = problem.pinned
+        pins = np.bincount(pinned[pinned >= 0], minlength=len(problem.most))
+        enough = np.ceil(ratio(problem.needs, amounts) - 1e-9).max(axis=1, initial=0)
+        useful = np.maximum(problem.least, enough).astype(int)
+        holding = problem.holding + pins
+        most = np.minimum(np.maximum(problem.most, pins), problem.eligible.sum(axis=0))
+        # Pinned robots take the first slots of their tasks; the others choose among the rest.
+        slots = np.maximum(np.minimum(np.maximum(useful, holding), most) - pins, 0)
+        task = np.repeat(np.arange(len(slots)), slots)
+        number = np.arange(len(task)) - np.repeat(np.cumsum(slots) - slots - pins, slots)
+        shortfall = _shortfall(problem, amounts, task, number[:, None] + [0, 1])
+        gain = shortfall[:, 0] - shortfall[:, 1]
+        reward, ordered = _rewards(problem, task, gain)
+        if reward is None:
+            return None
+        free = np.flatnonzero(pinned < 0)
+        barred = ~problem.eligible[free[None], task[:, None]]
+        return cls(pinned, free, task, barred, gain, reward, ordered)
+
+    def solve(self, costs: np.ndarray) -> np.ndarray | None:
+        """Solve the assignment problem.
+
+        Args:
+            costs: Cost of each α_im = 1, Wh, shape (N, M).
+
+        Returns:
+            Task of each robot, −1: none, shape (N,); None where the levels may not
+            have come in their order.
+        """
+        # Slots as rows: what is the same along a row costs the algorithm no search.
+        table = costs[self.free[None], self.task[:, None]]
+        table[self.barred] = 0.0
+        dearest = np.abs(table).max(axis=0, initial=0.0)
+        table -= ((1.0 + dearest.sum()) * self.reward)[:, None]
+        # What costs is left undone: an entry 0 stands for idling. It takes a slot nobody
+        # misses, since another robot could have it in exchange for a slot no better.
+        np.minimum(table, 0.0, out=table)
+        table[self.barred] = 0.0
+        slot, robot = linear_sum_assignment(table)
+        busy = table[slot, robot] < 0
+        slot, robot = slot[busy], robot[busy]
+        if not self.ordered and self.gain[slot].sum() < self.gain.sum() - 1e-9:
+            return None
+        found = self.pinned.copy()
+        found[self.free[robot]] = self.task[slot]
+        return found
 
 
 def _common_amounts(problem: Problem) -> np.ndarray | None:
@@ -102,13 +136,14 @@ def _shortfall(
     return share + ratio(missing, needs).sum(axis=2)
 
 
-def _weights(
-    problem: Problem, costs: np.ndarray, task: np.ndarray, gain: np.ndarray
+def _rewards(
+    problem: Problem, task: np.ndarray, gain: np.ndarray
 ) -> tuple[np.ndarray | None, bool]:
-    """Give the weight of each slot's gain so that gains come before costs, (S,).
+    """Give the reward of each slot's gain so that gains come before costs, (S,).
 
     Returns:
-        The weights, None where there are none; whether levels come in their order too.
+        The rewards as multiples of all costs together, None where there are none;
+        whether levels come in their order too.
     """
     level = problem.priority[task]
     useful = gain > 1e-12
@@ -116,17 +151,12 @@ def _weights(
     shares = gain[useful] * denominator
     if denominator > FINEST or np.abs(shares - np.round(shares)).max(initial=0) > 1e-9:
         return None, False
-    scale = 1.0 + float(
-        np.abs(np.where(problem.eligible, costs, 0.0)).max(axis=1, initial=0.0).sum()
-    )
-    below = scale
-    weight = np.zeros(len(task))
-    for q in reversed(LEVELS):
-        here = (level == q) & useful
-        if here.any():
-            weight[here] = 2.0 * denominator * below
-            below += float(weight[here] @ gain[here])
-    if below * PRECISION < 1e-7 * scale:
-        return weight, True
-    weight[useful] = 2.0 * denominator * scale
-    return (weight, False) if weight.sum() * PRECISION < 1e-7 * scale else (None, False)
+    # One step of a level outweighs all gains of the levels below it, and the costs.
+    step = 2.0 * denominator
+    gains = np.bincount(level[useful], gain[useful], minlength=len(LEVELS))
+    below = np.cumprod(np.append(1.0, 1.0 + step * gains))
+    worth = np.where(useful, step * below[level], 0.0)
+    if below[-1] * PRECISION < 1e-7:
+        return worth * gain, True
+    worth[useful] = step
+    return (worth * gain, False) if worth.sum() * PRECISION < 1e-7 else (None, False)
