@@ -72,7 +72,7 @@ class Vandal:
         team = read_team(team_file)
         self.robots, self.tasks = list(team.robots), list(team.tasks)
         self.done: Counter = Counter()
-        self.flood: tuple[float, str] = (0.0, self.robots[0])
+        self._lasting: tuple[float, Callable[[], None]] = (0.0, lambda: None)
         # All publishers at once: what a new one sends at first reaches nobody yet.
         topics = {"/diagnostics": DiagnosticArray}
         for robot in self.robots:
@@ -109,11 +109,10 @@ class Vandal:
         ACTS[kind](self)
 
     def tend(self, now: float) -> None:
-        """Go on with what lasts: a flood, a hold that ends."""
-        until, robot = self.flood
+        """Go on with what lasts, a hundred times a second."""
+        until, send = self._lasting
         if now < until:
-            for _ in range(10):  # called a hundred times a second
-                self._odometry(robot, x=float(self.random.uniform(20, 60)))
+            send()
         if self._held_until and now > self._held_until:
             self._held_until = 0.0
             self._hold.call_async(SetBool.Request(data=False))
@@ -127,40 +126,57 @@ class Vandal:
     def _send(self, topic: str, message: object) -> None:
         self._publishers[topic].publish(message)
 
-    def _odometry(
-        self, robot: str, x: float = 40.0, frame: str = "site", seconds: int = 0, w: float = 1.0
-    ) -> None:
-        message = Odometry()
-        message.header.frame_id = frame
-        message.header.stamp = self.node.get_clock().now().to_msg()
-        message.header.stamp.sec += seconds
-        message.pose.pose.position.x, message.pose.pose.position.y = x, 25.0
-        message.pose.pose.orientation.w = w
-        self._send(f"/{robot}/odom", message)
+    def _odometry(self, robot: str, change: Callable[[Odometry], None], times: int = 1) -> None:
+        """Send odometry of the middle of the site, changed, for up to three seconds."""
+
+        def send() -> None:
+            for _ in range(times):
+                message = Odometry()
+                message.header.frame_id = "site"
+                message.header.stamp = self.node.get_clock().now().to_msg()
+                message.pose.pose.position.x, message.pose.pose.position.y = 40.0, 20.0
+                message.pose.pose.orientation.w = 1.0
+                change(message)
+                self._publishers[f"/{robot}/odom"].publish(message)
+
+        self._lasting = (time.monotonic() + self.random.uniform(0, 3), send)
+
+    def _placed(self, x: float, times: int = 1) -> None:
+        def change(message: Odometry) -> None:
+            message.pose.pose.position.x = float(x)
+
+        self._odometry(self._robot(), change, times)
 
     def pose_not_a_number(self) -> None:
-        self._odometry(self._robot(), x=float(self.random.choice([np.nan, np.inf, -np.inf])))
+        self._placed(self.random.choice([np.nan, np.inf, -np.inf]))
 
     def pose_absurd(self) -> None:
-        self._odometry(self._robot(), x=1e9)
+        self._placed(1e9)
 
     def pose_elsewhere(self) -> None:
-        self._odometry(self._robot(), x=float(self.random.uniform(0, 80)))
-
-    def wrong_frame(self) -> None:
-        self._odometry(self._robot(), frame="moon")
-
-    def no_rotation(self) -> None:
-        self._odometry(self._robot(), w=0.0)
-
-    def stamp_far_off(self) -> None:
-        self._odometry(self._robot(), seconds=int(self.random.choice([-3600, -5, 5, 3600])))
-
-    def stamp_zero(self) -> None:
-        self._send(f"/{self._robot()}/odom", Odometry())
+        self._placed(self.random.uniform(0, 80))
 
     def thousand_a_second(self) -> None:
-        self.flood = (time.monotonic() + 2.0, self._robot())
+        self._placed(self.random.uniform(0, 80), times=10)
+
+    def wrong_frame(self) -> None:
+        self._odometry(self._robot(), lambda message: setattr(message.header, "frame_id", "moon"))
+
+    def no_rotation(self) -> None:
+        self._odometry(
+            self._robot(), lambda message: setattr(message.pose.pose.orientation, "w", 0.0)
+        )
+
+    def stamp_far_off(self) -> None:
+        by = int(self.random.choice([-3600, -5, 5, 3600]))
+
+        def change(message: Odometry) -> None:
+            message.header.stamp.sec += by
+
+        self._odometry(self._robot(), change)
+
+    def stamp_zero(self) -> None:
+        self._odometry(self._robot(), lambda message: setattr(message.header.stamp, "sec", 0))
 
     def battery(self) -> None:
         charge = float(self.random.choice([np.nan, -1.0, 1.7, 80.0, 0.3]))
