@@ -21,7 +21,7 @@ from .complaints import Complaints
 from .conversions import numbers, type_name, yaw_of
 from .polling import PolledSubscription
 from .poses import PoseTopic, PoseTransform, Transforms
-from .qos import EVENTS, GOALS, NEWEST
+from .qos import GOALS, NEWEST, REPORTS
 
 LEVELS = 4
 """DiagnosticStatus has the levels OK, WARN, ERROR, STALE = 0, 1, 2, 3."""
@@ -62,7 +62,7 @@ class Inbox:
             self._subscription(BatteryState, robot.battery_topic, NEWEST) for robot in robots
         ]
         self._diagnostics = PolledSubscription(
-            node, DiagnosticArray, "/diagnostics", EVENTS, self.complaints, _sieve(robots)
+            node, DiagnosticArray, "/diagnostics", REPORTS, self.complaints, _sieve(robots)
         )
         self._concerns_us = _matcher(robots)
         self._robots = tuple(team.robots)

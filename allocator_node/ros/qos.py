@@ -5,8 +5,9 @@ from rclpy.qos import DurabilityPolicy, QoSProfile, ReliabilityPolicy
 NEWEST = QoSProfile(depth=1, reliability=ReliabilityPolicy.BEST_EFFORT)
 """Only the newest message counts; matches reliable and best-effort publishers."""
 
-EVENTS = QoSProfile(depth=1000)
-"""Every message counts, many may come between two decisions."""
+REPORTS = QoSProfile(depth=1000, reliability=ReliabilityPolicy.BEST_EFFORT)
+"""Many may come between two decisions. Reports are repeated: over a bad link none waits
+for one that was lost."""
 
 GOALS = QoSProfile(depth=10)
 """The newest good one counts; a bad one does not hide the one before it."""
