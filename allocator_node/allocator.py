@@ -24,10 +24,10 @@ from .program.formulate import Known, formulate
 from .program.guidance import Targets
 from .reasons import Reasons, Situation
 from .settings import Settings
-from .tasks import Goals, Scene
+from .tasks import Goals
 from .team import Team
 from .view import View
-from .work import Whereabouts, Work, scene_of
+from .work import Stage, Work
 
 LONGEST_STEP = 1.0
 """Longest time one step counts for; beyond it the loop was paused, s."""
@@ -111,9 +111,8 @@ class Allocator:
         with _timed(seconds, "belief"):
             view = self._believe(observation, now)
         with _timed(seconds, "pricing"):
-            goals = [
-                self._work.advance(m, self._scene(view, m)) for m in range(len(view.suitability.T))
-            ]
+            stage = self._stage(view)
+            goals = [self._work.advance(m, stage) for m in range(len(self._model.tasks))]
             problem, enough = self._formulate(view, goals)
             prices = price(problem)
         with _timed(seconds, "assignment"):
@@ -169,8 +168,8 @@ class Allocator:
         """Compare the motion since the last step with what its commands implied."""
         settings, model = self._settings, self._model
         for (robot, task), quality in observation.quality.items():
-            if robot in self.team.robots and task in self.team.tasks:
-                i, m = model.robots.index(robot), model.tasks.index(task)
+            if robot in model.robot_of and task in model.task_of:
+                i, m = model.robot_of[robot], model.task_of[task]
                 self._efficacy.outside(i, m, quality, settings)
         progress = self._pilot.progress(points, now, dt)
         if progress is None:
@@ -179,18 +178,9 @@ class Allocator:
         step = replace(progress.step, counted=counted)
         self._efficacy.update(step, self._assignment, progress.distance, dt, settings)
 
-    def _scene(self, view: View, m: int) -> Scene:
-        members = np.flatnonzero((self._assignment == m) & view.places.heard)
-        reach = self._pilot.safety.reach[members].max(initial=0.0)
-        spacing = 2 * reach + 1.5 * self._settings.margin
-        where = Whereabouts(
-            self._model, view.poses, view.places.velocities, view.places.known,
-            self._assignment, view.topics,
-        )  # fmt: skip
-        return scene_of(
-            self._model, view.now, view.poses, view.points, view.capability, members, m, spacing,
-            where.find,
-        )  # fmt: skip
+    def _stage(self, view: View) -> Stage:
+        reach, margin = self._pilot.safety.reach, self._settings.margin
+        return Stage(self._model, view, self._assignment, reach, margin)
 
     def _formulate(self, view: View, goals: list[Goals]) -> tuple[Problem, np.ndarray]:
         known = Known(
@@ -208,8 +198,8 @@ class Allocator:
             dearness=self._energy.dearness(self._model),
             active=self._work.active(),
             charging=self._charging.on,
-            pinned=self._pairs(self.orders.pins),
-            banned=self._pairs(self.orders.bans),
+            pinned=self._model.mask(self.orders.pins),
+            banned=self._model.mask(self.orders.bans),
             previous=self._assignment,
         )
         return formulate(self._model, self._settings, known, goals, self._pilot.ways)
@@ -218,14 +208,6 @@ class Allocator:
         """Tell where the specialization suffices, or would but for the features, (N, M)."""
         s = np.where(view.suitability > 0, view.suitability, 1.0) * self._efficacy.eta
         return (s >= self._settings.s_min) & ~self._efficacy.barred
-
-    def _pairs(self, pairs: frozenset[tuple[str, str]]) -> np.ndarray:
-        """Give (robot, task) pairs as a mask, shape (N, M); unknown names say nothing."""
-        mask = np.zeros((len(self._model.robots), len(self._model.tasks)), dtype=bool)
-        for robot, task in pairs:
-            if robot in self.team.robots and task in self.team.tasks:
-                mask[self._model.robots.index(robot), self._model.tasks.index(task)] = True
-        return mask
 
     def _situation(self, view: View, enough: np.ndarray, prices: np.ndarray) -> Situation:
         return Situation(
@@ -238,8 +220,8 @@ class Allocator:
             enough=enough & ~self._charging.on[:, None],
             dearness=self._energy.dearness(self._model),
             prices=prices,
-            pinned=self._pairs(self.orders.pins),
-            banned=self._pairs(self.orders.bans),
+            pinned=self._model.mask(self.orders.pins),
+            banned=self._model.mask(self.orders.bans),
             active=self._work.active(),
             tasks=tuple(self.team.tasks.values()),
             finished=self._work.finished(),
@@ -254,12 +236,13 @@ class Allocator:
         self._pilot.restart(changed)
         self._efficacy.reassigned(changed, before[changed], view.now, self._settings)
         groups = (set(before[changed]) | set(self._assignment[changed])) - {-1}
+        stage = self._stage(view)
         for m in groups | self._work.keeping_to(groups):
-            goals[m] = self._work.advance(int(m), self._scene(view, m))
+            goals[m] = self._work.advance(int(m), stage)
 
     def _charge(self, view: View, enough: np.ndarray) -> Errands:
         """Send robots without a task to their docks where their energy is low."""
-        pinned = self._pairs(self.orders.pins)
+        pinned = self._model.mask(self.orders.pins)
         wanted = (view.suitability > 0) & self._work.active()
         crew = Crew(
             now=view.now,
@@ -289,7 +272,7 @@ class Allocator:
                 (pace, goal.pace),
                 (tolerance, goal.tolerance),
             ):
-                part[group] = np.broadcast_to(value, part.shape)[group]
+                part[group] = value[group] if np.ndim(value) == part.ndim else value
         sent = (self._assignment < 0) & np.isfinite(errands.points[:, 0])
         points[sent], tolerance[sent] = errands.points[sent], errands.tolerance[sent]
         busy = ((self._assignment >= 0) | sent) & steady
@@ -380,12 +363,12 @@ class Allocator:
         task whose place or kind of work changed begins anew.
         """
         model = Model(team)
-        old = {name: m for m, name in enumerate(self._model.tasks)}
-        kept = np.array([old.get(name, -1) for name in model.tasks], dtype=int)
+        former = self._model.task_of
+        kept = np.array([former.get(name, -1) for name in model.tasks], dtype=int)
         self._work.edit(team)
         self._efficacy.retable(kept)
         self._reasons.retable(model, kept)
-        position = {former: m for m, former in enumerate(kept) if former >= 0}
+        position = {old: m for m, old in enumerate(kept) if old >= 0}
         self._assignment = np.array(
             [position.get(int(m), -1) for m in self._assignment], dtype=int
         )
@@ -426,8 +409,7 @@ class Allocator:
             ValueError: The data is not of the form :meth:`memory` gives.
         """
         memory = Memory.read(data)
-        robot_of = {name: i for i, name in enumerate(self._model.robots)}
-        task_of = {name: m for m, name in enumerate(self._model.tasks)}
+        robot_of, task_of = self._model.robot_of, self._model.task_of
         for robot, task, value, failures, barred in memory.learned:
             if robot in robot_of and task in task_of:
                 self._efficacy.recall(robot_of[robot], task_of[task], value, failures, barred)

@@ -123,8 +123,10 @@ class Charging:
         count = len(on)
         points, tolerance = np.full((count, 3), np.nan), np.full(count, AT_SPOT)
         activity = [""] * count
-        for dock in np.unique(self._dock[self._dock >= 0]):
-            self._serve(int(dock), crew, settings, may, points, tolerance, activity)
+        wanted = set(self._dock[on].tolist())
+        self._holder = {dock: i for dock, i in self._holder.items() if dock in wanted}
+        for dock in sorted(wanted):
+            self._serve(dock, crew, settings, may, points, tolerance, activity)
         self._spots = {i: spot for i, spot in self._spots.items() if np.isfinite(points[i, 0])}
         return Errands(points, tolerance, tuple(activity))
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
+
 import numpy as np
 
 from .drives import Fleet
@@ -14,6 +16,7 @@ class Model:
     Attributes:
         robots, tasks, features, capabilities: Names in order; positions are the
             indices i, m, f, k.
+        robot_of, task_of: Name to index.
         declared: Which robot has which feature, shape (N, F).
         ways: For each capability its ways as (feature indices, grade).
         needs: Amounts T_mk, shape (M, K).
@@ -38,6 +41,8 @@ class Model:
         self.team = team
         self.robots = tuple(team.robots)
         self.tasks = tuple(team.tasks)
+        self.robot_of = {name: i for i, name in enumerate(self.robots)}
+        self.task_of = {name: m for m, name in enumerate(self.tasks)}
         self.capabilities = tuple(team.capabilities)
         self.features = tuple(
             sorted(
@@ -84,6 +89,14 @@ class Model:
         self.itself = np.array(
             [[name == target for target in targets] for name in self.robots], dtype=bool
         ).reshape(len(robots), len(tasks))
+
+    def mask(self, pairs: Iterable[tuple[str, str]]) -> np.ndarray:
+        """Give (robot, task) pairs as a mask, shape (N, M); unknown names say nothing."""
+        mask = np.zeros((len(self.robots), len(self.tasks)), dtype=bool)
+        for robot, task in pairs:
+            if robot in self.robot_of and task in self.task_of:
+                mask[self.robot_of[robot], self.task_of[task]] = True
+        return mask
 
     def capability(self, health: np.ndarray) -> np.ndarray:
         """Give c_ik = max over ways w of k: g_w · min over f in w of φ_if.

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Mapping
+from collections.abc import Iterable
 from dataclasses import dataclass, replace
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -11,6 +12,7 @@ import numpy as np
 from .model import Model
 from .tasks import Goals, Located, Scene, Task
 from .team import Target, Team
+from .view import View
 
 
 class Work:
@@ -25,9 +27,10 @@ class Work:
         self.team = team
         self._states: dict[str, Any] = {name: task.begin() for name, task in team.tasks.items()}
 
-    def advance(self, m: int, scene: Scene) -> Goals:
-        """Take task m on by what the scene shows, and give its goals."""
-        name, task = list(self.team.tasks.items())[m]
+    def advance(self, m: int, stage: Stage) -> Goals:
+        """Take task m on by what it sees, and give its goals."""
+        name = stage.model.tasks[m]
+        task, scene = self.team.tasks[name], stage.scene(m)
         self._states[name] = task.advance(self._states[name], scene)
         return task.goals(self._states[name], scene)
 
@@ -82,79 +85,59 @@ class Work:
 
 
 @dataclass(frozen=True)
-class Whereabouts:
-    """Where everything is that a task may keep to.
+class Stage:
+    """The team as its tasks see it in one period, under one assignment.
 
     Attributes:
         model: The team.
-        poses: Poses of the robots, shape (N, 4).
-        velocities: Their velocities in the site frame, shape (N, 4).
-        known: Robots ever heard, shape (N,).
+        view: What is known.
         assignment: Task of each robot, −1: none, shape (N,).
-        topics: Topic to pose and velocity, each (4,).
+        reach: How far each body reaches around its control point, m, shape (N,).
+        margin: Distance kept beside the bodies, m.
     """
 
     model: Model
-    poses: np.ndarray
-    velocities: np.ndarray
-    known: np.ndarray
+    view: View
     assignment: np.ndarray
-    topics: Mapping[str, tuple[np.ndarray, np.ndarray]]
+    reach: np.ndarray
+    margin: float
+
+    def scene(self, m: int) -> Scene:
+        """Give what task m sees."""
+        view, fleet = self.view, self.model.fleet
+        members = np.flatnonzero((self.assignment == m) & view.places.heard)
+        spacing = 2 * self.reach[members].max(initial=0.0) + 1.5 * self.margin
+        return Scene(
+            view.now, view.points, view.poses[:, 3], fleet.ahead, members, spacing,
+            partial(self.suffice, m), fleet.cruise, self.find,
+        )  # fmt: skip
+
+    def suffice(self, m: int, robots: np.ndarray) -> bool:
+        """Tell whether some robots meet head count and needs of task m."""
+        amounts = self.view.capability[robots].sum(axis=0)
+        enough = (amounts >= self.model.needs[m] - 1e-9).all()
+        return bool(enough and len(robots) >= max(self.model.least[m], 1))
 
     def find(self, target: Target) -> Located | None:
         """Give where a target is; None where it is not known, or nobody does the task."""
+        view = self.view
         if target.topic is not None:
-            if target.topic not in self.topics:
+            if target.topic not in view.topics:
                 return None
-            pose, velocity = self.topics[target.topic]
+            pose, velocity = view.topics[target.topic]
             # A heading nobody told is that of the site's axes.
             return Located(pose[:3], float(np.nan_to_num(pose[3])), velocity)
         if target.robot is not None:
-            robots = np.array([self.model.robots.index(target.robot)])
+            robots = np.array([self.model.robot_of[target.robot]])
         else:
-            robots = np.flatnonzero(self.assignment == self.model.tasks.index(target.task))
-        robots = robots[self.known[robots]]
+            robots = np.flatnonzero(self.assignment == self.model.task_of[target.task])
+        robots = robots[view.places.known[robots]]
         if not len(robots):
             return None
-        poses = self.poses[robots]
+        poses = view.poses[robots]
         heading = np.angle(np.exp(1j * poses[:, 3]).sum())
         at = np.array([*poses[:, :2].mean(axis=0), np.nan])
-        return Located(at, float(heading), self.velocities[robots].mean(axis=0))
-
-
-def scene_of(
-    model: Model,
-    now: float,
-    poses: np.ndarray,
-    points: np.ndarray,
-    capability: np.ndarray,
-    members: np.ndarray,
-    m: int,
-    spacing: float,
-    find: Callable[[Target], Located | None],
-) -> Scene:
-    """Give what task m sees of the team.
-
-    Args:
-        model: The team.
-        now: Time, s.
-        poses: Poses, shape (N, 4).
-        points: Control points, m, shape (N, 3).
-        capability: c_ik, shape (N, K).
-        members: Indices of the robots on the task, shape (n,).
-        m: Index of the task.
-        spacing: Distance to leave between two places of a group, m.
-        find: Where a target is.
-    """
-
-    def suffices(robots: np.ndarray) -> bool:
-        enough = (capability[robots].sum(axis=0) >= model.needs[m] - 1e-9).all()
-        return bool(enough and len(robots) >= max(model.least[m], 1))
-
-    fleet = model.fleet
-    return Scene(
-        now, points, poses[:, 3], fleet.ahead, members, spacing, suffices, fleet.cruise, find
-    )
+        return Located(at, float(heading), view.places.velocities[robots].mean(axis=0))
 
 
 def _same_work(old: Task, new: Task) -> bool:
