@@ -394,7 +394,7 @@ class Allocator:
         return remember(
             self._model,
             self._efficacy,
-            self._work.finished(),
+            self._work,
             self._assignment,
             self._features.troubles(self._now or 0.0, self._settings),
             self._energy.charge,
@@ -413,6 +413,8 @@ class Allocator:
         for robot, task, value, failures, barred in memory.learned:
             if robot in robot_of and task in task_of:
                 self._efficacy.recall(robot_of[robot], task_of[task], value, failures, barred)
+        for name, saved in memory.work.items():
+            self._work.restore(name, saved)
         for name in memory.finished:
             self._work.end(name)
         for robot, task in memory.assignment.items():

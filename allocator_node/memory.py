@@ -14,6 +14,7 @@ import numpy as np
 
 from .belief import EfficacyBelief
 from .model import Model
+from .work import Work
 
 FARTHEST = 1e6
 """Coordinates beyond this, m, are no places of robots."""
@@ -30,12 +31,14 @@ class Memory:
         troubles: Diagnostic status that was not OK to its level and text.
         charges: Robot to charge, 0..1.
         charging: Robots that were charging or on their way to it.
+        work: Task to what is done of it, in the form of its kind.
         places: Robot to where it was last: x, y, z (m), heading (rad). One that is silent
             after a restart is still in the way.
     """
 
     learned: tuple[tuple[str, str, float, int, bool], ...]
     finished: tuple[str, ...]
+    work: Mapping[str, Any]
     assignment: Mapping[str, str]
     troubles: Mapping[str, tuple[int, str]]
     charges: Mapping[str, float]
@@ -61,6 +64,7 @@ class Memory:
                 for entry in data["efficacy"]
             )
             finished = tuple(str(name) for name in data["finished"])
+            work = {str(name): saved for name, saved in data.get("work", {}).items()}
             assignment = {str(robot): str(task) for robot, task in data["assignment"].items()}
             troubles = {
                 str(name): (int(level), str(text))
@@ -77,13 +81,13 @@ class Memory:
             raise ValueError("not an allocator's memory: an efficacy or charge is not within 0..1")
         if not all(len(p) == 4 and all(abs(v) <= FARTHEST for v in p) for p in places.values()):
             raise ValueError("not an allocator's memory: a place is not x, y, z, heading")
-        return cls(learned, finished, assignment, troubles, charges, charging, places)
+        return cls(learned, finished, work, assignment, troubles, charges, charging, places)
 
 
 def remember(
     model: Model,
     efficacy: EfficacyBelief,
-    finished: frozenset[str],
+    work: Work,
     assignment: np.ndarray,
     troubles: Mapping[str, tuple[int, str]],
     charge: np.ndarray,
@@ -106,7 +110,8 @@ def remember(
             }
             for i, m in zip(robots, tasks, strict=True)
         ],
-        "finished": sorted(finished),
+        "finished": sorted(work.finished()),
+        "work": work.saved(),
         "assignment": {
             model.robots[i]: model.tasks[m] for i, m in enumerate(assignment) if m >= 0
         },

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
+from contextlib import suppress
 from dataclasses import dataclass, replace
 from functools import partial
 from typing import Any
@@ -77,6 +78,21 @@ class Work:
             for name, task in team.tasks.items()
         }
         self.team = team
+
+    def saved(self) -> dict[str, Any]:
+        """Give what is done of unfinished tasks, as JSON-able data by name."""
+        parts = {
+            name: task.saved(self._states[name])
+            for name, task in self.team.tasks.items()
+            if not task.finished(self._states[name])
+        }
+        return {name: part for name, part in parts.items() if part is not None}
+
+    def restore(self, name: str, saved: Any) -> None:
+        """Go on with a task where an earlier run left it; a task that has changed begins anew."""
+        if name in self.team.tasks:
+            with suppress(ValueError):
+                self._states[name] = self.team.tasks[name].restored(saved)
 
     def end(self, name: str) -> None:
         """Take a task as finished, as an earlier run left it."""

@@ -21,7 +21,7 @@ ARGUMENTS = (
     DeclareLaunchArgument(
         "state_file",
         default_value="",
-        description="where learned efficacies and the assignment survive a restart (empty: none)",
+        description="where what was learned, done and decided survives a restart (empty: none)",
     ),
     DeclareLaunchArgument(
         "record_to",

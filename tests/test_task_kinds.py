@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -42,6 +43,7 @@ from allocator_node.tasks.cover import Bump
 from allocator_node.tasks.lanes import lanes_of
 from allocator_node.team import Battery, HeadCount, Target, Team
 from allocator_node.team_file import merge_tasks, parse_team, read_team
+from allocator_node.work import Work
 
 CONFIG = Path(__file__).parents[1] / "config"
 
@@ -429,6 +431,58 @@ def test_a_lane_on_which_somebody_cannot_go_on_is_tried_again_last():
         lanes.append(state.passes[0].lane)
     assert list(dict.fromkeys(lanes)) == [0, 1, 2]
     assert task.progress(state) == 0.0 and not task.finished(state)
+
+
+FIELD = Sweep(name="s", area=((0, 0), (20, 0), (20, 8), (0, 8)), lane_width=1.0, overlap=0.0)
+ROUNDS = Patrol(name="p", waypoints=((0, 0), (10, 0), (10, 5)), laps=2)
+
+
+def test_a_sweep_goes_on_after_a_restart_where_it_was():
+    """What is done stays done; whoever has the task then shares what is left."""
+    team = team_of([robot("one", -1, 0.5), robot("two", -1, 4.5)], [FIELD])
+    crew = Crew(team)
+    before = crew.drive(60.0).progress["s"]
+    assert 0.2 < before < 0.8
+    again = Crew(team)
+    again.poses[:] = crew.poses
+    again.allocator.recall(json.loads(json.dumps(crew.allocator.memory())))
+    after = again.step()
+    assert after.progress["s"] == pytest.approx(before, abs=0.01)
+    assert again.drive(170.0).finished == {"s"}
+
+
+def test_a_patrol_counts_its_rounds_on_after_a_restart():
+    crew = Crew(team_of([robot("one", 0, 0)], [ROUNDS]))
+    crew.drive(35.0)  # 26 m a round
+    again = Crew(crew.allocator.team)
+    again.poses[:] = crew.poses
+    again.allocator.recall(json.loads(json.dumps(crew.allocator.memory())))
+    assert not again.step().finished
+    assert again.drive(30.0).finished == {"p"}
+
+
+@pytest.mark.parametrize(
+    "task, saved",
+    [
+        (FIELD, None), (FIELD, 3), (FIELD, {}), (FIELD, {"area": [], "left": []}),
+        (FIELD, FIELD.saved(FIELD.begin()) | {"left": [[0, 1]]}),
+        (FIELD, FIELD.saved(FIELD.begin()) | {"left": [[-9, 99]] * 8}),
+        (FIELD, FIELD.saved(FIELD.begin()) | {"left": [[5, 4]] * 8}),
+        (FIELD, FIELD.saved(FIELD.begin()) | {"left": [["a", "b"]] * 8}),
+        (FIELD, FIELD.saved(FIELD.begin()) | {"left": [[float("nan")] * 2] * 8}),
+        (FIELD, FIELD.moved((50, 50, 0), None).saved(FIELD.begin())),
+        (ROUNDS, -1), (ROUNDS, "two"), (ROUNDS, 1.5), (ROUNDS, None),
+        (replace(ROUNDS, laps=0), 3), (watch("gate", 3, 0), {}),
+    ],
+)  # fmt: skip
+def test_work_that_is_not_of_this_task_begins_anew(task, saved):
+    with pytest.raises(ValueError):
+        task.restored(saved)
+    work = Work(team_of([robot("one", 0, 0)], [task]))
+    before = work.saved()
+    work.restore(task.name, saved)
+    work.restore("unknown", saved)
+    assert work.saved() == before
 
 
 # -- follow, formation, moving goals --------------------------------------------------------

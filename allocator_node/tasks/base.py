@@ -140,6 +140,21 @@ class Task(Checked, abc.ABC):
         """Give the state of a task that has come to its end; standing tasks begin anew."""
         return self.begin()
 
+    def saved(self, state: Any) -> Any:
+        """Give what is done and must survive a restart, as JSON-able data; None: nothing."""
+        return None
+
+    def restored(self, saved: Any) -> Any:
+        """Give the state to go on from.
+
+        Args:
+            saved: What :meth:`saved` gave in an earlier run, or anything a file may hold.
+
+        Raises:
+            ValueError: It is not of this task.
+        """
+        raise ValueError(f"{self.kind} saves nothing")
+
 
 def hold(scene: Scene) -> Goals:
     """Let every robot stay where it is: what the task keeps to is not known."""

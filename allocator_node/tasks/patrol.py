@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from functools import cached_property
-from typing import Annotated
+from typing import Annotated, Any
 
 import numpy as np
 from annotated_types import Ge, MinLen
@@ -69,6 +69,16 @@ class Patrol(Task):
     def begin(self) -> Round:
         """Give the state before the first round."""
         return Round()
+
+    def saved(self, state: Round) -> int | None:
+        """Give how many waypoints were passed, where that is counted."""
+        return state.passed if self.ends else None
+
+    def restored(self, saved: Any) -> Round:
+        """Give the state after so many waypoints."""
+        if not (self.ends and isinstance(saved, int) and saved >= 0):
+            raise ValueError("not a number of waypoints passed")
+        return Round(passed=saved)
 
     def advance(self, state: Round, scene: Scene) -> Round:
         """Send each member that reached its waypoint on to the next."""

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from functools import cached_property
-from typing import Annotated
+from typing import Annotated, Any
 
 import numpy as np
 import shapely
@@ -120,6 +120,26 @@ class Sweep(Task):
     def finished(self, state: Swept) -> bool:
         """Tell whether every lane is done."""
         return not state.todo()
+
+    def saved(self, state: Swept) -> dict[str, list]:
+        """Give what is left of each lane, m along it, and of which area."""
+        return {"area": [list(c) for c in self.area], "left": [list(part) for part in state.left]}
+
+    def restored(self, saved: Any) -> Swept:
+        """Give the state in which that much is left; nobody is on a lane yet."""
+        whole = self.begin()
+        try:
+            area = tuple((float(x), float(y)) for x, y in saved["area"])
+            left = tuple((float(low), float(high)) for low, high in saved["left"])
+        except (LookupError, TypeError, OverflowError) as error:
+            raise ValueError(f"not what is left of a sweep: {error!r}") from error
+        within = (
+            low == high == 0.0 or first <= low < high <= last
+            for (low, high), (first, last) in zip(left, whole.left, strict=False)
+        )
+        if area != self.area or len(left) != len(whole.left) or not all(within):
+            raise ValueError("what is left is of another sweep")
+        return replace(whole, left=left)
 
     def progress(self, state: Swept) -> float:
         """Give the share of the lanes' length that is done."""
