@@ -179,8 +179,7 @@ class Allocator:
         self._efficacy.update(step, self._assignment, progress.distance, dt, settings)
 
     def _stage(self, view: View) -> Stage:
-        reach, margin = self._pilot.safety.reach, self._settings.margin
-        return Stage(self._model, view, self._assignment, reach, margin)
+        return Stage(self._model, view, self._assignment, self._pilot.safety)
 
     def _formulate(self, view: View, goals: list[Goals]) -> tuple[Problem, np.ndarray]:
         known = Known(
@@ -324,7 +323,8 @@ class Allocator:
             shortfalls=shortfalls(model, found),
             notices=tuple(
                 notices(
-                    model, view.places, enough, self._charging.on, motion.control, motion.rows
+                    model, view.places, enough, self._charging.on, motion.control, motion.rows,
+                    self._work.remarks(),
                 )
             ),
             seconds=seconds,

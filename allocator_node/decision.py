@@ -69,7 +69,7 @@ class Shortfall:
 
 @dataclass(frozen=True)
 class Notice:
-    """Something a person should know: about which robot or topic, how bad, what."""
+    """Something a person should know: about which robot or task, how bad, what."""
 
     about: str
     level: Level

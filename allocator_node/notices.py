@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 
 import numpy as np
 
@@ -35,8 +35,11 @@ def notices(
     charging: np.ndarray,
     control: Control,
     rows: SafetyRows,
+    remarks: Mapping[str, str],
 ) -> Iterator[Notice]:
     """Name robots that are silent, astray, short of energy, stopped or too near to something.
+
+    And tasks of which there is something to say.
 
     Args:
         model: The team.
@@ -45,7 +48,10 @@ def notices(
         charging: Robots for which that is being seen to, shape (N,).
         control: The commands and what the rows did to them.
         rows: The safety rows.
+        remarks: Task to what is to be said of it.
     """
+    for task, text in remarks.items():
+        yield Notice(task, Level.WARN, text)
     names = model.robots
     for i in np.flatnonzero(~places.heard):
         timed = np.isfinite(places.age[i])

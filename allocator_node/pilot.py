@@ -177,6 +177,7 @@ class Pilot:
         self.commands[own, 0] = course.demand[own]
         if not hold:
             free = np.matmul(view.jacobians, control.free[:, :, None])[:, :, 0]
-            free[~model.fleet.steered & np.isinf(model.fleet.speed_up)] = np.nan
+            slow = model.fleet.steered | np.isfinite(model.fleet.speed_up) | course.exact
+            free[~slow] = np.nan
             self._guidance.notice(course, implied, free, view.dt)
         self._last = (view.points, implied, course)

@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from .model import Model
+from .program import Safety
 from .tasks import Goals, Located, Scene, Task
 from .team import Target, Team
 from .view import View
@@ -41,6 +42,11 @@ class Work:
             name: task.progress(self._states[name]) for name, task in self.team.tasks.items()
         }
         return {name: share for name, share in shares.items() if share is not None}
+
+    def remarks(self) -> dict[str, str]:
+        """Give what a person should know of tasks, by name."""
+        said = {name: task.remark(self._states[name]) for name, task in self.team.tasks.items()}
+        return {name: text for name, text in said.items() if text is not None}
 
     def keeping_to(self, tasks: Iterable[int]) -> set[int]:
         """Give the tasks that keep to whoever does one of these."""
@@ -108,24 +114,23 @@ class Stage:
         model: The team.
         view: What is known.
         assignment: Task of each robot, −1: none, shape (N,).
-        reach: How far each body reaches around its control point, m, shape (N,).
-        margin: Distance kept beside the bodies, m.
+        safety: What keeps them apart, and off the edges of the site.
     """
 
     model: Model
     view: View
     assignment: np.ndarray
-    reach: np.ndarray
-    margin: float
+    safety: Safety
 
     def scene(self, m: int) -> Scene:
         """Give what task m sees."""
         view, fleet = self.view, self.model.fleet
         members = np.flatnonzero((self.assignment == m) & view.places.heard)
-        spacing = 2 * self.reach[members].max(initial=0.0) + 1.5 * self.margin
+        reach = self.safety.reach[members].max(initial=0.0)
+        spacing = 2 * reach + 1.5 * self.safety.settings.margin
         return Scene(
             view.now, view.points, view.poses[:, 3], fleet.ahead, members, spacing,
-            partial(self.suffice, m), fleet.cruise, self.find,
+            partial(self.suffice, m), fleet.cruise, self.find, self.safety.clear,
         )  # fmt: skip
 
     def suffice(self, m: int, robots: np.ndarray) -> bool:

@@ -485,6 +485,42 @@ def test_work_that_is_not_of_this_task_begins_anew(task, saved):
     assert work.saved() == before
 
 
+def test_a_sweep_up_to_the_fence_leaves_out_what_the_margins_forbid_and_says_so():
+    """On a site 12 m × 4 m the first and last lane and all ends are too near to the fence."""
+    corners = ((0, 0), (12, 0), (12, 4), (0, 4))
+    task = Sweep(name="s", area=corners, lane_width=1.0, overlap=0.0)
+    crew = Crew(replace(team_of([robot("one", 2, 2, drive=ROVER)], [task]), boundary=corners))
+    decision = crew.drive(80.0)
+    assert decision.finished == {"s"}
+    # Lanes are 12.2 m; the middle ones keep what is farther from the fence than the body
+    # reaches (0.35 + 0.25 m) and the margin (0.3 m).
+    kept = 2 * (12.0 - 2 * (0.35 + 0.25 + 0.3))
+    assert decision.progress["s"] == pytest.approx(kept / (4 * 12.2), abs=0.03)
+    (said,) = (notice.text for notice in decision.notices if notice.about == "s")
+    missed = (1 - decision.progress["s"]) * 4 * 12.2
+    assert said == f"{missed:.1f} m of its lanes left out: too near to edges of the site"
+
+
+@pytest.mark.parametrize("backwards", [False, True])
+def test_a_lane_is_gone_on_with_beyond_what_cannot_be_reached(backwards):
+    """From 4 m to 7 m of its only lane nobody can go."""
+    task = Sweep(name="s", area=((0, 0), (20, 0), (20, 1), (0, 1)), lane_width=1.0)
+    along = np.arange(-0.1, 20.15, 0.05)[:: -1 if backwards else 1]
+    state, at = task.begin(), []
+    for now, x in enumerate(along):
+        if not 4 <= x <= 7:
+            here = replace(
+                scene([(x, 0.5)], float(now)),
+                clear=lambda points, robot: (points[:, 0] < 4) | (points[:, 0] > 7),
+            )
+            state = task.advance(state, here)
+            at.append(task.goals(state, here).points[0, 0])
+    assert task.finished(state)
+    assert not any(4.0 < x < 7.0 for x in at), "nobody is sent there"
+    assert 3.0 <= state.missed <= 3.5
+    assert task.progress(state) == pytest.approx(1 - state.missed / 20.2)
+
+
 # -- follow, formation, moving goals --------------------------------------------------------
 
 

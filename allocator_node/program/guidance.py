@@ -208,8 +208,8 @@ class Guidance:
         Args:
             course: What each robot should do.
             velocities: What was allowed, m/s, shape (N, 3).
-            free: What robots that get up to speed slowly or must turn first would do
-                alone, m/s, shape (N, 3); NaN for others.
+            free: What robots that get up to speed slowly, must turn first, or keep up
+                with a moving goal would do alone, m/s, shape (N, 3); NaN for others.
             dt: Length of the period, s.
         """
         closing = -(course.away * velocities).sum(axis=1)

@@ -14,6 +14,11 @@ from ..team import Checked, HeadCount, Name, NonNegative, Point, Positive, Targe
 from .target import Located
 
 
+def everywhere(points: np.ndarray, robot: int) -> np.ndarray:
+    """Tell that points (n, 2) are clear of edges where there are none, (n,)."""
+    return np.ones(len(points), dtype=bool)
+
+
 @dataclass(frozen=True)
 class Scene:
     """What a task sees of the team in one period.
@@ -28,6 +33,7 @@ class Scene:
         suffices: Whether robots with these indices meet head count and needs.
         cruise: Cruising speeds, m/s, shape (N,).
         find: Where a target is now; None where that is not known.
+        clear: At which points (n, 2) a robot keeps all distances from edges of the site, (n,).
     """
 
     now: float
@@ -39,6 +45,7 @@ class Scene:
     suffices: Callable[[np.ndarray], bool]
     cruise: np.ndarray
     find: Callable[[Target], Located | None]
+    clear: Callable[[np.ndarray, int], np.ndarray] = everywhere
 
     def locate(self, target: Point | Target) -> Located | None:
         """Give where a target or a point of the site is; None where that is not known."""
@@ -134,6 +141,10 @@ class Task(Checked, abc.ABC):
 
     def progress(self, state: Any) -> float | None:
         """Give the share 0..1 that is done; None where there is no such thing."""
+        return None
+
+    def remark(self, state: Any) -> str | None:
+        """Say what a person should know of it in a plain sentence; None: nothing."""
         return None
 
     def ended(self) -> Any:

@@ -29,6 +29,9 @@ GAP = 0.5
 ON_LANE = 0.5
 """Distance from its lane within which a robot is led along it, m."""
 
+STEP = 0.2
+"""Distance between two points of a lane that are looked at, m."""
+
 SLOWEST = 0.15
 """Speed at the end of a lane, m/s."""
 
@@ -45,12 +48,14 @@ class Pass:
         forward: Whether it goes from the lane's first point to its last.
         working: Whether it is on the lane; else on the way there.
         at: Where it is along the lane, m.
+        end: Where along the lane it ends, m.
         since: When it last made progress, s.
         nearest: Least distance so far to where it begins, m.
     """
 
     lane: int
     forward: bool
+    end: float
     since: float
     working: bool = False
     at: float = 0.0
@@ -67,6 +72,7 @@ class Swept:
         shares: Member to its lanes.
         upward: Whether everybody goes through its share from the first lane on.
         put_off: Lanes on which somebody could not go on; they are tried again last.
+        missed: Length of lanes that nobody can reach for edges of the site, m.
     """
 
     left: tuple[tuple[float, float], ...]
@@ -74,6 +80,7 @@ class Swept:
     shares: Mapping[int, tuple[int, ...]] = field(default_factory=dict)
     upward: bool = True
     put_off: frozenset[int] = frozenset()
+    missed: float = 0.0
 
     def todo(self) -> list[int]:
         """Give the lanes that are not done."""
@@ -83,6 +90,8 @@ class Swept:
 @dataclass(frozen=True, kw_only=True)
 class Sweep(Task):
     """Finishes when every lane is done; what is done stays done, whoever did it.
+
+    What the margins of keep-out areas and the boundary forbid is left out, and said.
 
     The group shares out the lanes that are left in blocks of equal length, anew
     whenever somebody joins, leaves, or has nothing left to do.
@@ -123,7 +132,11 @@ class Sweep(Task):
 
     def saved(self, state: Swept) -> dict[str, list]:
         """Give what is left of each lane, m along it, and of which area."""
-        return {"area": [list(c) for c in self.area], "left": [list(part) for part in state.left]}
+        return {
+            "area": [list(corner) for corner in self.area],
+            "left": [list(part) for part in state.left],
+            "missed": state.missed,
+        }
 
     def restored(self, saved: Any) -> Swept:
         """Give the state in which that much is left; nobody is on a lane yet."""
@@ -131,6 +144,7 @@ class Sweep(Task):
         try:
             area = tuple((float(x), float(y)) for x, y in saved["area"])
             left = tuple((float(low), float(high)) for low, high in saved["left"])
+            missed = float(saved["missed"])
         except (LookupError, TypeError, OverflowError) as error:
             raise ValueError(f"not what is left of a sweep: {error!r}") from error
         within = (
@@ -139,13 +153,25 @@ class Sweep(Task):
         )
         if area != self.area or len(left) != len(whole.left) or not all(within):
             raise ValueError("what is left is of another sweep")
-        return replace(whole, left=left)
+        if not 0 <= missed <= self._whole:
+            raise ValueError("more was missed than there is")
+        return replace(whole, left=left, missed=missed)
 
     def progress(self, state: Swept) -> float:
         """Give the share of the lanes' length that is done."""
-        left = sum(high - low for low, high in state.left)
-        whole = float((self.lanes.length + 2 * NEAR).sum())
-        return min(max(1.0 - left / whole, 0.0), 1.0)
+        left = state.missed + sum(high - low for low, high in state.left)
+        return min(max(1.0 - left / self._whole, 0.0), 1.0)
+
+    @property
+    def _whole(self) -> float:
+        """Length of all lanes, m."""
+        return float((self.lanes.length + 2 * NEAR).sum())
+
+    def remark(self, state: Swept) -> str | None:
+        """Say how much of its lanes is left out."""
+        if state.missed < GAP:
+            return None
+        return f"{state.missed:.1f} m of its lanes left out: too near to edges of the site"
 
     def advance(self, state: Swept, scene: Scene) -> Swept:
         """Take off what was swept since, and give whoever is free the next lane."""
@@ -185,7 +211,8 @@ class Sweep(Task):
             low = high = 0.0
         left[before.lane] = (low, high)
         after = replace(before, working=working, at=at, since=since, nearest=nearest)
-        return after if high > low else None
+        goes_on = low < before.end if before.forward else high > before.end
+        return after if high > low and goes_on else None
 
     @property
     def _astray(self) -> float:
@@ -195,6 +222,7 @@ class Sweep(Task):
     def _next(self, state: Swept, scene: Scene) -> Swept:
         """Give members without a lane the next of their own share."""
         passes, todo, put_off = dict(state.passes), set(state.todo()), state.put_off
+        left = list(state.left)
         for robot, done in passes.items():
             mine = [lane for lane in state.shares[robot] if lane in todo]
             if done is None and mine:
@@ -202,8 +230,40 @@ class Sweep(Task):
                 put_off = put_off if fresh else put_off - set(mine)
                 lane = (fresh or mine)[0 if state.upward else -1]
                 forward = self._forward(state, lane, scene.points[robot, :2])
-                passes[robot] = Pass(lane, forward, scene.now)
-        return replace(state, passes=passes, put_off=put_off)
+                passes[robot], left[lane] = self._begun(lane, left[lane], forward, robot, scene)
+        skipped = sum(np.ptp(part) for part in state.left) - sum(np.ptp(part) for part in left)
+        return replace(
+            state, left=tuple(left), passes=passes, put_off=put_off,
+            missed=state.missed + float(skipped),
+        )  # fmt: skip
+
+    def _begun(
+        self, lane: int, left: tuple[float, float], forward: bool, robot: int, scene: Scene
+    ) -> tuple[Pass | None, tuple[float, float]]:
+        """Begin the first stretch of a lane that a robot can reach, leaving out what is before.
+
+        Args:
+            lane: Index of the lane.
+            left: What is left of it, from and to, m along it.
+            forward: Whether the robot begins at the lane's first end.
+            robot: Index of the robot.
+            scene: What the task sees.
+
+        Returns:
+            The pass, None where no stretch can be reached; what is left of the lane then.
+        """
+        sign = 1 if forward else -1
+        way = np.linspace(*left, 2 + int(np.ptp(left) / STEP))[::sign]
+        clear = scene.clear(self.lanes.at(lane, way), robot)
+        turns = np.flatnonzero(np.diff(clear.astype(int), prepend=0, append=0))
+        for first, after in zip(turns[0::2], turns[1::2], strict=True):
+            begin, end = float(way[first]), float(way[after - 1])
+            if after < len(way):
+                end -= sign * NEAR
+            if sign * (end - begin) > NEAR:
+                rest = (begin, left[1]) if forward else (left[0], begin)
+                return Pass(lane, forward, end, scene.now), rest
+        return None, (0.0, 0.0)
 
     def _forward(self, state: Swept, lane: int, point: np.ndarray) -> bool:
         """Tell whether a lane's first end is the nearer one."""
@@ -268,10 +328,10 @@ class Sweep(Task):
                 points[robot, :2] = scene.points[robot, :2]
                 continue
             low, high = state.left[done.lane]
-            begin, end, sign = (low, high, 1.0) if done.forward else (high, low, -1.0)
+            begin, sign = (low, 1.0) if done.forward else (high, -1.0)
             points[robot, :2] = self.lanes.at(done.lane, begin)
             if done.working and sign * (done.at - begin) <= GAP:
-                speed = min(sign * (end - done.at) + SLOWEST, scene.cruise[robot])
+                speed = min(sign * (done.end - done.at) + SLOWEST, scene.cruise[robot])
                 points[robot, :2] = self.lanes.at(done.lane, done.at)
                 velocities[robot, :2] = sign * max(speed, SLOWEST) * self.lanes.along
                 tolerance[robot] = ON_LANE
