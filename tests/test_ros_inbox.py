@@ -397,17 +397,39 @@ def test_a_topic_of_another_type_is_told(post: Post) -> None:
     rclpy.shutdown(context=context)
 
 
-def test_warnings_are_throttled() -> None:
+def test_warnings_are_throttled(monkeypatch: pytest.MonkeyPatch) -> None:
     """A topic at a time, and the next one says how many were left out."""
-    said = []
+    said, now = [], [1000.0]
+    monkeypatch.setattr("allocator_node.ros.complaints.time.monotonic", lambda: now[0])
     complaints = Complaints(type("Logger", (), {"warning": staticmethod(said.append)}))
     for _ in range(1000):
         complaints.refuse("/a", "bad")
         complaints.refuse("/b", "worse")
     assert said == ["/a: refused: bad", "/b: refused: worse"]
-    complaints._spoken["/a"] -= 6.0
+    now[0] += 6.0
     complaints.refuse("/a", "bad")
     assert said[2:] == ["/a: refused: bad (999 more since the last warning)"]
+
+
+def test_what_goes_on_is_said_less_and_less_often(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Something else is said as soon as anything may be; after a while of peace all is new."""
+    said, now = [], [1000.0]
+    monkeypatch.setattr("allocator_node.ros.complaints.time.monotonic", lambda: now[0])
+    complaints = Complaints(
+        type("Logger", (), {"warning": staticmethod(lambda text: said.append(now[0] - 1000))})
+    )
+    for _ in range(400):
+        complaints.warn("/a", "odd")
+        now[0] += 1.0
+    assert said == [0, 5, 15, 35, 75, 135, 195, 255, 315, 375]
+    now[0] += 1.0
+    complaints.warn("/a", "odder")
+    assert said[-1] == 401
+    now[0] += 200.0
+    for _ in range(7):
+        complaints.warn("/a", "odd")
+        now[0] += 1.0
+    assert said[-2:] == [601, 606]
 
 
 def test_goal_and_quality(post: Post) -> None:
