@@ -29,6 +29,17 @@ def test_twenty_minutes_of_faults(seed: int) -> None:
     assert not any(totals.never.values()), "\n".join(totals.lines())
 
 
+def test_two_localizations_across_a_restart() -> None:
+    """Mission 1005 began with a contact: the node believed the first pose after a restart."""
+    totals = campaign.Totals()
+    mission = campaign.Campaign(1005, campaign.MISSION, totals)
+    mission.seconds = 8.0
+    with campaign.sound_solvers():
+        mission.run()
+    assert {"two localizations", "restart"} <= set(totals.faults)
+    assert not any(totals.never.values()), "\n".join(totals.lines())
+
+
 def test_the_campaign_notices_what_must_not_happen(monkeypatch: pytest.MonkeyPatch) -> None:
     """A period in which the allocator fails is counted, and the mission goes on."""
     totals = campaign.Totals()
