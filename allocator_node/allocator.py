@@ -20,7 +20,7 @@ from .notices import notices, shortfalls
 from .observation import MovedGoal, Observation, Orders
 from .pilot import Motion, Pilot
 from .program import Assigner, Assignment, Problem, price
-from .program.formulate import Known, formulate
+from .program.formulate import Known, Means, formulate
 from .program.guidance import Targets
 from .reasons import Reasons, Situation
 from .settings import Settings
@@ -31,6 +31,13 @@ from .work import Stage, Work
 
 LONGEST_STEP = 1.0
 """Longest time one step counts for; beyond it the loop was paused, s."""
+
+RESTED = 20.0
+"""Time constant with which a robot that was swapped may be swapped again as before, s."""
+
+MOST_RESTLESS = 64.0
+"""Each swap doubles what the next one must save, up to so many times: nobody is sent to
+and fro for long where two choices take turns in looking cheaper."""
 
 INSISTENCE = 1.4
 """How much more a robot insists on its way with each priority class of its task."""
@@ -69,6 +76,7 @@ class Allocator:
         self._topics = TargetBelief()
         self.assigner = Assigner(budget)
         self._since = np.full(count, np.nan)
+        self._restless = np.ones(count)
         self._work = Work(team)
         self._model = Model(team)
         self._poses = PoseBelief(self._model.fleet.fastest)
@@ -113,24 +121,24 @@ class Allocator:
         with _timed(seconds, "pricing"):
             stage = self._stage(view)
             goals = [self._work.advance(m, stage) for m in range(len(self._model.tasks))]
-            problem, enough = self._formulate(view, goals)
+            problem, means = self._formulate(view, goals)
             prices = price(problem)
         with _timed(seconds, "assignment"):
             found = self.assigner.assign(problem, prices)
-        situation = self._situation(view, enough, prices)
+        situation = self._situation(view, means.enough & means.way, prices)
         before, self._assignment = self._assignment, found.task
         reallocations = self._reasons.explain(
             situation, before, found.task, problem.swap_cost, now, not self.assigner.searching
         )
-        self._take_up(before, view, goals)
-        errands = self._charge(view, enough)
+        self._take_up(before, view, goals, problem)
+        errands = self._charge(view, means.enough)
         with _timed(seconds, "control"):
             targets = self._targets(goals, errands, view.places.steady)
             motion = self._pilot.drive(
                 view, self._model, targets, self._insistence(), self.orders.hold, self._settings
             )
         return self._decision(
-            view, found, targets, enough, problem, reallocations, motion, seconds, errands
+            view, found, targets, means, problem, reallocations, motion, seconds, errands
         )
 
     def _believe(self, observation: Observation, now: float) -> View:
@@ -181,7 +189,7 @@ class Allocator:
     def _stage(self, view: View) -> Stage:
         return Stage(self._model, view, self._assignment, self._pilot.safety)
 
-    def _formulate(self, view: View, goals: list[Goals]) -> tuple[Problem, np.ndarray]:
+    def _formulate(self, view: View, goals: list[Goals]) -> tuple[Problem, Means]:
         known = Known(
             poses=view.poses,
             points=view.points,
@@ -195,6 +203,7 @@ class Allocator:
             trusted=self._trusted(view),
             spendable=self._energy.spendable(self._model),
             dearness=self._energy.dearness(self._model),
+            restless=self._restless,
             active=self._work.active(),
             charging=self._charging.on,
             pinned=self._model.mask(self.orders.pins),
@@ -226,8 +235,13 @@ class Allocator:
             finished=self._work.finished(),
         )
 
-    def _take_up(self, before: np.ndarray, view: View, goals: list[Goals]) -> None:
+    def _take_up(
+        self, before: np.ndarray, view: View, goals: list[Goals], problem: Problem
+    ) -> None:
         """Hand the changed robots their new tasks, and these their new groups."""
+        self._restless = 1.0 + (self._restless - 1.0) * np.exp(-view.dt / RESTED)
+        swapped = problem.settled[before[problem.settled] != self._assignment[problem.settled]]
+        self._restless[swapped] = np.minimum(2.0 * self._restless[swapped], MOST_RESTLESS)
         changed = np.flatnonzero(before != self._assignment)
         if not len(changed):
             return
@@ -291,7 +305,7 @@ class Allocator:
         view: View,
         found: Assignment,
         targets: Targets,
-        enough: np.ndarray,
+        means: Means,
         problem: Problem,
         reallocations: tuple,
         motion: Motion,
@@ -323,13 +337,22 @@ class Allocator:
             shortfalls=shortfalls(model, found),
             notices=tuple(
                 notices(
-                    model, view.places, enough, self._charging.on, motion.control, motion.rows,
-                    self._work.remarks(),
+                    model, self._settings, view.places, means.enough, self._charging.on, motion,
+                    self._work.remarks() | self._cut_off(view, means),
                 )
             ),
             seconds=seconds,
             gap=found.gap,
         )
+
+    def _cut_off(self, view: View, means: Means) -> dict[str, str]:
+        """Say of active tasks to which nobody that could do them finds a way."""
+        able = (view.suitability > 0) & view.places.heard[:, None] & self._work.active()
+        lost = able.any(axis=0) & ~(able & means.way).any(axis=0)
+        return {
+            self._model.tasks[m]: "no robot that could do it finds a way there"
+            for m in np.flatnonzero(lost)
+        }
 
     def _activity(self, view: View, errands: Errands) -> tuple[str, ...]:
         """Say in a word what each robot does."""
@@ -372,6 +395,8 @@ class Allocator:
         self._assignment = np.array(
             [position.get(int(m), -1) for m in self._assignment], dtype=int
         )
+        if model.tasks != self._model.tasks:
+            self.assigner.forget()
         self._model = model
         self._pilot.forget()
 

@@ -9,10 +9,16 @@ import numpy as np
 from .belief.poses import Places
 from .decision import Level, Notice, Shortfall
 from .model import Model
-from .program import Assignment, Control, SafetyRows
+from .pilot import Motion
+from .program import Assignment
+from .settings import Settings
 
-NOTICED = 0.05
-"""How far into a margin a robot must be to be named, m: less is pose noise."""
+NOISE = 4.0
+"""How far into a margin a robot must be to be named, in standard deviations of the poses,
+at most half the margin."""
+
+STUCK = 20.0
+"""Time without any headway after which a robot is named, s."""
 
 
 def shortfalls(model: Model, found: Assignment) -> tuple[Shortfall, ...]:
@@ -30,24 +36,24 @@ def shortfalls(model: Model, found: Assignment) -> tuple[Shortfall, ...]:
 
 def notices(
     model: Model,
+    settings: Settings,
     places: Places,
     enough: np.ndarray,
     charging: np.ndarray,
-    control: Control,
-    rows: SafetyRows,
+    motion: Motion,
     remarks: Mapping[str, str],
 ) -> Iterator[Notice]:
-    """Name robots that are silent, astray, short of energy, stopped or too near to something.
+    """Name robots that are silent, astray, low, stopped, stuck or too near to something.
 
     And tasks of which there is something to say.
 
     Args:
         model: The team.
+        settings: Weights and times.
         places: Where the robots are.
         enough: Where the energy suffices, shape (N, M).
         charging: Robots for which that is being seen to, shape (N,).
-        control: The commands and what the rows did to them.
-        rows: The safety rows.
+        motion: The commands, and what the rows did to them.
         remarks: Task to what is to be said of it.
     """
     for task, text in remarks.items():
@@ -66,10 +72,14 @@ def notices(
             if charging[i]:
                 text, level = f"{text}: it is to charge first", Level.OK
             yield Notice(names[i], level, text)
-    for i in np.flatnonzero(control.stopped):
+    for i in np.flatnonzero(motion.stuck > STUCK):
+        text = f"gets no nearer to where it is to go, for {motion.stuck[i]:.0f} s"
+        yield Notice(names[i], Level.WARN, text)
+    for i in np.flatnonzero(motion.control.stopped):
         yield Notice(names[i], Level.ERROR, "stopped: no safe command could be found")
-    seen = set()
-    near = rows.violated & (rows.room < -NOTICED)
+    seen, rows = set(), motion.rows
+    noise = min(NOISE * settings.pose_noise, settings.margin / 2)
+    near = rows.violated & (rows.room < -noise)
     for i, other in zip(rows.first[near], rows.obstacle[near], strict=True):
         if (i, other) in seen or (other >= 0 and not places.steady[other]):
             continue

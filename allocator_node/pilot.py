@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from .belief.efficacy import Step
+from .belief.poses import Places
 from .model import Model
 from .program import Control, ControlProblem, Safety, SafetyRows, solve_control
 from .program.courtesy import make_way
@@ -18,14 +19,28 @@ from .settings import Settings
 from .team import Team
 from .view import View
 
+HEADWAY = 0.05
+"""Share of the speed demanded below which a robot makes no headway."""
+
+CATCHES_UP = 4.0
+"""How many seconds without headway a second with it makes up for."""
+
 
 @dataclass(frozen=True)
 class Motion:
-    """Attributes: what each robot was asked to do, what it may do, and the rows between."""
+    """How the team moves in one period.
+
+    Attributes:
+        course: What each robot was asked to do.
+        control: What it may do.
+        rows: The rows between the two.
+        stuck: Time each robot has made no headway, s, shape (N,).
+    """
 
     course: Course
     control: Control
     rows: SafetyRows
+    stuck: np.ndarray
 
 
 @dataclass(frozen=True)
@@ -52,6 +67,8 @@ class Pilot:
         self.commands = np.zeros((count, 4))
         self._guidance = Guidance(count)
         self._last: tuple[np.ndarray, np.ndarray, Course] | None = None
+        self._trail = np.zeros((count, 2))
+        self._stuck = np.zeros(count)
         self.survey(team, model, settings)
 
     def survey(self, team: Team, model: Model, settings: Settings) -> None:
@@ -64,6 +81,7 @@ class Pilot:
     def restart(self, robots: np.ndarray) -> None:
         """Begin anew for robots (n,) that got another task."""
         self._guidance.restart(robots)
+        self._stuck[robots] = 0.0
 
     def forget(self) -> None:
         """Draw no conclusion from the motion until the next period."""
@@ -118,7 +136,8 @@ class Pilot:
         silent_for = np.where(places.known & ~places.steady, places.age, 0.0)
         growth = rolled(model.fleet.max_speed, silent_for, settings)
         drift = np.where(model.navigates[:, None], places.velocities[:, :2], 0.0)
-        rows = self.safety.rows(view.points, places.known, obeys, growth, drift)
+        self._extend_trails(places, view.dt)
+        rows = self.safety.rows(view.points, places.known, obeys, growth, drift, self._trail)
         control = solve_control(
             ControlProblem(
                 jacobians=view.jacobians,
@@ -131,11 +150,17 @@ class Pilot:
                 demand=np.where(still | course.exact, 0.0, course.demand),
                 preferred=course.preferred,
                 rows=rows,
-                slack_weight=settings.slack_weight * insistence,
+                slack_weight=settings.slack_weight / model.fleet.cruise**2 * insistence,
             )
         )
-        self._remember(view, model, course, control, hold)
-        return Motion(course, control, rows)
+        self._remember(view, model, course, control, rows, hold)
+        return Motion(course, control, rows, self._stuck.copy())
+
+    def _extend_trails(self, places: Places, dt: float) -> None:
+        """Keep how far the commands since each robot's last pose may have taken it, m."""
+        sent = np.zeros_like(self._trail) if self._last is None else self._last[1][:, :2]
+        fresh = places.steady & (places.age < 1.5 * dt)
+        self._trail = np.where(fresh[:, None], sent * dt, self._trail + sent * dt)
 
     def _course(
         self, view: View, model: Model, targets: Targets, obeys: np.ndarray, settings: Settings
@@ -166,7 +191,13 @@ class Pilot:
         )
 
     def _remember(
-        self, view: View, model: Model, course: Course, control: Control, hold: bool
+        self,
+        view: View,
+        model: Model,
+        course: Course,
+        control: Control,
+        rows: SafetyRows,
+        hold: bool,
     ) -> None:
         """Keep what the next period's progress is compared with, and who was held back."""
         self.commands = control.commands.copy()
@@ -175,9 +206,38 @@ class Pilot:
         # Their own navigation is expected to bring them on at their nominal speed.
         implied[own] = course.to_goal[own] * course.demand[own, None]
         self.commands[own, 0] = course.demand[own]
+        headway = (course.to_goal * implied).sum(axis=1)
+        wants = course.demand > HEADWAY * model.fleet.cruise
+        stands = headway < HEADWAY * course.demand
         if not hold:
+            longer = np.where(stands, view.dt, -CATCHES_UP * view.dt)
+            self._stuck = np.where(wants, np.maximum(self._stuck + longer, 0.0), 0.0)
             free = np.matmul(view.jacobians, control.free[:, :, None])[:, :, 0]
             slow = model.fleet.steered | np.isfinite(model.fleet.speed_up) | course.exact
             free[~slow] = np.nan
-            self._guidance.notice(course, implied, free, view.dt)
+            blocked = _blocked(course, implied[:, :2], rows)
+            self._guidance.notice(
+                course, implied, free, blocked, model.fleet.cruise, view.dt
+            )
         self._last = (view.points, implied, course)
+
+
+def _blocked(course: Course, velocities: np.ndarray, rows: SafetyRows) -> np.ndarray:
+    """Tell which robots could not go straight on at half the speed demanded, (N,).
+
+    Args:
+        course: What each robot should do.
+        velocities: What all of them do now, m/s, shape (N, 2).
+        rows: The safety rows.
+    """
+    straight = course.to_goal[:, :2] * (course.demand / 2)[:, None]
+    blocked = np.zeros(len(straight), dtype=bool)
+    pair = rows.second >= 0
+    other = np.where(pair[:, None], velocities[rows.second], 0.0)
+    ahead = (rows.normal * (straight[rows.first] - other)).sum(axis=1) < rows.bound
+    blocked[rows.first[ahead]] = True
+    first, second = rows.first[pair], rows.second[pair]
+    apart = velocities[first] - straight[second]
+    ahead = (rows.normal[pair] * apart).sum(axis=1) < rows.bound[pair]
+    blocked[second[ahead]] = True
+    return blocked

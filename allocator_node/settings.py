@@ -16,7 +16,7 @@ class Settings(Checked):
 
     Attributes:
         kappa: Weight κ of effort beside energy, Wh.
-        slack_weight: Weight ℓ of closing speed given up, s²/m².
+        slack_weight: Weight ℓ of closing speed given up, as a share of the cruising speed.
         gamma: Gain γ of the task rows, 1/s: robots slow down within c/γ of a goal.
         gamma_s: Gain γ_s of the safety rows, 1/s.
         margin: Distance kept beside the bodies, m.

@@ -64,15 +64,21 @@ class Work:
         return frozenset(name for name in tasks if tasks[name].finished(self._states[name]))
 
     def active(self) -> np.ndarray:
-        """Tell which tasks are to be done now, shape (M,)."""
-        finished = self.finished()
-        return np.array(
-            [
-                task.active and name not in finished and finished.issuperset(task.after)
-                for name, task in self.team.tasks.items()
-            ],
-            dtype=bool,
-        )
+        """Tell which tasks are to be done now, shape (M,): none that keeps to one that is not."""
+        finished, tasks = self.finished(), self.team.tasks
+        now = {
+            name
+            for name, task in tasks.items()
+            if task.active and name not in finished and finished.issuperset(task.after)
+        }
+        keeps_to = {
+            name: task.keeps_to.task
+            for name, task in tasks.items()
+            if isinstance(task.keeps_to, Target) and task.keeps_to.task is not None
+        }
+        while idle := {name for name in now if keeps_to.get(name, name) not in now}:
+            now -= idle
+        return np.array([name in now for name in tasks], dtype=bool)
 
     def edit(self, team: Team) -> None:
         """Go on with another task table; tasks whose work changed begin anew."""
@@ -131,6 +137,7 @@ class Stage:
         return Scene(
             view.now, view.points, view.poses[:, 3], fleet.ahead, members, spacing,
             partial(self.suffice, m), fleet.cruise, self.find, self.safety.clear,
+            fleet.height_band,
         )  # fmt: skip
 
     def suffice(self, m: int, robots: np.ndarray) -> bool:

@@ -186,7 +186,7 @@ def random_problem(random: np.random.Generator, robots: int, tasks: int) -> Prob
         closing=np.where(near, 0.0, random.uniform(0, 1.5, (robots, tasks))),
         goal_speed=random.uniform(-0.3, 0.3, (robots, tasks)),
         kappa=random.choice([0.002, 0.1, 1.0]),
-        slack_weight=100.0,
+        slack_weight=random.uniform(50, 200, robots),
     )
 
 

@@ -8,7 +8,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from builders import random_problem
+from builders import Crew, random_problem, robot, team_of, watch
 
 from allocator_node.program import Assigner, Problem, assign, price
 from allocator_node.program.assigner import LONGEST_SEARCH
@@ -110,6 +110,27 @@ def test_the_proof_is_taken_up_once_it_is_there():
         assert found.proven and found.gap == 0.0
         assert found.cost == pytest.approx(best.cost, rel=1e-6)
         assigner.close()
+
+
+def test_nothing_is_taken_up_from_another_task_table():
+    """Tasks are removed while a search is under way, and after its proof was taken up."""
+    for taken_up in (False, True):
+        parts = ("camera", "gimbal")
+        robots = [robot(f"r{i}", i, 0, features=parts[: 1 + i % 2]) for i in range(6)]
+        tasks = [watch(f"t{m}", 5 * m, 9, most=4, needs={"scan": 1.2}) for m in range(3)]
+        crew = Crew(team_of(robots, tasks))
+        crew.allocator.assigner.budget = -1.0
+        for _ in range(3 if taken_up else 1):
+            crew.step()
+            if taken_up:
+                crew.allocator.assigner.wait()
+        kept = {"t0": tasks[0]}
+        crew.allocator.edit(crew.allocator.team.with_tasks(kept), crew.now)
+        for _ in range(3):
+            decision = crew.step()
+            crew.allocator.assigner.wait()
+            assert decision.tasks == ("t0",) and decision.assignment.max() < 1
+        crew.allocator.close()
 
 
 def test_a_robot_that_fails_is_replaced_in_the_same_period():

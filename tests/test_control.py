@@ -127,6 +127,7 @@ def dense(
         )
     )
     prices = np.where(rows.obstacle[eased] < 0, OFF_SITE, TOO_NEAR)
+    prices = prices * max(1.0, np.sqrt(p.slack_weight.max()) / 10)
     q = np.concatenate([(-2 * R * p.preferred).ravel(), np.zeros(count), prices])
     unit = np.eye(len(q))
     A, b = [], []

@@ -106,7 +106,7 @@ def test_minimum_effort_form_is_recovered(seed):
         full = np.where(problem.limits[i] > 0, 1.0, 0.0)
         effort[i, m], *_ = least_by_quadprog(
             -problem.away[i, m] @ problem.jacobians[i] * problem.limits[i],
-            problem.demand[i, m], problem.slack_weight, -full, full,
+            problem.demand[i, m], problem.slack_weight[i], -full, full,
         )  # fmt: skip
     least = min(
         sum(effort[i, m] for m, i in enumerate(chosen))
@@ -139,7 +139,7 @@ def test_pricing_is_each_robots_own_qp():
     prices = price(problem) - problem.energy
     for i, m in np.ndindex(12, 6):
         has = problem.limits[i] > 0
-        weights = np.diag([*2 / problem.limits[i, has] ** 2, 2 * problem.slack_weight])
+        weights = np.diag([*2 / problem.limits[i, has] ** 2, 2 * problem.slack_weight[i]])
         reach = -problem.away[i, m] @ problem.jacobians[i][:, has]
         unit = np.eye(has.sum() + 1)
         rows = np.vstack([[*reach, 1.0], unit[:-1], -unit[:-1], unit[-1]])
@@ -160,7 +160,7 @@ def test_steered_pricing_is_each_robots_own_qp(seed):
         kappa=1.0,
         closing=problem.closing * 3,
         eligible=np.ones_like(problem.eligible),
-        slack_weight=random.choice([0.1, 1.0, 100.0]),
+        slack_weight=random.choice([0.1, 1.0, 100.0], 12),
     )
     prices = price(problem) - problem.energy
     for i, m in itertools.product(np.flatnonzero(problem.gear), range(6)):
@@ -172,7 +172,7 @@ def test_steered_pricing_is_each_robots_own_qp(seed):
             [0, 0, 1],
         ])  # fmt: skip
         bounds = np.array([problem.demand[i, m], -top, 0, 0, 0])
-        weights = np.diag([2 / top**2, 2 / turn**2, 2 * problem.slack_weight])
+        weights = np.diag([2 / top**2, 2 / turn**2, 2 * problem.slack_weight[i]])
         _, value, *_ = quadprog.solve_qp(weights, np.zeros(3), rows.T, bounds)
         assert prices[i, m] == pytest.approx(value, rel=1e-8, abs=1e-10)
 

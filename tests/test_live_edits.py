@@ -66,9 +66,10 @@ PAIRS = st.frozensets(st.tuples(ROBOTS, NAMES), max_size=3)
 class Live(RuleBasedStateMachine):
     """An operator who cannot leave it alone, and robots that have a bad day."""
 
-    @initialize()
-    def begin(self) -> None:
+    @initialize(budget=st.sampled_from([np.inf, -1.0]))
+    def begin(self, budget: float) -> None:
         self.crew = Crew(parse_team(TEAM))
+        self.crew.allocator.assigner.budget = budget  # -1: every search beside the loop
         self.crew.charges = np.full(4, 0.9)
         self.decision = self.crew.step()
 

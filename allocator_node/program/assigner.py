@@ -95,6 +95,11 @@ class Assigner:
             self._closing.clear()
             self._thread = self._search = None
 
+    def forget(self) -> None:
+        """Drop what is known of other tasks: the next ones have other names or another order."""
+        self.close()
+        self._proof = None
+
     def wait(self) -> None:
         """Wait until the search beside the loop, if there is one, has ended."""
         if self._search is not None:

@@ -61,6 +61,11 @@ class ControlProblem:
         return np.where(self.limits > 0, self.limits, 1.0)
 
     @cached_property
+    def dearer(self) -> float:
+        """Factor of the prices of rows: progress of slow robots weighs more than 100 s²/m²."""
+        return max(1.0, float(np.sqrt(self.slack_weight.max(initial=0.0))) / 10.0)
+
+    @cached_property
     def speed(self) -> np.ndarray:
         """Velocity of each control point by share of each axis, m/s, shape (N, 3, 4)."""
         return self.jacobians * self.limits[:, None, :]
@@ -244,7 +249,8 @@ def joint(problem: ControlProblem, robots: np.ndarray) -> Joint:
     lowest, highest = np.zeros(size), np.full(size, np.inf)
     quadratic[shares:slacks] *= problem.slack_weight[robots[tasks]]
     linear[:shares] = -2.0 * problem.preferred[robots][has] / scale
-    linear[slacks:] = np.where(rows.obstacle[index[eased]] < 0, OFF_SITE, TOO_NEAR)
+    price = np.where(rows.obstacle[index[eased]] < 0, OFF_SITE, TOO_NEAR)
+    linear[slacks:] = problem.dearer * price
     lowest[:shares] = problem.lowest[robots][has] / scale
     highest[:shares] = problem.highest[robots][has] / scale
 

@@ -53,6 +53,8 @@ class Known:
         trusted: Where the efficacy allows the pair, shape (N, M).
         spendable: Energy above the reserve, Wh, shape (N,).
         dearness: λ, shape (N,).
+        restless: Factor of what another swap costs, for robots that were swapped lately,
+            shape (N,).
         active: Tasks to be done now, shape (M,).
         charging: Robots that are to charge first, shape (N,).
         pinned, banned: The operator's orders, shape (N, M).
@@ -70,6 +72,7 @@ class Known:
     trusted: np.ndarray
     spendable: np.ndarray
     dearness: np.ndarray
+    restless: np.ndarray
     active: np.ndarray
     charging: np.ndarray
     pinned: np.ndarray
@@ -77,9 +80,17 @@ class Known:
     previous: np.ndarray
 
 
+@dataclass(frozen=True)
+class Means:
+    """What a pair needs beside ability: energy and a way, each of shape (N, M)."""
+
+    enough: np.ndarray
+    way: np.ndarray
+
+
 def formulate(
     model: Model, settings: Settings, known: Known, goals: list[Goals], ways: Ways
-) -> tuple[Problem, np.ndarray]:
+) -> tuple[Problem, Means]:
     """Put the period's program into numbers.
 
     Energy to reach the goal and serve there, E = (idle + drive) · path / c + idle ·
@@ -95,7 +106,7 @@ def formulate(
         ways: Ways around the site's areas; a pair with none is not eligible.
 
     Returns:
-        The program, and where the energy suffices, shape (N, M).
+        The program, and where the energy suffices and there is a way.
     """
     robots, tasks = known.suitability.shape
     table = GoalTable(goals, robots)
@@ -115,17 +126,20 @@ def formulate(
     closing = table.pace * np.minimum(settings.gamma * distance, cruise)
     closing[distance <= table.tolerance] = 0.0
     path = np.where(np.isnan(table.path), distance, table.path)
+    way = np.isfinite(path)
+    path = np.where(way, path, 0.0)
 
     serving = way_energy(model, path) + model.idle[:, None] * table.dwell / SECONDS_PER_HOUR
-    home = table.points[..., :2] - model.docks[:, None, :2]
-    way_home = np.hypot(home[..., 0], home[..., 1]) * model.has_dock[:, None]
+    docks = np.column_stack([model.docks, np.zeros(robots)])
+    home = ways.outlook(docks, table.points, may & model.has_dock[:, None], "home").length
+    way_home = np.where(model.has_dock[:, None] & np.isfinite(home), home, 0.0)
     kept = known.spendable - settings.dock_margin * model.capacity * model.has_dock
     enough = serving + way_energy(model, way_home) <= kept[:, None]
 
     s = known.suitability * known.efficacy
     dearness = known.dearness[:, None]
-    urgent = model.urgency * np.where(np.isfinite(path), path, 0.0) / (SECONDS_PER_HOUR * cruise)
-    eligible = may & enough
+    urgent = model.urgency * path / (SECONDS_PER_HOUR * cruise)
+    eligible = may & enough & way
     pins = known.pinned & eligible
     pinned = np.full(robots, -1)
     if tasks:
@@ -133,6 +147,8 @@ def formulate(
         pinned[ordered] = pins[ordered].argmax(axis=1)
     swapped = way_energy(model, np.full(robots, settings.swap_distance))
     speed = (away * table.velocities).sum(axis=2) if table.moving else np.zeros(distance.shape)
+    # No robot is asked for more than it can do, so nobody is dear for a goal that leaps.
+    speed = np.maximum(speed, closing - model.fleet.max_speed[:, None])
     problem = Problem(
         capability=known.capability,
         needs=np.where(known.active[:, None], model.needs, 0.0),
@@ -142,7 +158,7 @@ def formulate(
         eligible=eligible,
         pinned=pinned,
         previous=known.previous,
-        swap_cost=known.dearness * swapped,
+        swap_cost=known.dearness * swapped * known.restless,
         energy=np.where(eligible, dearness * serving + urgent, 0.0)
         / np.maximum(s, settings.s_min),
         limits=model.fleet.limits,
@@ -152,7 +168,7 @@ def formulate(
         closing=closing,
         goal_speed=speed,
         kappa=settings.kappa,
-        slack_weight=settings.slack_weight,
+        slack_weight=settings.slack_weight / model.fleet.cruise**2,
         path=path,
     )
-    return problem, enough
+    return problem, Means(enough, way)

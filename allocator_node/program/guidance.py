@@ -30,6 +30,20 @@ TURN_ASIDE = np.radians(90)
 
 MOST_ASIDE = np.radians(100)
 
+LONG_ASIDE = 6.0
+"""How long a robot that is still held back stays turned that far before it tries the
+other side, s; if it moves, then only once the straight way is free. Twice as long each
+time: out of a narrow way two must back far enough to pass."""
+
+MOST_TRIES = 4.0
+"""It becomes no longer than after so many."""
+
+SLOW = 0.05
+"""Share of the cruising speed below which nobody is held back."""
+
+FORGIVEN = 10.0
+"""Time on its way after which a robot begins with the right-hand side again, s."""
+
 TURN_BACK = 1.5
 """Time constant with which it turns back once it moves, s."""
 
@@ -119,19 +133,30 @@ class Guidance:
     A robot that has reached its goal stands until it is clearly away from it
     again. One that rows hold back for long turns the way it prefers to the
     right-hand side, more the longer it lasts, and back when it moves again:
-    two that meet head-on pass each other on the same side.
+    two that meet head-on pass each other on the same side. Where that does not help,
+    it begins anew, then with the left-hand side.
+
+    Attributes:
+        standing: Robots that stand at their goals, shape (N,).
+        held: Time each has been held back, s, shape (N,).
+        aside: Angle by which each turns aside, to the right, rad, shape (N,).
     """
 
     def __init__(self, robots: int) -> None:
         self.standing = np.zeros(robots, dtype=bool)
         self.held = np.zeros(robots)
         self.aside = np.zeros(robots)
+        self._side = np.ones(robots)
+        self._tries = np.zeros(robots)
+        self._turned = np.zeros(robots)
+        self._free = np.zeros(robots)
 
     def restart(self, robots: np.ndarray) -> None:
         """Begin anew for robots (n,) that got another goal."""
         self.standing[robots] = False
         self.held[robots] = 0.0
         self.aside[robots] = 0.0
+        self._side[robots], self._tries[robots], self._turned[robots] = 1.0, 0.0, 0.0
 
     def course(
         self,
@@ -201,7 +226,13 @@ class Guidance:
         return preferred
 
     def notice(
-        self, course: Course, velocities: np.ndarray, free: np.ndarray, dt: float
+        self,
+        course: Course,
+        velocities: np.ndarray,
+        free: np.ndarray,
+        blocked: np.ndarray,
+        cruise: np.ndarray,
+        dt: float,
     ) -> None:
         """Learn who is held back.
 
@@ -210,15 +241,30 @@ class Guidance:
             velocities: What was allowed, m/s, shape (N, 3).
             free: What robots that get up to speed slowly, must turn first, or keep up
                 with a moving goal would do alone, m/s, shape (N, 3); NaN for others.
+            blocked: Robots that could not go straight on now, shape (N,).
+            cruise: Cruising speeds, m/s, shape (N,).
             dt: Length of the period, s.
         """
         closing = -(course.away * velocities).sum(axis=1)
         able = np.fmin(course.demand, -(course.away * free).sum(axis=1))
-        held = (course.demand > 0.05) & (closing < HELD_BELOW * able)
+        held = (course.demand > SLOW * cruise) & (closing < HELD_BELOW * able)
         self.held = np.where(held, self.held + dt, 0.0)
         impatient = self.held > PATIENCE
-        self.aside[impatient] = np.minimum(self.aside[impatient] + TURN_ASIDE * dt, MOST_ASIDE)
+        turn = self._side[impatient] * TURN_ASIDE * dt
+        self.aside[impatient] = np.clip(self.aside[impatient] + turn, -MOST_ASIDE, MOST_ASIDE)
         self.aside[~held] *= np.exp(-dt / TURN_BACK)
+        most = np.abs(self.aside) >= MOST_ASIDE - 1e-9
+        self._turned = np.where(held & most, self._turned + dt, 0.0)
+        stands = np.linalg.norm(velocities, axis=1) < SLOW * cruise
+        long = self._turned > LONG_ASIDE * 2.0 ** np.minimum(self._tries, MOST_TRIES)
+        in_vain = long & (stands | ~blocked)
+        self._side[in_vain] *= -1.0
+        self._tries[in_vain] += 1.0
+        self.aside[in_vain] = self._turned[in_vain] = 0.0
+        # Who was on its way for a while begins with the agreed side the next time.
+        self._free = np.where(held, 0.0, self._free + dt)
+        forgiven = self._free > FORGIVEN
+        self._side[forgiven], self._tries[forgiven] = 1.0, 0.0
 
 
 def _commands(

@@ -31,7 +31,10 @@ class Effort:
 
 
 def least_effort(
-    reach: np.ndarray, demand: np.ndarray, slack_weight: float, room: np.ndarray | None = None
+    reach: np.ndarray,
+    demand: np.ndarray,
+    slack_weight: np.ndarray | float,
+    room: np.ndarray | None = None,
 ) -> Effort:
     r"""Solve min uᵀu + ℓ δ² s.t. reachᵀ u + δ ≥ demand, 0 ≤ sign(reach) u ≤ room, δ ≥ 0.
 
@@ -46,7 +49,7 @@ def least_effort(
         reach: Closing speed each axis brings at its limit, −limit·(Gᵀn), m/s,
             shape (..., 4).
         demand: Closing speed demanded, m/s, shape (...).
-        slack_weight: ℓ, s²/m².
+        slack_weight: ℓ, s²/m², shape (...) or ().
         room: Greatest share of the limit now allowed in the useful direction,
             shape (..., 4); default 1.
 
@@ -111,6 +114,6 @@ def price(problem: Problem) -> np.ndarray:
     away, jacobians = problem.away[i, m], problem.jacobians[i]
     reach = -np.matmul(away[:, None, :], jacobians)[:, 0] * problem.limits[i]
     reach = steerable(reach, problem.gear[i])
-    effort = least_effort(reach, problem.demand[i, m], problem.slack_weight)
+    effort = least_effort(reach, problem.demand[i, m], problem.slack_weight[i])
     prices[i, m] = problem.kappa * effort.value + problem.energy[i, m]
     return prices

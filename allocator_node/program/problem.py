@@ -37,7 +37,7 @@ class Problem:
         closing: min(γ d_im, c_i), m/s, shape (N, M); 0 where the row is dropped.
         goal_speed: n_im · ṗ*_im, m/s, shape (N, M).
         kappa: κ, Wh.
-        slack_weight: ℓ, s²/m².
+        slack_weight: ℓ_i, s²/m², shape (N,).
         path: Way to each goal, m, shape (N, M); not part of the program, for comparisons.
     """
 
@@ -58,7 +58,7 @@ class Problem:
     closing: np.ndarray
     goal_speed: np.ndarray
     kappa: float
-    slack_weight: float
+    slack_weight: np.ndarray
     path: np.ndarray | None = None
 
     @property

@@ -146,6 +146,7 @@ class Safety:
         heard: np.ndarray,
         growth: np.ndarray,
         drift: np.ndarray | None = None,
+        trail: np.ndarray | None = None,
     ) -> SafetyRows:
         """Give the rows of this period.
 
@@ -156,9 +157,14 @@ class Safety:
             growth: How far a silent robot may have moved, m, shape (N,).
             drift: Velocities of robots that go their own way, m/s, shape (N, 2); 0 for
                 all others. Default 0.
+            trail: Where the commands since its last pose may have taken a silent robot,
+                as seen from there, m, shape (N, 2). Default 0.
         """
         drift = np.zeros((len(points), 2)) if drift is None else drift
         parts = [self._pairs(points, known, heard, growth, drift)]
+        if trail is not None and heard.any():
+            lost = np.flatnonzero(known & ~heard & (growth > 0))
+            parts.append(self._trails(points, np.flatnonzero(heard), lost, trail))
         if self.edge_index is not None and heard.any():
             parts.append(self._areas(points, np.flatnonzero(heard)))
         return SafetyRows.joined(parts)
@@ -218,6 +224,31 @@ class Safety:
                 ),
             ]
         )
+
+    def _trails(
+        self, points: np.ndarray, heard: np.ndarray, lost: np.ndarray, trail: np.ndarray
+    ) -> SafetyRows:
+        """Keep robots (n,) off the trails of silent ones (l,), also within their circles.
+
+        The circle soon covers whoever is beside it, and from within it asks for no more
+        than a calm way out; most likely, though, the robot is somewhere on its trail.
+        """
+        me, other = (part.ravel() for part in np.meshgrid(heard, lost, indexing="ij"))
+        level = np.abs(points[me, 2] - points[other, 2]) < self.settings.height_clearance
+        me, other = me[level], other[level]
+        apart, way = points[me, :2] - points[other, :2], trail[other]
+        share = (apart * way).sum(axis=1) / np.maximum((way**2).sum(axis=1), 1e-12)
+        apart -= np.clip(share, 0.0, 1.0)[:, None] * way
+        distance = np.maximum(np.hypot(apart[:, 0], apart[:, 1]), 1e-6)
+        keep = self.reach[me] + self.reach[other] + self.settings.margin
+        bound = -self.settings.gamma_s * (distance**2 - keep**2) / (2 * distance)
+        near = -self.speed[me] <= bound
+        me, other, apart, distance, keep, bound = (
+            part[near] for part in (me, other, apart, distance, keep, bound)
+        )
+        normal = apart / distance[:, None]
+        alone = np.full(len(me), -1)
+        return SafetyRows.of(me, alone, normal, bound, distance - keep, other)
 
     def _areas(self, points: np.ndarray, robots: np.ndarray) -> SafetyRows:
         places = shapely.points(points[robots, :2])

@@ -56,7 +56,8 @@ class Statement:
         least, most, T, c = problem.least, problem.most, problem.needs, problem.capability
         limits, gear = problem.limits, problem.gear
         R = np.divide(1.0, limits**2, out=np.zeros_like(limits), where=limits > 0)
-        κ, weight, e, ρ = problem.kappa, problem.slack_weight, problem.energy, problem.swap_cost
+        κ, ℓ = problem.kappa, problem.slack_weight  # noqa: E741
+        e, ρ = problem.energy, problem.swap_cost
         keeps = problem.keeps_on
 
         self.constraints = [
@@ -90,7 +91,7 @@ class Statement:
             for q in (4, 3, 2, 1, 0)
         ]
         self.cost = (
-            κ * (cp.sum(cp.multiply(R, v**2)) + weight * cp.sum_squares(δ))
+            κ * (cp.sum(cp.multiply(R, v**2)) + cp.sum(cp.multiply(ℓ, δ**2)))
             + cp.sum(cp.multiply(α, e))
             + cp.sum(cp.multiply(ρ, keeps.any(axis=1) - cp.sum(cp.multiply(α, keeps), axis=1)))
         )

@@ -62,7 +62,7 @@ class Ways:
         boundary = shapely.Polygon(team.boundary) if team.boundary else None
         convex = boundary is None or boundary.convex_hull.area - boundary.area < 1e-9
         self.maps: list[tuple[np.ndarray, _Map]] = []
-        self._kept: tuple[np.ndarray, np.ndarray, np.ndarray, Lead] | None = None
+        self._kept: dict[str, tuple[np.ndarray, np.ndarray, np.ndarray, Lead]] = {}
         if areas or not convex:
             steps = np.ceil(np.asarray(clearance) / STEP - 1e-9)
             self.maps = [
@@ -99,18 +99,21 @@ class Ways:
                 length[here[np.isinf(way)], m[np.isinf(way)]] = np.inf
         return Lead(steer, length)
 
-    def outlook(self, points: np.ndarray, goals: np.ndarray, wanted: np.ndarray) -> Lead:
+    def outlook(
+        self, points: np.ndarray, goals: np.ndarray, wanted: np.ndarray, purpose: str = "out"
+    ) -> Lead:
         """Give the same for pricing: a robot that hardly moved keeps the ways it had.
 
-        Arguments as for :meth:`lead`; ways may be :data:`MOVED` out of date.
+        Arguments as for :meth:`lead`; ways may be :data:`MOVED` out of date. Ways are
+        kept for each purpose apart.
         """
         if self.clear:
             return self.lead(points, goals, wanted)
-        if self._kept is None or self._kept[1].shape != goals.shape:
+        before = self._kept.get(purpose)
+        if before is None or before[1].shape != goals.shape:
             stale = np.ones(len(points), dtype=bool)
             before = (points, goals, wanted, Lead(goals, np.zeros(goals.shape[:2])))
         else:
-            before = self._kept
             moved = np.hypot(*(points - before[0])[:, :2].T) > MOVED
             other = (goals != before[1])[..., :2].any(axis=2) & wanted
             stale = moved | (other | (wanted & ~before[2])).any(axis=1)
@@ -120,7 +123,7 @@ class Ways:
             np.where(rows[..., None], fresh.steer, before[3].steer),
             np.where(rows, fresh.length, before[3].length),
         )
-        self._kept = (
+        self._kept[purpose] = (
             np.where(rows, points, before[0]),
             np.where(rows[..., None], goals, before[1]),
             np.where(rows, wanted, before[2]),

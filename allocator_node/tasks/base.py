@@ -33,6 +33,7 @@ class Scene:
         suffices: Whether robots with these indices meet head count and needs.
         cruise: Cruising speeds, m/s, shape (N,).
         find: Where a target is now; None where that is not known.
+        bands: Lowest and highest height of each robot, m, shape (N, 2); NaN: on the ground.
         clear: At which points (n, 2) a robot keeps all distances from edges of the site, (n,).
     """
 
@@ -46,6 +47,14 @@ class Scene:
     cruise: np.ndarray
     find: Callable[[Target], Located | None]
     clear: Callable[[np.ndarray, int], np.ndarray] = everywhere
+    bands: np.ndarray | None = None
+
+    def taken(self, points: np.ndarray) -> np.ndarray:
+        """Give goal points (3,) or (N, 3) with the heights robots can take there, (N, 3)."""
+        taken = np.broadcast_to(points, self.points.shape).copy()
+        if self.bands is not None:
+            taken[:, 2] = np.clip(taken[:, 2], self.bands[:, 0], self.bands[:, 1])
+        return taken
 
     def locate(self, target: Point | Target) -> Located | None:
         """Give where a target or a point of the site is; None where that is not known."""

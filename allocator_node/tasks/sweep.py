@@ -26,6 +26,12 @@ ASTRAY = 0.1
 GAP = 0.5
 """Length of lane a robot may leave out before it has to go back, m."""
 
+PUSHED = 1.5
+"""A robot goes at most this many times its cruising speed."""
+
+LONGEST_PERIOD = 2.0
+"""Time between two decisions beyond which nobody knows what was done, s."""
+
 ON_LANE = 0.5
 """Distance from its lane within which a robot is led along it, m."""
 
@@ -73,6 +79,7 @@ class Swept:
         upward: Whether everybody goes through its share from the first lane on.
         put_off: Lanes on which somebody could not go on; they are tried again last.
         missed: Length of lanes that nobody can reach for edges of the site, m.
+        time: When that was, s.
     """
 
     left: tuple[tuple[float, float], ...]
@@ -81,6 +88,7 @@ class Swept:
     upward: bool = True
     put_off: frozenset[int] = frozenset()
     missed: float = 0.0
+    time: float = np.nan
 
     def todo(self) -> list[int]:
         """Give the lanes that are not done."""
@@ -176,13 +184,17 @@ class Sweep(Task):
     def advance(self, state: Swept, scene: Scene) -> Swept:
         """Take off what was swept since, and give whoever is free the next lane."""
         left, passes, put_off = list(state.left), {}, set(state.put_off)
+        period = np.nan_to_num(np.clip(scene.now - state.time, 0.0, LONGEST_PERIOD))
         for robot in map(int, scene.members):
             before = state.passes.get(robot)
-            passes[robot] = before and self._worked(before, left, scene, robot)
+            gap = GAP + PUSHED * period * scene.cruise[robot]
+            passes[robot] = before and self._worked(before, left, scene, robot, gap)
             if before and passes[robot] and scene.now - passes[robot].since > PATIENCE:
                 passes[robot] = None
                 put_off.add(before.lane)
-        state = replace(state, left=tuple(left), passes=passes, put_off=frozenset(put_off))
+        state = replace(
+            state, left=tuple(left), passes=passes, put_off=frozenset(put_off), time=scene.now
+        )
         if set(state.shares) != set(passes):
             state = self._shared_out(state, scene)
         state = self._next(state, scene)
@@ -192,9 +204,17 @@ class Sweep(Task):
         return state
 
     def _worked(
-        self, before: Pass, left: list[tuple[float, float]], scene: Scene, robot: int
+        self,
+        before: Pass,
+        left: list[tuple[float, float]],
+        scene: Scene,
+        robot: int,
+        gap: float,
     ) -> Pass | None:
-        """Go on with a pass, taking off what is done of its lane; None when that is all."""
+        """Go on with a pass, taking off what is done of its lane; None when that is all.
+
+        Up to ``gap`` metres may lie between two periods.
+        """
         low, high = left[before.lane]
         at, beside = self.lanes.seen(before.lane, scene.points[robot, :2])
         ahead = at - low if before.forward else high - at
@@ -204,7 +224,7 @@ class Sweep(Task):
             working = away <= min(NEAR, self._astray)
             if away < nearest - NEAR / 2:
                 since, nearest = scene.now, away
-        elif abs(beside) <= self._astray and 0 < ahead <= GAP:
+        elif abs(beside) <= self._astray and 0 < ahead <= gap:
             low, high = (at, high) if before.forward else (low, at)
             since = scene.now
         if high <= low:

@@ -70,7 +70,7 @@ class Visit(Task):
         """Tell which members are within a share of the tolerances."""
         members = scene.members
         points = points_of(centre_of(self.at), scene, places)
-        goals = np.broadcast_to(points, scene.points.shape)[members]
+        goals = scene.taken(points)[members]
         away = distance(goals, scene.points[members])
         if self.heading is None:
             return away <= share * self.tolerance
