@@ -12,18 +12,13 @@ from .model import Model
 from .program import Control, ControlProblem, Safety, SafetyRows, solve_control
 from .program.courtesy import make_way
 from .program.guidance import Course, Guidance, Targets
+from .program.headway import WANTS, Headway
 from .program.safety import rolled
 from .program.steering import Steering
 from .program.ways import Ways
 from .settings import Settings
 from .team import Team
 from .view import View
-
-HEADWAY = 0.05
-"""Share of the speed demanded below which a robot makes no headway."""
-
-CATCHES_UP = 4.0
-"""How many seconds without headway a second with it makes up for."""
 
 
 @dataclass(frozen=True)
@@ -34,7 +29,7 @@ class Motion:
         course: What each robot was asked to do.
         control: What it may do.
         rows: The rows between the two.
-        stuck: Time each robot has made no headway, s, shape (N,).
+        stuck: Time each robot has come no nearer to its goal, s, shape (N,).
     """
 
     course: Course
@@ -68,7 +63,7 @@ class Pilot:
         self._guidance = Guidance(count)
         self._last: tuple[np.ndarray, np.ndarray, Course] | None = None
         self._trail = np.zeros((count, 2))
-        self._stuck = np.zeros(count)
+        self._headway = Headway(count)
         self.survey(team, model, settings)
 
     def survey(self, team: Team, model: Model, settings: Settings) -> None:
@@ -81,7 +76,6 @@ class Pilot:
     def restart(self, robots: np.ndarray) -> None:
         """Begin anew for robots (n,) that got another task."""
         self._guidance.restart(robots)
-        self._stuck[robots] = 0.0
 
     def forget(self) -> None:
         """Draw no conclusion from the motion until the next period."""
@@ -154,7 +148,10 @@ class Pilot:
             )
         )
         self._remember(view, model, course, control, rows, hold)
-        return Motion(course, control, rows, self._stuck.copy())
+        if not hold:
+            wants = targets.busy & (course.demand > WANTS * model.fleet.cruise)
+            self._headway.update(targets.points[:, :2], course.distance, wants, view.dt)
+        return Motion(course, control, rows, self._headway.stuck)
 
     def _extend_trails(self, places: Places, dt: float) -> None:
         """Keep how far the commands since each robot's last pose may have taken it, m."""
@@ -206,12 +203,7 @@ class Pilot:
         # Their own navigation is expected to bring them on at their nominal speed.
         implied[own] = course.to_goal[own] * course.demand[own, None]
         self.commands[own, 0] = course.demand[own]
-        headway = (course.to_goal * implied).sum(axis=1)
-        wants = course.demand > HEADWAY * model.fleet.cruise
-        stands = headway < HEADWAY * course.demand
         if not hold:
-            longer = np.where(stands, view.dt, -CATCHES_UP * view.dt)
-            self._stuck = np.where(wants, np.maximum(self._stuck + longer, 0.0), 0.0)
             free = np.matmul(view.jacobians, control.free[:, :, None])[:, :, 0]
             slow = model.fleet.steered | np.isfinite(model.fleet.speed_up) | course.exact
             free[~slow] = np.nan

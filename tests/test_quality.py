@@ -39,8 +39,9 @@ def test_a_proof_a_period_late_costs_little_and_simpler_rules_cover_less(request
     seconds = 60.0 if whole else 30.0
     scores = compare(30 if whole else 1, seconds)
     exact, late, nearest, one_to_one = (Score.mean(mine) for mine in scores.values())
-    assert late.coverage == pytest.approx(exact.coverage, rel=0.01)
+    assert late.coverage >= 0.99 * exact.coverage
     if whole:
+        assert late.coverage == pytest.approx(exact.coverage, rel=0.01)
         assert late.energy == pytest.approx(exact.energy, rel=0.01)
     assert exact.coverage > max(nearest.coverage, one_to_one.coverage)
     assert table(scores, seconds).count("\n| ") == len(ASSIGNERS) + 1
