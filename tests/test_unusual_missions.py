@@ -9,6 +9,9 @@ import pytest
 from builders import ROVER, Crew, doing, robot, team_of, watch
 
 from allocator_node.drives import Aerial, Differential
+from allocator_node.model import Model
+from allocator_node.program import Safety
+from allocator_node.settings import Settings
 from allocator_node.sim.rehearsal import rehearse
 from allocator_node.tasks import Encircle, Patrol, Sweep, Visit
 from allocator_node.team import Battery, HeadCount, KeepOut, Target
@@ -141,3 +144,23 @@ def test_a_robot_that_cannot_get_there_is_named() -> None:
     decision = crew.drive(45)
     (said,) = (n.text for n in decision.notices if n.about == "big")
     assert said.startswith("gets no nearer to where it is to go")
+
+
+def test_nobody_drives_onto_the_trail_of_a_silent_robot_from_within_its_circle() -> None:
+    """It fell silent at (0, 0), told to go 4 m; its circle of 5 m covers who is at (4.5, -1.5)."""
+    team = team_of([robot("me", 4.5, -1.5), robot("lost")], [])
+    safety = Safety(team, Model(team), Settings())
+    points = np.array([[4.5, -1.5, 0], [0, 0, 0]])
+    both, heard = np.array([True, True]), np.array([True, False])
+    growth, trail = np.array([0.0, 5.0]), np.array([[0.0, 0.0], [4.0, 0.0]])
+    circle = safety.rows(points, both, heard, growth)
+    rows = safety.rows(points, both, heard, growth, trail=trail)
+    out = points[0, :2] / np.hypot(4.5, 1.5)
+    along = np.zeros((2, 3))
+    # Calmly out, and at 2 m/s across the end of the trail.
+    along[0, :2] = 0.3 * out + 2.0 * np.array([-out[1], out[0]])
+    assert (circle.slackness(along) >= -1e-9).all()
+    assert rows.slackness(along).min() < -0.2
+    back = np.zeros((2, 3))
+    back[0, :2] = 0.5 * np.array([0.5, -1.5])
+    assert (rows.slackness(back) >= -1e-9).all()
