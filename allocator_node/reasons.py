@@ -10,6 +10,7 @@ import numpy as np
 from .decision import Cause, Reallocation
 from .model import Model
 from .tasks import Task
+from .team import Target
 
 NOTICEABLE = 0.05
 """Change of efficacy or suitability that can be a reason."""
@@ -262,8 +263,12 @@ class Reasons:
         """Tell what changed about task m itself."""
         name = self.model.tasks[m]
         if then.active[m] and not now.active[m]:
-            word = "finished" if name in now.finished else "switched off"
-            return _Reason(1, Cause.TASK, f"{name} is {word}")
+            if name in now.finished:
+                return _Reason(1, Cause.TASK, f"{name} is finished")
+            target = now.tasks[m].keeps_to
+            if now.tasks[m].active and isinstance(target, Target) and target.task:
+                return _Reason(1, Cause.TASK, f"{target.task}, which {name} keeps to, is over")
+            return _Reason(1, Cause.TASK, f"{name} is switched off")
         if now.active[m] and not then.active[m]:
             if not then.heard.any():
                 return _Reason(6, Cause.START, f"{name} gets its first robots")

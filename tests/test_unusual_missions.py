@@ -77,6 +77,8 @@ def test_a_ring_around_a_finished_task_lets_its_robots_go() -> None:
     decision = crew.drive(20)
     assert decision.finished == {"sample"}
     assert Counter(doing(decision).values()) == {"gate": 1, None: 2}
+    (end,) = (change for change in crew.log if change.task == "ring" and not change.after)
+    assert end.detail == "sample, which ring keeps to, is over"
     assert not decision.shortfalls
 
 
