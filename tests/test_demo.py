@@ -132,6 +132,7 @@ def test_the_demo_tells_a_wrong_file_and_starts_nothing(tmp_path, capsys):
     assert not (tmp_path / "out").exists()
 
 
+@pytest.mark.ros
 def test_the_demo_ends_its_children_when_it_is_told_to_end(tmp_path):
     """SIGTERM to the demo: exit status 130, and no process of its session is left."""
     pytest.importorskip("rclpy")
