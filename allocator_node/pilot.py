@@ -207,7 +207,7 @@ class Pilot:
             free = np.matmul(view.jacobians, control.free[:, :, None])[:, :, 0]
             slow = model.fleet.steered | np.isfinite(model.fleet.speed_up) | course.exact
             free[~slow] = np.nan
-            blocked = _blocked(course, implied[:, :2], rows)
+            blocked = _blocked(course, implied, rows)
             self._guidance.notice(
                 course, implied, free, blocked, model.fleet.cruise, view.dt
             )
@@ -219,17 +219,12 @@ def _blocked(course: Course, velocities: np.ndarray, rows: SafetyRows) -> np.nda
 
     Args:
         course: What each robot should do.
-        velocities: What all of them do now, m/s, shape (N, 2).
+        velocities: What all of them do now, m/s, shape (N, 3).
         rows: The safety rows.
     """
-    straight = course.to_goal[:, :2] * (course.demand / 2)[:, None]
+    straight = course.to_goal * (course.demand / 2)[:, None]
     blocked = np.zeros(len(straight), dtype=bool)
-    pair = rows.second >= 0
-    other = np.where(pair[:, None], velocities[rows.second], 0.0)
-    ahead = (rows.normal * (straight[rows.first] - other)).sum(axis=1) < rows.bound
-    blocked[rows.first[ahead]] = True
-    first, second = rows.first[pair], rows.second[pair]
-    apart = velocities[first] - straight[second]
-    ahead = (rows.normal[pair] * apart).sum(axis=1) < rows.bound[pair]
-    blocked[second[ahead]] = True
+    blocked[rows.first[rows.slackness(straight, velocities) < 0]] = True
+    pair = (rows.second >= 0) & (rows.slackness(velocities, straight) < 0)
+    blocked[rows.second[pair]] = True
     return blocked

@@ -79,11 +79,17 @@ class SafetyRows:
             )
         )
 
-    def slackness(self, velocities: np.ndarray) -> np.ndarray:
-        """Give normal · (ṗ_first − ṗ_second) − bound for velocities (N, 3); shape (R,)."""
+    def slackness(self, velocities: np.ndarray, others: np.ndarray | None = None) -> np.ndarray:
+        """Give normal · (ṗ_first − ṗ_second) − bound, m/s, shape (R,).
+
+        Args:
+            velocities: Velocities, m/s, shape (N, 3).
+            others: Those of the second robots, where they are to differ, shape (N, 3).
+        """
+        others = velocities if others is None else others
         relative = velocities[self.first, :2].copy()
         other = self.second >= 0
-        relative[other] -= velocities[self.second[other], :2]
+        relative[other] -= others[self.second[other], :2]
         return (self.normal * relative).sum(axis=1) - self.bound
 
 
