@@ -1,4 +1,4 @@
-"""Everything bad at once, for hours: python3 tests/campaign.py --hours 24 --seed 1.
+"""Everything bad at once, for hours: python3 tests/campaign.py --hours 24 --seed 1 --jobs 2.
 
 Missions of ten minutes follow one another, each with another team, site and set of
 mishaps of its world. Between that world and the allocator sits a saboteur: it spoils
@@ -9,12 +9,14 @@ allocator and edits its orders. What must never happen is counted.
 from __future__ import annotations
 
 import argparse
+import math
 import sys
-import time
 from collections import Counter
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from collections.abc import Callable, Iterable, Iterator
+from concurrent.futures import ProcessPoolExecutor
+from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass, field, replace
+from multiprocessing import get_context
 from pathlib import Path
 
 import numpy as np
@@ -88,6 +90,14 @@ class Totals:
         self.never[what] += count
         if len(self.worst) < 20:
             self.worst.append(f"{what}: {where}")
+
+    def add(self, other: Totals) -> None:
+        """Add what happened in another mission."""
+        self.decisions += other.decisions
+        self.faults.update(other.faults)
+        self.never.update(other.never)
+        self.worst = (self.worst + other.worst)[:20]
+        self.uncovered_s += other.uncovered_s
 
     def lines(self) -> Iterator[str]:
         """Give the totals for people."""
@@ -406,16 +416,30 @@ def sound_solvers() -> Iterator[None]:
         solvers.SOLVERS = SOUND
 
 
-def run(hours: float, seed: int, say: Callable[[str], None] = lambda text: None) -> Totals:
-    """Run the campaign and give its totals."""
-    totals, left, number = Totals(), 3600.0 * hours, 0
+def one_mission(seed: int, seconds: float) -> Totals:
+    """Run one mission and give its totals."""
+    totals = Totals()
     with sound_solvers():
-        while left > 1e-6:
-            began = time.perf_counter()
-            Campaign(1000 * seed + number, min(left, MISSION), totals).run()
-            number, left = number + 1, left - MISSION
-            took = time.perf_counter() - began
-            say(f"mission {number}: {took:.0f} s, so far {dict(totals.never)}")
+        Campaign(seed, seconds, totals).run()
+    return totals
+
+
+def run(
+    hours: float, seed: int, jobs: int = 1, say: Callable[[str], None] = lambda text: None
+) -> Totals:
+    """Run the campaign, ``jobs`` missions at a time, and give its totals."""
+    count = math.ceil(3600.0 * hours / MISSION - 1e-9)
+    seeds = range(1000 * seed, 1000 * seed + count)
+    lengths = [MISSION] * (count - 1) + [3600.0 * hours - MISSION * (count - 1)]
+    totals = Totals()
+    with ExitStack() as stack:
+        missions: Iterable[Totals] = map(one_mission, seeds, lengths)
+        if jobs > 1:
+            pool = ProcessPoolExecutor(jobs, mp_context=get_context("spawn"))
+            missions = stack.enter_context(pool).map(one_mission, seeds, lengths)
+        for number, mission in enumerate(missions, 1):
+            totals.add(mission)
+            say(f"mission {number} of {count}: so far {dict(totals.never)}")
     return totals
 
 
@@ -424,8 +448,11 @@ def main() -> int:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--hours", type=float, default=1.0, help="simulated time, h")
     parser.add_argument("--seed", type=int, default=0)
+    parser.add_argument("--jobs", type=int, default=1, help="missions run at the same time")
     options = parser.parse_args()
-    totals = run(options.hours, options.seed, lambda text: print(text, file=sys.stderr))
+    totals = run(
+        options.hours, options.seed, options.jobs, lambda text: print(text, file=sys.stderr)
+    )
     print("\n".join(totals.lines()))
     return int(any(totals.never.values()))
 
