@@ -144,7 +144,7 @@ class Pilot:
                 demand=np.where(still | course.exact, 0.0, course.demand),
                 preferred=course.preferred,
                 rows=rows,
-                slack_weight=settings.slack_weight / model.fleet.cruise**2 * insistence,
+                slack_weight=settings.slack_weights(model.fleet.cruise) * insistence,
             )
         )
         self._remember(view, model, course, control, rows, hold)

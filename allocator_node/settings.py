@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Annotated, Literal
 
+import numpy as np
 from annotated_types import Ge, Gt, Le, Lt
 
 from .team import Checked, NonNegative, Positive, Share
@@ -65,3 +66,7 @@ class Settings(Checked):
     charge_below: Share = 0.5
     charge_until: Share = 0.9
     dock_margin: Share = 0.03
+
+    def slack_weights(self, cruise: np.ndarray) -> np.ndarray:
+        """Give ℓ_i = ℓ / c_i², s²/m², of robots with cruising speeds c (N,) in m/s."""
+        return self.slack_weight / cruise**2

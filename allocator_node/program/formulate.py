@@ -168,7 +168,7 @@ def formulate(
         closing=closing,
         goal_speed=speed,
         kappa=settings.kappa,
-        slack_weight=settings.slack_weight / model.fleet.cruise**2,
+        slack_weight=settings.slack_weights(model.fleet.cruise),
         path=path,
     )
     return problem, Means(enough, way)

@@ -199,20 +199,18 @@ class Safety:
 
         apart = points[i, :2] - points[j, :2]
         distance = np.linalg.norm(apart, axis=1)
-        keep = self.reach[i] + self.reach[j] + margin + growth[i] + growth[j]
-        h = distance**2 - keep**2
-        binding = 2 * distance * (self.speed[i] + self.speed[j]) >= gamma * h
-        i, j, apart, distance, keep, h = (
-            part[binding] for part in (i, j, apart, distance, keep, h)
-        )
         together = distance < 1e-6
-        apart[together], distance[together] = (1.0, 0.0), 1e-6
-        normal = apart / np.linalg.norm(apart, axis=1, keepdims=True)
-        bound = -gamma * h / (2 * distance)
-        room = distance - keep
+        apart[together], distance[together] = (1e-6, 0.0), 1e-6
+        keep = self.reach[i] + self.reach[j] + margin + growth[i] + growth[j]
+        bound = self._barrier(distance, keep)
+        binding = -(self.speed[i] + self.speed[j]) <= bound
+        i, j, apart, distance, keep, bound = (
+            part[binding] for part in (i, j, apart, distance, keep, bound)
+        )
+        normal, room = apart / distance[:, None], distance - keep
 
         both = heard[i] & heard[j]
-        alone = np.where(h < 0, bound / 2, bound)
+        alone = np.where(room < 0, bound / 2, bound)
         return SafetyRows.joined(
             [
                 SafetyRows.of(i[both], j[both], normal[both], bound[both], room[both], j[both]),
@@ -247,7 +245,7 @@ class Safety:
         apart -= np.clip(share, 0.0, 1.0)[:, None] * way
         distance = np.maximum(np.hypot(apart[:, 0], apart[:, 1]), 1e-6)
         keep = self.reach[me] + self.reach[other] + self.settings.margin
-        bound = -self.settings.gamma_s * (distance**2 - keep**2) / (2 * distance)
+        bound = self._barrier(distance, keep)
         near = -self.speed[me] <= bound
         me, other, apart, distance, keep, bound = (
             part[near] for part in (me, other, apart, distance, keep, bound)
@@ -255,6 +253,10 @@ class Safety:
         normal = apart / distance[:, None]
         alone = np.full(len(me), -1)
         return SafetyRows.of(me, alone, normal, bound, distance - keep, other)
+
+    def _barrier(self, distance: np.ndarray, keep: np.ndarray) -> np.ndarray:
+        """Give the bound of ḣ ≥ −γ_s h with h = d² − D² on the speed apart ḋ, m/s."""
+        return -self.settings.gamma_s * (distance**2 - keep**2) / (2 * distance)
 
     def _areas(self, points: np.ndarray, robots: np.ndarray) -> SafetyRows:
         places = shapely.points(points[robots, :2])
