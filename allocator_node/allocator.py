@@ -204,6 +204,7 @@ class Allocator:
             spendable=self._energy.spendable(self._model),
             dearness=self._energy.dearness(self._model),
             restless=self._restless,
+            admitted=self._admitted(),
             active=self._work.active(),
             charging=self._charging.on,
             pinned=self._model.mask(self.orders.pins),
@@ -211,6 +212,11 @@ class Allocator:
             previous=self._assignment,
         )
         return formulate(self._model, self._settings, known, goals, self._pilot.ways)
+
+    def _admitted(self) -> np.ndarray:
+        """Tell where a robot can come near enough to the task's places, shape (N, M)."""
+        rows = [self._pilot.ways.admitted(task.stops) for task in self.team.tasks.values()]
+        return np.array(rows, dtype=bool).reshape(self._model.itself.T.shape).T
 
     def _trusted(self, view: View) -> np.ndarray:
         """Tell where the specialization suffices, or would but for the features, (N, M)."""
@@ -346,12 +352,19 @@ class Allocator:
         )
 
     def _cut_off(self, view: View, means: Means) -> dict[str, str]:
-        """Say of active tasks to which nobody that could do them finds a way."""
+        """Say of active tasks that nobody who could do them gets there, or near enough."""
         able = (view.suitability > 0) & view.places.heard[:, None] & self._work.active()
         lost = able.any(axis=0) & ~(able & means.way).any(axis=0)
+        far = np.zeros(len(lost), dtype=bool)
+        if not means.admitted.all():
+            alone = able & self._model.alone(view.capability)
+            far = alone.any(axis=0) & ~(alone & means.admitted).any(axis=0)
+        tasks = self._model.tasks
         return {
-            self._model.tasks[m]: "no robot that could do it finds a way there"
-            for m in np.flatnonzero(lost)
+            tasks[m]: "the margins keep everyone that could do it from coming near enough"
+            for m in np.flatnonzero(far)
+        } | {
+            tasks[m]: "no robot that could do it finds a way there" for m in np.flatnonzero(lost)
         }
 
     def _activity(self, view: View, errands: Errands) -> tuple[str, ...]:

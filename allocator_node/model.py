@@ -114,6 +114,15 @@ class Model:
                 np.maximum(capability[:, k], by_way, out=capability[:, k])
         return capability
 
+    def alone(self, capability: np.ndarray) -> np.ndarray:
+        """Tell which robots would meet head count and needs alone, shape (N, M).
+
+        Args:
+            capability: c_ik, shape (N, K).
+        """
+        enough = (capability[:, None, :] >= self.needs - 1e-9).all(axis=2)
+        return enough & (self.least <= 1)
+
     def suitability(self, capability: np.ndarray) -> np.ndarray:
         """Give a_im = Σ_k T_mk c_ik / Σ_k T_mk, capped at 1; 1 where m needs nothing.
 

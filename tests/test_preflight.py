@@ -23,7 +23,7 @@ from allocator_node.settings import Settings
 from allocator_node.sim.rehearsal import rehearse
 from allocator_node.sim.world_file import FeatureEvent, PoseEvent, StalledEvent, World
 from allocator_node.tasks import Patrol
-from allocator_node.team import Battery, HeadCount, Robot, Team, Way
+from allocator_node.team import Battery, HeadCount, KeepOut, Robot, Team, Way
 
 CONFIG = Path(__file__).parents[1] / "config"
 FARM = CONFIG / "solar_farm.yaml"
@@ -226,6 +226,28 @@ def test_stopping_distance_by_hand() -> None:
     # v · 0.3 + v² / 2 = 0.3  ⇒  v = −0.3 + √0.69.
     assert a.safe_speed == pytest.approx(-0.3 + 0.69**0.5)
     assert b.reaction_m == pytest.approx(0.3) and b.braking_m == 0.0 and b.within
+
+
+def test_places_too_near_to_an_edge_by_hand() -> None:
+    """A body of 0.5 m and 0.3 m of margin end 0.8 m from the fence; and 0.8 m from an area."""
+    robots = [
+        robot("big", 5, 5, radius=0.5, dock=(0.1, 5)),
+        robot("small", 8, 5, radius=0.1, dock=(0.5, 8)),
+    ]
+    tasks = [watch("edge", 5, 0.3), watch("free", 5, 5), watch("pair", 5, 0.2, count=2)]
+    patrol = Patrol(name="round", waypoints=((3, 3), (7, 3), (7, 6.95)))
+    team = team_of(
+        robots, [*tasks, patrol],
+        boundary=((0, 0), (10, 0), (10, 10), (0, 10)),
+        keep_out=(KeepOut(name="pit", polygon=((6, 7), (9, 7), (9, 9), (6, 9))),),
+    )  # fmt: skip
+    found = {(t.place, t.robot): (t.within_m, t.kept_m) for t in inspect(team).tight}
+    assert found == {
+        ("edge", "big"): pytest.approx((0.3, 0.5)),
+        ("round", "big"): pytest.approx((0.5, 0.75)),
+        ("dock", "big"): pytest.approx((0.6, 0.7)),
+    }
+    assert not inspect(team, Settings(margin=0.0)).tight
 
 
 def test_a_feature_without_diagnostics_is_told() -> None:

@@ -144,8 +144,40 @@ def test_a_robot_that_cannot_get_there_is_named() -> None:
     big = robot("big", 20, 6, radius=1.5)
     crew = Crew(team_of([big], [watch("post", 20, 0.5)], **FENCED))
     decision = crew.drive(45)
-    (said,) = (n.text for n in decision.notices if n.about == "big")
-    assert said.startswith("gets no nearer to where it is to go")
+    said = {n.about: n.text for n in decision.notices}
+    assert said["big"].startswith("gets no nearer to where it is to go")
+    assert said["post"] == "the margins keep everyone that could do it from coming near enough"
+
+
+def test_a_place_beside_the_fence_is_for_one_that_is_small_enough() -> None:
+    """The big one is nearer; body 1.5 m and margin 0.3 m end 1 m short of the place."""
+    robots = [robot("big", 20, 6, radius=1.5), robot("small", 2, 6, radius=0.2)]
+    visit = Visit(name="post", at=(20, 0.8), tolerance=0.3, robots=HeadCount(1, 1))
+    crew = Crew(team_of(robots, [visit], **FENCED))
+    assert doing(crew.step()) == {"big": None, "small": "post"}
+    decision = crew.drive(30)
+    assert decision.finished == {"post"} and not decision.notices
+
+
+def test_a_place_beside_the_fence_is_for_whoever_there_is() -> None:
+    """A big one at the place as near as may be is better than nobody, and obeys a pin."""
+    robots = [robot("big", 20, 6, radius=1.5), robot("small", 2, 6, radius=0.2)]
+    crew = Crew(team_of(robots, [watch("post", 20, 0.8)], **FENCED))
+    assert doing(crew.step())["small"] == "post"
+    crew.silent.add("small")
+    assert doing(crew.wait(2))["big"] == "post"
+    crew.silent.clear()
+    assert doing(crew.wait(2))["small"] == "post"
+    crew.order(pins=frozenset({("big", "post")}))
+    assert doing(crew.wait(2))["big"] == "post"
+
+
+def test_a_group_stands_around_what_none_of_it_could_stand_on() -> None:
+    """Two of 1 m: the place itself is too near to the fence, those beside it are not asked."""
+    robots = [robot(name, x, 6, radius=1.0) for name, x in (("a", 18), ("b", 22))]
+    crew = Crew(team_of(robots, [watch("post", 20, 0.5, count=2)], **FENCED))
+    decision = crew.step()
+    assert doing(decision) == {"a": "post", "b": "post"} and not decision.notices
 
 
 def test_nobody_drives_onto_the_trail_of_a_silent_robot_from_within_its_circle() -> None:

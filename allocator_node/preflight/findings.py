@@ -13,6 +13,7 @@ from ..team import Team
 from .endurance import Endurance, endurance
 from .extras import Case, Extra, TooLarge, best_extra
 from .losses import Losses, Outcome, single_losses
+from .room import Tight, tight
 from .standing import decide
 from .start import Place, places
 from .stopping import Stopping, stopping
@@ -51,6 +52,7 @@ class Findings:
         extras: Features worth adding, the best first; None: too large to be searched.
         endurance: Each standing task.
         stopping: Each robot.
+        tight: Places that edges keep robots from.
         unwatched: (robot, feature) that no diagnostic speaks for: its failure would only
             show in the robot's progress.
     """
@@ -66,6 +68,7 @@ class Findings:
     extras: list[Extra] | None
     endurance: list[Endurance]
     stopping: list[Stopping]
+    tight: list[Tight]
     unwatched: list[tuple[str, str]]
 
     @property
@@ -99,6 +102,7 @@ class Findings:
             "extras": None if self.extras is None else [asdict(extra) for extra in self.extras],
             "endurance": [asdict(one) for one in self.endurance],
             "stopping": [{**asdict(one), "within": one.within} for one in self.stopping],
+            "tight": [asdict(one) for one in self.tight],
             "unwatched": [{"robot": robot, "feature": f} for robot, f in self.unwatched],
         })
 
@@ -140,6 +144,7 @@ def inspect(
         extras=_extras(team, settings, start, singles, on_progress),
         endurance=endurance(team, start),
         stopping=stopping(team, settings, 1 / assumed.rate, assumed.latency),
+        tight=tight(team, settings),
         unwatched=[
             (robot.name, feature)
             for robot in team.robots.values()

@@ -15,6 +15,7 @@ from rich.text import Text
 from ..team import Team
 from .findings import Findings
 from .losses import Loss, Outcome
+from .room import Tight
 from .suitability import Fit
 
 CELL = 10
@@ -35,6 +36,8 @@ def parts(findings: Findings, width: int = 100) -> Iterator[RenderableType]:
     yield _extras(findings)
     yield from _endurance(findings)
     yield from _stopping(findings)
+    if findings.tight:
+        yield _tight(findings.tight)
     if findings.unwatched:
         named = (f"{robot}: {feature}" for robot, feature in findings.unwatched)
         yield _note(f"No diagnostic speaks for {listed(named)}.")
@@ -276,6 +279,23 @@ def _stopping(findings: Findings) -> Iterator[RenderableType]:
         "latency (--latency)."
         + (" Brakes ?: no max_acceleration given, so braking is not counted." if unknown else "")
     )
+
+
+def _tight(tight: Sequence[Tight]) -> Table:
+    """Give a table of places too near to an edge; robots kept from them alike share a row."""
+    table = _table("Too near to the boundary or a keep-out area")
+    table.add_column("place")
+    table.add_column("robots", overflow="fold")
+    for heading in ("should come within", "margin lets it come within"):
+        table.add_column(heading, justify="right")
+
+    def figures(one: Tight) -> tuple[str, str, str]:
+        return (one.place, f"{one.within_m:.2f} m", f"{one.kept_m:.2f} m")
+
+    for (place, within, kept), alike in groupby(sorted(tight, key=figures), figures):
+        robots = listed((one.robot for one in alike), 4)
+        table.add_row(place, robots, within, Text(kept, "yellow"))
+    return table
 
 
 def harm(outcome: Outcome) -> str:

@@ -55,6 +55,7 @@ class Known:
         dearness: λ, shape (N,).
         restless: Factor of what another swap costs, for robots that were swapped lately,
             shape (N,).
+        admitted: Where the robot can come near enough to the task's places, shape (N, M).
         active: Tasks to be done now, shape (M,).
         charging: Robots that are to charge first, shape (N,).
         pinned, banned: The operator's orders, shape (N, M).
@@ -73,6 +74,7 @@ class Known:
     spendable: np.ndarray
     dearness: np.ndarray
     restless: np.ndarray
+    admitted: np.ndarray
     active: np.ndarray
     charging: np.ndarray
     pinned: np.ndarray
@@ -82,10 +84,11 @@ class Known:
 
 @dataclass(frozen=True)
 class Means:
-    """What a pair needs beside ability: energy and a way, each of shape (N, M)."""
+    """What a pair needs beside ability: energy, a way, and room at its end; each (N, M)."""
 
     enough: np.ndarray
     way: np.ndarray
+    admitted: np.ndarray
 
 
 def formulate(
@@ -126,8 +129,9 @@ def formulate(
     closing = table.pace * np.minimum(settings.gamma * distance, cruise)
     closing[distance <= table.tolerance] = 0.0
     path = np.where(np.isnan(table.path), distance, table.path)
-    way = np.isfinite(path)
-    path = np.where(way, path, 0.0)
+    reachable = np.isfinite(path)
+    way = reachable & _has_room(model, known, may & reachable)
+    path = np.where(reachable, path, 0.0)
 
     serving = way_energy(model, path) + model.idle[:, None] * table.dwell / SECONDS_PER_HOUR
     docks = np.column_stack([model.docks, np.zeros(robots)])
@@ -171,4 +175,16 @@ def formulate(
         slack_weight=settings.slack_weights(model.fleet.cruise),
         path=path,
     )
-    return problem, Means(enough, way)
+    return problem, Means(enough, way, known.admitted)
+
+
+def _has_room(model: Model, known: Known, may: np.ndarray) -> np.ndarray:
+    """Tell where a robot's size is no reason to leave a task to others, shape (N, M).
+
+    It is one where the robot cannot come near enough, and another one can that would
+    do alone. Where nobody can, getting as near as margins allow is the best there is.
+    """
+    if known.admitted.all():
+        return known.admitted
+    better = may & known.admitted & model.alone(known.capability)
+    return known.admitted | ~better.any(axis=0) | known.pinned

@@ -8,7 +8,7 @@ import numpy as np
 import shapely
 from scipy.sparse.csgraph import dijkstra
 
-from ..team import Team
+from ..team import Point, Team
 
 STEP = 0.1
 """Robots are grouped by clearance, rounded up to this, m."""
@@ -61,6 +61,9 @@ class Ways:
         areas = [shapely.Polygon(area.polygon) for area in team.keep_out]
         boundary = shapely.Polygon(team.boundary) if team.boundary else None
         convex = boundary is None or boundary.convex_hull.area - boundary.area < 1e-9
+        sizes, self._size = np.unique(np.round(clearance, 6), return_inverse=True)
+        self._shut = [grown(areas, boundary, size) for size in sizes]
+        self._admitted: dict[tuple[tuple[Point, float], ...], np.ndarray] = {}
         self.maps: list[tuple[np.ndarray, _Map]] = []
         self._kept: dict[str, tuple[np.ndarray, np.ndarray, np.ndarray, Lead]] = {}
         if areas or not convex:
@@ -74,6 +77,32 @@ class Ways:
     def clear(self) -> bool:
         """Whether every way is straight."""
         return not self.maps
+
+    def gap(self, point: Point) -> np.ndarray:
+        """Give how far from a point (m) edges keep each robot's control point, m, (N,)."""
+        place = shapely.Point(point)
+        gaps = [
+            shut.boundary.distance(place) if shut.intersects(place) else 0.0
+            for shut in self._shut
+        ]
+        return np.array(gaps)[self._size]
+
+    def admitted(self, stops: tuple[tuple[Point, float], ...]) -> np.ndarray:
+        """Tell which robots can come near enough to all of some points, shape (N,).
+
+        Args:
+            stops: Points and how near one must come, m.
+        """
+        if stops not in self._admitted:
+            if len(self._admitted) >= REMEMBERED:
+                self._admitted.clear()
+            row = np.ones(len(self._size), dtype=bool)
+            for point, within in stops:
+                gap = self.gap(point)
+                # The last bit before an edge takes for ever.
+                row &= (gap == 0) | (gap + OUTSIDE <= within)
+            self._admitted[stops] = row
+        return self._admitted[stops]
 
     def lead(self, points: np.ndarray, goals: np.ndarray, wanted: np.ndarray) -> Lead:
         """Give the ways from robots to goals.

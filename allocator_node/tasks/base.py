@@ -128,6 +128,14 @@ class Task(Checked, abc.ABC):
         """What it keeps to, where that may move."""
         return None
 
+    @property
+    def stops(self) -> tuple[tuple[Point, float], ...]:
+        """Points that a robot working alone must come to, each with how near, m.
+
+        Only such as are fixed; a kind that leaves out what cannot be reached has none.
+        """
+        return ()
+
     @abc.abstractmethod
     def begin(self) -> Any:
         """Give the state before anything is done."""

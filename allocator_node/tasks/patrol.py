@@ -66,6 +66,11 @@ class Patrol(Task):
         """A patrol with a number of laps ends."""
         return self.laps > 0
 
+    @property
+    def stops(self) -> tuple[tuple[Point, float], ...]:
+        """The waypoints."""
+        return tuple((corner, REACHED) for corner in self.waypoints)
+
     def begin(self) -> Round:
         """Give the state before the first round."""
         return Round()

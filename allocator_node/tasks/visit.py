@@ -7,7 +7,7 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from ..team import NonNegative, Positive
+from ..team import NonNegative, Point, Positive
 from .base import Goals, Scene, Task, distance
 from .station import centre_of, places_of, points_of
 
@@ -49,6 +49,11 @@ class Visit(Task):
     def ends(self) -> bool:
         """A visit always ends."""
         return True
+
+    @property
+    def stops(self) -> tuple[tuple[Point, float], ...]:
+        """The place of the visit."""
+        return ((self.at[:2], self.tolerance),)
 
     def begin(self) -> Progress:
         """Give the state before anybody was there."""

@@ -28,6 +28,11 @@ class Watch(Task):
     face: Point | None = None
     tolerance: Positive = 0.3
 
+    @property
+    def stops(self) -> tuple[tuple[Point, float], ...]:
+        """The place of the watch."""
+        return ((self.at[:2], self.tolerance),)
+
     def begin(self) -> Mapping[int, int]:
         """Give the state before anybody is there."""
         return {}
