@@ -3,6 +3,9 @@
 from __future__ import annotations
 
 import gc
+import os
+import subprocess
+import sys
 import threading
 import time
 from collections.abc import Callable, Iterator
@@ -24,6 +27,8 @@ from rclpy.qos import DurabilityPolicy, QoSProfile, ReliabilityPolicy
 from rclpy.signals import SignalHandlerOptions
 
 from allocator_node.ros.allocator_node import AllocatorNode
+
+ROOT = Path(__file__).parents[1]
 
 PATIENCE = 15.0
 """How long anything may take before a test gives up, s."""
@@ -244,6 +249,24 @@ def bench(directory: Path, team: str = TEAM, **parameters: Any) -> Iterator[Benc
         yield made
     finally:
         made.close()
+
+
+@contextmanager
+def allocator(team: Path, name: str, *arguments: str) -> Iterator[subprocess.Popen]:
+    """Start the command ``allocator`` in a process of its own; end it afterwards."""
+    process = subprocess.Popen(
+        [sys.executable, "-m", "allocator_node.commands.allocator", "--team", str(team)]
+        + ["--autostart", "--ros-args", "-r", f"__node:={name}", *arguments],
+        cwd=ROOT,
+        env=os.environ | {"PYTHONPATH": f"{ROOT}:{os.environ.get('PYTHONPATH', '')}"},
+        stderr=subprocess.PIPE,
+        text=True,
+    )
+    try:
+        yield process
+    finally:
+        process.kill()
+        process.communicate()
 
 
 def until(condition: Callable[[], Any], what: str, patience: float = PATIENCE) -> Any:

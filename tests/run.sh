@@ -6,4 +6,5 @@ set -eu
 
 cd "$ROOT"
 echo "Tests on ROS 2 $distro ($source), $("$PYTHON" -V)."
-exec "$PYTHON" -m pytest -n 2 --dist loadfile --no-loadscope-reorder "$@"
+# One more worker than cores it is meant for: much of what tests on ROS 2 do is wait.
+exec "$PYTHON" -m pytest -n 3 --dist loadfile --no-loadscope-reorder "$@"

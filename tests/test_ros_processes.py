@@ -1,15 +1,10 @@
-"""Processes that die and come back: the node, a second one, the drivers of its robots."""
+"""Processes that die and come back: the node, the drivers of its robots."""
 
 from __future__ import annotations
 
 import json
-import os
 import signal
-import subprocess
-import sys
 import time
-from collections.abc import Iterator
-from contextlib import contextmanager
 from pathlib import Path
 
 import pytest
@@ -23,6 +18,7 @@ from ros_bench import (  # noqa: E402
     LATE,
     Bench,
     Rovers,
+    allocator,
     bench,
     busy,
     moving,
@@ -30,29 +26,7 @@ from ros_bench import (  # noqa: E402
     values_of,
 )
 
-from allocator_node.ros import loop  # noqa: E402
-
 pytestmark = pytest.mark.ros
-
-ROOT = Path(__file__).parents[1]
-
-
-@contextmanager
-def allocator(team: Path, name: str, *arguments: str) -> Iterator[subprocess.Popen]:
-    """Start the command ``allocator`` in a process of its own; end it afterwards."""
-    process = subprocess.Popen(
-        [sys.executable, "-m", "allocator_node.commands.allocator", "--team", str(team)]
-        + ["--autostart", "--ros-args", "-r", f"__node:={name}", *arguments],
-        cwd=ROOT,
-        env=os.environ | {"PYTHONPATH": f"{ROOT}:{os.environ.get('PYTHONPATH', '')}"},
-        stderr=subprocess.PIPE,
-        text=True,
-    )
-    try:
-        yield process
-    finally:
-        process.kill()
-        process.communicate()
 
 
 def test_after_a_kill_robots_stop_and_the_next_node_goes_on(tmp_path: Path) -> None:
@@ -93,42 +67,6 @@ def test_after_a_kill_robots_stop_and_the_next_node_goes_on(tmp_path: Path) -> N
             time.sleep(1.5)
             assert not [message for _, message in record[before:] if moving(message)]
             assert [values_of(message) for _, message in changes] == []
-
-
-@pytest.mark.parametrize("name", ["second", "first"])
-def test_a_second_allocator_on_the_team_refuses(tmp_path: Path, name: str) -> None:
-    """Also one of the same name; the first goes on undisturbed."""
-    with bench(tmp_path) as made:
-        rovers = Rovers(made.probe)
-        with allocator(made.team_file, "first"):
-            until(lambda: busy(rovers), "a rover drives", 30)
-            with allocator(made.team_file, name) as second:
-                assert second.wait(30) == 1
-                assert "publishes on /rover_1/cmd_vel" in second.stderr.read()
-            assert busy(rovers)
-
-
-def test_a_node_that_discovers_another_one_late_gives_way(tmp_path: Path, monkeypatch) -> None:
-    """As on a loaded machine, where discovery takes longer than activate waits."""
-    monkeypatch.setattr(loop.Loop, "_refuse_if_occupied", lambda self: None)
-    with bench(tmp_path) as made:
-        rovers = Rovers(made.probe)
-        with allocator(made.team_file, "first"):
-            until(lambda: busy(rovers), "a rover drives", 30)
-            time.sleep(loop.NEWCOMER + 1.0)
-            assert made.configure() and made.activate()
-            until(lambda: made.node.loop.occupied, "it notices")
-            assert "/first publishes on /rover_1/cmd_vel" in made.node.loop.occupied
-            until(
-                lambda: made.probe.node.count_publishers("/rover_1/cmd_vel") == 1, "it lets go"
-            )
-            assert made.probe.set(kappa=0.003).successful
-            assert made.probe.node.count_publishers("/rover_1/cmd_vel") == 1
-            until(lambda: busy(rovers), "the first one drives on")
-        monkeypatch.undo()
-        assert made.probe.set(command_robots=False, kappa=0.002).successful
-        until(lambda: made.probe.set(command_robots=True).successful, "nobody else commands", 30)
-        until(lambda: busy(rovers), "now it drives")
 
 
 def test_a_robot_whose_driver_restarts_is_taken_up_again(tmp_path: Path) -> None:
