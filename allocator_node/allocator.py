@@ -30,7 +30,8 @@ from .view import View
 from .work import Stage, Work
 
 LONGEST_STEP = 1.0
-"""Longest time one step counts for; beyond it the loop was paused, s."""
+"""Longest time one step counts for, if that is not less than 2.5 periods; beyond it the loop
+was paused, s."""
 
 RESTED = 20.0
 """Time constant with which a robot that was swapped may be swapped again as before, s."""
@@ -100,8 +101,9 @@ class Allocator:
 
     @settings.setter
     def settings(self, settings: Settings) -> None:
-        self._settings = settings
-        self._pilot.survey(self.team, self._model, settings)
+        former, self._settings = self._settings, settings
+        if settings != former:
+            self._pilot.survey(self.team, self._model, settings)
 
     # -- one period ---------------------------------------------------------------
 
@@ -125,7 +127,7 @@ class Allocator:
             prices = price(problem)
         with _timed(seconds, "assignment"):
             found = self.assigner.assign(problem, prices)
-        situation = self._situation(view, means.enough & means.way, prices)
+        situation = self._situation(view, means, prices)
         before, self._assignment = self._assignment, found.task
         reallocations = self._reasons.explain(
             situation, before, found.task, problem.swap_cost, now, not self.assigner.searching
@@ -142,9 +144,9 @@ class Allocator:
         )
 
     def _believe(self, observation: Observation, now: float) -> View:
-        model, settings = self._model, self._settings
+        settings = self._settings
         dt = self.period if self._now is None else now - self._now
-        if not 0 < dt <= LONGEST_STEP:
+        if not 0 < dt <= max(LONGEST_STEP, 2.5 * self.period):
             # The clock jumped or the loop was paused: nothing is learned from the gap.
             dt = self.period
             self._pilot.forget()
@@ -223,7 +225,7 @@ class Allocator:
         s = np.where(view.suitability > 0, view.suitability, 1.0) * self._efficacy.eta
         return (s >= self._settings.s_min) & ~self._efficacy.barred
 
-    def _situation(self, view: View, enough: np.ndarray, prices: np.ndarray) -> Situation:
+    def _situation(self, view: View, means: Means, prices: np.ndarray) -> Situation:
         return Situation(
             known=view.places.known,
             heard=view.places.heard,
@@ -231,7 +233,8 @@ class Allocator:
             suitability=view.suitability,
             efficacy=self._efficacy.eta.copy(),
             trusted=self._trusted(view),
-            enough=enough & ~self._charging.on[:, None],
+            enough=means.enough & ~self._charging.on[:, None],
+            way=means.way,
             dearness=self._energy.dearness(self._model),
             prices=prices,
             pinned=self._model.mask(self.orders.pins),
@@ -248,6 +251,8 @@ class Allocator:
         self._restless = 1.0 + (self._restless - 1.0) * np.exp(-view.dt / RESTED)
         swapped = problem.settled[before[problem.settled] != self._assignment[problem.settled]]
         self._restless[swapped] = np.minimum(2.0 * self._restless[swapped], MOST_RESTLESS)
+        # What an earlier run assigned counts from now on.
+        self._since[(self._assignment >= 0) & np.isnan(self._since)] = view.now
         changed = np.flatnonzero(before != self._assignment)
         if not len(changed):
             return
@@ -395,8 +400,8 @@ class Allocator:
     def edit(self, team: Team, now: float) -> None:
         """Go on with another task table of the same robots.
 
-        What was learned and done stays with the tasks that stay as they are; a
-        task whose place or kind of work changed begins anew.
+        What was learned stays with a task's name. What was done stays too, unless the
+        task's place or kind of work changed: then its work begins anew.
         """
         model = Model(team)
         former = self._model.task_of
@@ -411,13 +416,13 @@ class Allocator:
         if model.tasks != self._model.tasks:
             self.assigner.forget()
         self._model = model
-        self._pilot.forget()
 
     def _move(self, moved: MovedGoal) -> None:
         task = self.team.tasks.get(moved.task)
-        if task is not None:
-            edited = dict(self.team.tasks) | {moved.task: task.moved(moved.at, moved.heading)}
-            self.edit(self.team.with_tasks(edited), self._now or 0.0)
+        if task is None or (there := task.moved(moved.at, moved.heading)) == task:
+            return
+        tasks = dict(self.team.tasks) | {moved.task: there}
+        self.edit(self.team.with_tasks(tasks), self._now or 0.0)
 
     def close(self) -> None:
         """End what runs beside the steps."""

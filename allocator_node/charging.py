@@ -82,6 +82,17 @@ class Errands:
     activity: tuple[str, ...]
 
 
+def dock_of(model: Model) -> np.ndarray:
+    """Give the number of each robot's dock, −1: none, (N,); docks that near are one."""
+    dock = np.full(len(model.robots), -1)
+    having = np.flatnonzero(model.has_dock)
+    if len(having):
+        pairs = cKDTree(model.docks[having]).query_pairs(SAME_DOCK, output_type="ndarray")
+        shared = coo_array((np.ones(len(pairs)), tuple(pairs.T)), shape=(len(having),) * 2)
+        dock[having] = connected_components(shared)[1]
+    return dock
+
+
 class Charging:
     """Keeps who is to charge, who has the dock, and where the others wait.
 
@@ -103,12 +114,7 @@ class Charging:
         self._holder: dict[int, int] = {}
         self._spots: dict[int, tuple[tuple, np.ndarray]] = {}
         self._docks = model.docks
-        self._dock = np.full(count, -1)
-        having = np.flatnonzero(model.has_dock)
-        if len(having):
-            pairs = cKDTree(model.docks[having]).query_pairs(SAME_DOCK, output_type="ndarray")
-            shared = coo_array((np.ones(len(pairs)), tuple(pairs.T)), shape=(len(having),) * 2)
-            self._dock[having] = connected_components(shared)[1]
+        self._dock = dock_of(model)
 
     def update(self, crew: Crew, settings: Settings, may: May) -> Errands:
         """Decide who charges now, and where everybody concerned goes."""

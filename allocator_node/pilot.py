@@ -64,14 +64,17 @@ class Pilot:
         self._last: tuple[np.ndarray, np.ndarray, Course] | None = None
         self._trail = np.zeros((count, 2))
         self._headway = Headway(count)
+        self._clearance: np.ndarray | None = None
         self.survey(team, model, settings)
 
     def survey(self, team: Team, model: Model, settings: Settings) -> None:
         """Look at the site anew: its areas, and the distances to keep."""
         self.safety = Safety(team, model, settings)
         clearance = self.safety.reach + settings.margin
-        self.ways = Ways(team, clearance)
-        self._steering = Steering(team, model, clearance)
+        if self._clearance is None or (clearance != self._clearance).any():
+            self._clearance = clearance
+            self.ways = Ways(team, clearance)
+            self._steering = Steering(team, model, clearance)
 
     def restart(self, robots: np.ndarray) -> None:
         """Begin anew for robots (n,) that got another task."""
@@ -169,14 +172,14 @@ class Pilot:
             course,
             model,
             targets,
-            view.poses,
-            view.points,
-            view.places.velocities,
-            view.places.known,
-            self._guidance.held,
-            self._guidance.aside,
-            settings,
-            view.dt,
+            poses=view.poses,
+            points=view.points,
+            velocities=view.places.velocities,
+            known=view.places.known,
+            held=self._guidance.held,
+            aside=self._guidance.aside,
+            settings=settings,
+            dt=view.dt,
         )
         return make_way(
             course,
@@ -184,6 +187,7 @@ class Pilot:
             obeys & ~targets.busy,
             model.fleet.cruise,
             self.safety.reach + settings.margin / 2,
+            model.fleet.flies,
             settings.height_clearance,
         )
 

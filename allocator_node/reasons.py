@@ -34,6 +34,7 @@ class Situation:
         trusted: Pairs whose efficacy allows them (not failed, not waiting for the
             next try), shape (N, M).
         enough: Where the energy suffices, shape (N, M).
+        way: Where there is a way, with room at its end, shape (N, M).
         dearness: λ, shape (N,).
         prices: κ w + e, Wh, shape (N, M).
         pinned, banned: Shape (N, M).
@@ -49,6 +50,7 @@ class Situation:
     efficacy: np.ndarray
     trusted: np.ndarray
     enough: np.ndarray
+    way: np.ndarray
     dearness: np.ndarray
     prices: np.ndarray
     pinned: np.ndarray
@@ -59,11 +61,13 @@ class Situation:
 
     ROBOTS = (
         "known", "heard", "health", "suitability", "efficacy", "trusted",
-        "enough", "dearness", "prices", "pinned", "banned",
+        "enough", "way", "dearness", "prices", "pinned", "banned",
     )  # fmt: skip
     """Parts whose first axis is the robot."""
 
-    PAIRS = ("suitability", "efficacy", "trusted", "enough", "prices", "pinned", "banned")
+    PAIRS = (
+        "suitability", "efficacy", "trusted", "enough", "way", "prices", "pinned", "banned",
+    )  # fmt: skip
     """Parts of shape (N, M)."""
 
     def updated(self, now: Situation, robots: np.ndarray, tasks: Iterable[int]) -> Situation:
@@ -236,6 +240,8 @@ class Reasons:
             return _Reason(3, Cause.FEATURE, self._failed(i, then, now))
         if then.enough[i, m] and not now.enough[i, m]:
             return _Reason(4, Cause.ENERGY, f"{name} has too little energy left for {task}")
+        if then.way[i, m] and not now.way[i, m]:
+            return _Reason(5, Cause.TASK, f"{name} finds no way to {task} any more")
         if then.trusted[i, m] and not now.trusted[i, m]:
             return _Reason(5, Cause.EFFICACY, self._progress(i, m, now))
         return None
@@ -253,6 +259,8 @@ class Reasons:
             return _Reason(3, Cause.FEATURE, self._works_again(i, then, now))
         if now.enough[i, m] and not then.enough[i, m]:
             return _Reason(4, Cause.ENERGY, f"{name} has enough energy again for {task}")
+        if now.way[i, m] and not then.way[i, m]:
+            return _Reason(6, Cause.TASK, f"{name} is the one to get to {task} now")
         if then.banned[i, m] and not now.banned[i, m]:
             return _Reason(6, Cause.PIN, f"{name} is no longer banned from {task}")
         if now.trusted[i, m] and not then.trusted[i, m]:

@@ -21,13 +21,14 @@ class Settings(Checked):
         gamma: Gain γ of the task rows, 1/s: robots slow down within c/γ of a goal.
         gamma_s: Gain γ_s of the safety rows, 1/s.
         margin: Distance kept beside the bodies, m.
-        height_clearance: Height difference from which two robots ignore each other, m.
+        height_clearance: Height difference from which a flying robot and another one ignore
+            each other, m.
         s_min: Least specialization to be eligible.
         swap_distance: What taking a robot off a task costs, as metres of driving.
         warn_health: Health of a feature whose diagnostic says WARN.
         health_timeout: Age from which a diagnostic counts as STALE, s.
         pose_timeout: Age of the last pose from which a robot counts as silent, s.
-        battery_timeout: Age from which the charge is counted on from the last value, s.
+        battery_timeout: Age of the last measured charge from which it is an estimate, s.
         silent_reach: How far a robot is assumed to roll on at most once it is silent, m.
         efficacy_law: "ratio" (measured over expected progress) or the published
             "additive" law.

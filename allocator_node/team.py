@@ -124,7 +124,7 @@ class Robot(Checked):
         radius: Radius of the circle around its axle that holds the body, m.
         features: Names of what it carries.
         battery: Its energy.
-        dock: Where it charges, x, y (m); None: wherever it started.
+        dock: Where it charges, x, y (m); None: it is not sent to charge.
         start: Where simulation and rehearsal put it: x, y (m), heading (rad).
         pose: Source of its pose; default ``<name>/odom``, Odometry.
         command: Sink of its commands; default ``<name>/cmd_vel``, TwistStamped.

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from contextlib import suppress
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 from functools import partial
 from typing import Any
 
@@ -172,5 +172,4 @@ def _same_work(old: Task, new: Task) -> bool:
     """Tell whether two tasks are the same but for who may do them and when."""
     if type(old) is not type(new):
         return False
-    common = ("needs", "each", "robots", "priority", "urgency", "after", "active")
-    return replace(old, **{name: getattr(new, name) for name in common}) == new
+    return replace(old, **{part.name: getattr(new, part.name) for part in fields(Task)}) == new

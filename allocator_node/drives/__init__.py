@@ -7,7 +7,7 @@ from .aerial import Aerial
 from .base import AXES, Drive
 from .carlike import Carlike
 from .differential import Differential
-from .fleet import Fleet
+from .fleet import Fleet, level
 from .holonomic import Holonomic
 
 DRIVES: dict[str, type[Drive]] = {
@@ -36,4 +36,5 @@ __all__ = [
     "Fleet",
     "Holonomic",
     "known_drives",
+    "level",
 ]

@@ -9,6 +9,19 @@ import numpy as np
 from .base import AXES, Drive
 
 
+def level(apart: np.ndarray, fly: np.ndarray, clearance: float) -> np.ndarray:
+    """Tell which pairs of robots are at heights at which they can meet.
+
+    On the ground all are: heights there are what two localizations make of them.
+
+    Args:
+        apart: Height differences, m.
+        fly: Whether one of the pair flies.
+        clearance: Height difference from which flying robots and others do not meet, m.
+    """
+    return (np.abs(apart) < clearance) | ~fly
+
+
 class Fleet:
     """Drives of N robots as arrays.
 
@@ -23,6 +36,7 @@ class Fleet:
         reverses: Which may drive backwards, shape (N,).
         speed_up: Highest acceleration, m/s², inf where unlimited, shape (N,).
         height_band: Lowest and highest height, m, shape (N, 2); NaN on the ground.
+        flies: Which fly, shape (N,).
     """
 
     def __init__(self, drives: Sequence[Drive]) -> None:

@@ -23,10 +23,12 @@ import cvxpy as cp
 import numpy as np
 
 from ..belief.energy import SECONDS_PER_HOUR
+from ..charging import dock_of
 from ..decision import Decision
 from ..model import Model
 from ..program.problem import LEVELS
 from ..team import Team
+from ..work import Work
 from .start import task_points
 
 HELD = 1e-5
@@ -59,7 +61,8 @@ def endurance(team: Team, start: Decision) -> list[Endurance]:
         start: Who starts where.
     """
     model = Model(team)
-    standing = np.array([t.active and not t.ends for t in team.tasks.values()], dtype=bool)
+    lasting = np.array([not task.ends for task in team.tasks.values()], dtype=bool)
+    standing = lasting & Work(team).active()
     hours, trips = stints(team, model, start)
     shares = _shares(model, start, standing, hours, trips)
     result = []
@@ -120,9 +123,11 @@ def _shares(
         cp.sum(x, axis=0) >= cp.multiply(model.least, z),
         x.T @ capability >= cp.multiply(model.needs, z[:, None]),
     ]
-    for dock in {tuple(place) for place in model.docks[model.has_dock]}:
-        users = model.has_dock & (model.docks == dock).all(axis=1)
-        rules.append(cp.sum(y[np.flatnonzero(users)]) <= 1)
+    if not model.has_dock.all():
+        rules.append(y[np.flatnonzero(~model.has_dock)] == 0)
+    docks = dock_of(model)
+    for dock in np.unique(docks[docks >= 0]):
+        rules.append(cp.sum(y[np.flatnonzero(docks == dock)]) <= 1)
     for level in LEVELS:
         at = np.flatnonzero(standing & (model.priority == level))
         if len(at):

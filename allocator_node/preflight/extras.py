@@ -98,7 +98,10 @@ def best_extra(
     order = np.arange(len(candidates)) / (2 * len(candidates))
     problem = cp.Problem(cp.Maximize(gained - order @ x), rules)
     # HiGHS by way of SciPy: by way of highspy it prints a banner into a command's output.
-    problem.solve(solver=cp.SCIPY, scipy_options={"time_limit": TIME_LIMIT})
+    try:
+        problem.solve(solver=cp.SCIPY, scipy_options={"time_limit": TIME_LIMIT})
+    except cp.SolverError:  # not one solution within the time
+        return None
     if x.value is None or gained.value < 0.5:
         return None
     robot, feature = candidates[int(np.argmax(x.value))]

@@ -10,6 +10,7 @@ from ..decision import Decision, Shortfall
 from ..model import Model
 from ..settings import Settings
 from ..team import Team
+from ..work import Work
 from .endurance import Endurance, endurance
 from .extras import Case, Extra, TooLarge, best_extra
 from .losses import Losses, Outcome, single_losses
@@ -138,7 +139,7 @@ def inspect(
         fits=fits(team, start.able),
         start=places(model, start),
         shortfalls=start.shortfalls,
-        waiting=tuple(n for n, t in team.tasks.items() if not t.active or t.after),
+        waiting=tuple(n for n, on in zip(team.tasks, Work(team).active(), strict=True) if not on),
         losses=singles,
         pairs=worse,
         extras=_extras(team, settings, start, singles, on_progress),

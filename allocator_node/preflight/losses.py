@@ -7,6 +7,7 @@ from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, replace
 from typing import Literal
 
+from ..charging import dock_of
 from ..decision import Decision, Shortfall
 from ..model import Model
 from ..settings import Settings
@@ -71,10 +72,10 @@ def single_losses(team: Team) -> Iterator[Loss]:
         yield Loss("robot", (robot.name,))
         for feature in robot.features:
             yield Loss("feature", (robot.name,), feature)
-    docks: dict[tuple[float, float], list[str]] = {}
-    for robot in team.robots.values():
-        if robot.dock is not None:
-            docks.setdefault(robot.dock, []).append(robot.name)
+    docks: dict[int, list[str]] = {}
+    for name, dock in zip(team.robots, dock_of(Model(team)), strict=True):
+        if dock >= 0:
+            docks.setdefault(int(dock), []).append(name)
     for users in docks.values():
         yield Loss("dock", tuple(users))
 

@@ -107,12 +107,12 @@ class Assigner:
 
     def assign(self, problem: Problem, prices: np.ndarray) -> Assignment:
         """Give this period's assignment."""
-        if (task := self._by_slots(problem, prices)) is not None:
-            return evaluate(problem, prices, task, proven=True)
         if self._search is not None and self._search.done():
             search, self._search = self._search, None
             proof, self._lasted = search.result()
             self._proof = proof or self._proof
+        if (task := self._by_slots(problem, prices)) is not None:
+            return evaluate(problem, prices, task, proven=True)
         lasts = self._lasted
         if lasts is None:
             lasts = PAIR_TAKES * np.count_nonzero(problem.eligible)

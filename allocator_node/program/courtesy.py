@@ -7,6 +7,7 @@ from dataclasses import replace
 import numpy as np
 from scipy.spatial import cKDTree
 
+from ..drives import level
 from .guidance import Course
 
 AHEAD = 4.0
@@ -25,6 +26,7 @@ def make_way(
     idle: np.ndarray,
     cruise: np.ndarray,
     keep: np.ndarray,
+    flies: np.ndarray,
     clearance: float,
 ) -> Course:
     """Let idle robots that stand in somebody's way step aside, square to that way.
@@ -35,7 +37,8 @@ def make_way(
         idle: Robots that may be asked to move, shape (N,).
         cruise: Cruising speeds, m/s, shape (N,).
         keep: Half the distance two robots must keep, by robot, m, shape (N,).
-        clearance: Height difference from which two robots ignore each other, m.
+        flies: Which robots fly, shape (N,).
+        clearance: Height difference from which those and others ignore each other, m.
 
     Returns:
         The course with a way to go for those who step aside.
@@ -49,8 +52,9 @@ def make_way(
     )
     stander = np.repeat(standers, [len(found) for found in near])
     mover = moving[np.concatenate([np.array(found, dtype=int) for found in near])]
-    level = np.abs(points[stander, 2] - points[mover, 2]) < clearance
-    stander, mover = stander[level], mover[level]
+    apart, fly = points[stander, 2] - points[mover, 2], flies[stander] | flies[mover]
+    meet = level(apart, fly, clearance)
+    stander, mover = stander[meet], mover[meet]
     if not len(stander):
         return course
 

@@ -18,8 +18,9 @@ from .ways import Ways
 class GoalTable:
     """The goals of all tasks as arrays (N, M, ...).
 
-    Attributes are those of :class:`~allocator_node.tasks.Goals`; a NaN path is
-    straight to the goal; ``moving`` tells whether any goal moves.
+    Attributes are those of :class:`~allocator_node.tasks.Goals` but ``facing``; dwell is
+    (M,), velocities are (1, M, 3) where nothing moves; a NaN path is straight to the
+    goal; ``moving`` tells whether any goal moves.
     """
 
     def __init__(self, goals: list[Goals], robots: int) -> None:
@@ -109,7 +110,7 @@ def formulate(
         ways: Ways around the site's areas; a pair with none is not eligible.
 
     Returns:
-        The program, and where the energy suffices and there is a way.
+        The program, and what each pair has of energy, way and room.
     """
     robots, tasks = known.suitability.shape
     table = GoalTable(goals, robots)
@@ -129,7 +130,7 @@ def formulate(
     closing = table.pace * np.minimum(settings.gamma * distance, cruise)
     closing[distance <= table.tolerance] = 0.0
     path = np.where(np.isnan(table.path), distance, table.path)
-    reachable = np.isfinite(path)
+    reachable = np.isfinite(path) & np.isfinite(lead.length)
     way = reachable & _has_room(model, known, may & reachable)
     path = np.where(reachable, path, 0.0)
 

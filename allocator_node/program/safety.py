@@ -8,6 +8,7 @@ import numpy as np
 import shapely
 from scipy.spatial import cKDTree
 
+from ..drives import level
 from ..model import Model
 from ..settings import Settings
 from ..team import Team
@@ -22,7 +23,7 @@ class SafetyRows:
 
     Attributes:
         first: Robot index, shape (R,).
-        second: Robot index or −1 (a wall or a robot that takes no commands), shape (R,).
+        second: Robot index, or −1 where the first has to keep the row alone, shape (R,).
         normal: Unit vectors pointing away from the obstacle, shape (R, 2).
         bound: Right-hand sides, m/s, shape (R,).
         violated: Where the distance asked for is not kept already, or would not be by
@@ -125,8 +126,7 @@ class Safety:
         # The body reaches this far around the control point.
         self.reach = model.radius + fleet.ahead
         self.speed = fleet.max_speed
-        self.body = model.radius
-        self.lookahead = fleet.ahead
+        self.flies = fleet.flies
         self.areas = [shapely.Polygon(area.polygon) for area in team.keep_out]
         self.boundary = shapely.Polygon(team.boundary) if team.boundary else None
         rings = [area.exterior for area in self.areas]
@@ -157,7 +157,7 @@ class Safety:
         """Give the rows of this period.
 
         Args:
-            points: Control points, m, shape (N, 3); NaN where not known.
+            points: Control points, m, shape (N, 3); not looked at where not known.
             known: Robots that were ever heard, shape (N,).
             heard: Robots heard from now, which obey commands, shape (N,).
             growth: How far a silent robot may have moved, m, shape (N,).
@@ -193,8 +193,7 @@ class Safety:
         horizon = rush / 2 + np.hypot(rush / 2, widest)
         pairs = cKDTree(points[robots, :2]).query_pairs(horizon, output_type="ndarray")
         i, j = robots[pairs[:, 0]], robots[pairs[:, 1]]
-        level = np.abs(points[i, 2] - points[j, 2]) < self.settings.height_clearance
-        near = level & (heard[i] | heard[j])
+        near = self._level(points, i, j) & (heard[i] | heard[j])
         i, j = i[near], j[near]
 
         apart = points[i, :2] - points[j, :2]
@@ -238,8 +237,8 @@ class Safety:
         than a calm way out; most likely, though, the robot is somewhere on its trail.
         """
         me, other = (part.ravel() for part in np.meshgrid(heard, lost, indexing="ij"))
-        level = np.abs(points[me, 2] - points[other, 2]) < self.settings.height_clearance
-        me, other = me[level], other[level]
+        near = self._level(points, me, other)
+        me, other = me[near], other[near]
         apart, way = points[me, :2] - points[other, :2], trail[other]
         share = (apart * way).sum(axis=1) / np.maximum((way**2).sum(axis=1), 1e-12)
         apart -= np.clip(share, 0.0, 1.0)[:, None] * way
@@ -253,6 +252,10 @@ class Safety:
         normal = apart / distance[:, None]
         alone = np.full(len(me), -1)
         return SafetyRows.of(me, alone, normal, bound, distance - keep, other)
+
+    def _level(self, points: np.ndarray, i: np.ndarray, j: np.ndarray) -> np.ndarray:
+        apart, fly = points[i, 2] - points[j, 2], self.flies[i] | self.flies[j]
+        return level(apart, fly, self.settings.height_clearance)
 
     def _barrier(self, distance: np.ndarray, keep: np.ndarray) -> np.ndarray:
         """Give the bound of ḣ ≥ −γ_s h with h = d² − D² on the speed apart ḋ, m/s."""

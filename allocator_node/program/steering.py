@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 import shapely
 
-from ..drives import Fleet
+from ..drives import Fleet, level
 from ..model import Model
 from ..settings import Settings
 from ..team import Team
@@ -159,6 +159,7 @@ class Steering:
         course: Course,
         model: Model,
         targets: Targets,
+        *,
         poses: np.ndarray,
         points: np.ndarray,
         velocities: np.ndarray,
@@ -205,9 +206,10 @@ class Steering:
             )
             carrot, avoid = plan.carrot(CARROT / curvature), 0.0
             if plan.gear > 0:
-                others = known & (
-                    np.abs(points[:, 2] - points[i, 2]) < settings.height_clearance
-                )
+                others = known & level(
+                    points[:, 2] - points[i, 2], fleet.flies | fleet.flies[i],
+                    settings.height_clearance,
+                )  # fmt: skip
                 others[i] = False
                 keep = self._clearance[i] + self._clearance - settings.margin
                 pace = targets.pace[i] * fleet.cruise[i]

@@ -6,6 +6,7 @@ from typing import Any
 
 import numpy as np
 
+from ..drives import Fleet, level
 from ..settings import Settings
 from ..sim.record import TRACE_PERIOD
 from ..sim.site import Site
@@ -76,13 +77,18 @@ def _nearest(
     radii = np.array([team.robots[name].radius if team else 0.0 for name in names])
     first, second = np.triu_indices(len(names), 1)
     reach = radii[first] + radii[second]
+    flies = np.ones(len(names), dtype=bool)
+    if team:
+        flies = Fleet([team.robots[name].drive for name in names]).flies
+    fly = flies[first] | flies[second]
     clearance = Settings().height_clearance
     best: list[list[Any]] = []
     for begin in range(0, len(times), every):
         block = placed[:, begin : begin + every]
         apart = block[first] - block[second]
         gaps = np.hypot(apart[..., 0], apart[..., 1]) - reach[:, None]
-        gaps[~np.isfinite(gaps) | (np.abs(apart[..., 2]) >= clearance)] = np.inf
+        meet = level(apart[..., 2], fly[:, None], clearance)
+        gaps[~np.isfinite(gaps) | ~meet] = np.inf
         pair, step = np.unravel_index(int(np.argmin(gaps)), gaps.shape)
         if np.isfinite(gaps[pair, step]):
             i, j = int(first[pair]), int(second[pair])

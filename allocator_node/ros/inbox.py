@@ -253,7 +253,7 @@ class Inbox:
         }
 
     def forget_times(self) -> None:
-        """Drop all that was heard: the clock was set back, so its times mean nothing."""
+        """Drop all that was heard: the clock was set, so its times mean nothing."""
         self._last = Observation.nothing(len(self._robots))
         self._last_look = np.nan
         for source in self._poses:
@@ -286,7 +286,10 @@ def _matcher(robots: tuple[Robot, ...]) -> Callable[[str], object]:
 
 def _sieve(robots: tuple[Robot, ...]) -> Callable[[bytes], object]:
     """Give a test of whether a message as it came can hold a name that :func:`_matcher` knows."""
+    # What stands between brackets is no literal text.
     literal = {
-        max(re.split(r"[*?[]", rule.name), key=len) for robot in robots for rule in robot.health
+        max(re.split(r"\[!?\]?[^]]*\]|[*?[]", rule.name), key=len)
+        for robot in robots
+        for rule in robot.health
     }
     return re.compile(b"|".join(re.escape(part.encode()) for part in literal) or b"(?!)").search

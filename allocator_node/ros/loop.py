@@ -51,7 +51,7 @@ SEARCH_SHARE = 0.1
 STOP_REPEATS = 3
 """The last command is sent so often: a robot may listen with best effort."""
 
-DISCOVERY = 3.0
+HEARD_BY = 3.0
 """How long robots that have a task may take to be discovered after an activation, s."""
 
 
@@ -124,7 +124,7 @@ class Loop:
         if self._options.command_robots:
             self._take_over()
         self._renew()
-        self._await_robots(max(DISCOVERY, self.allocator.settings.pose_timeout))
+        self._await_robots(max(HEARD_BY, self.allocator.settings.pose_timeout))
         if self._options.record_to:
             self._record(Path(self._options.record_to))
         self.active = True
@@ -434,8 +434,14 @@ class Loop:
         except OSError as error:
             self._log.error(f"state_file: {error}; starting without it")
         except (ValueError, TypeError, LookupError, AttributeError) as error:
-            aside = self._state.set_aside()
             self._log.warning(
-                f"state_file: {self._state.path} is damaged ({error}); it is kept as {aside}, "
+                f"state_file: {self._state.path} is damaged ({error}); {self._set_aside()}, "
                 "and nothing of it is used"
             )
+
+    def _set_aside(self) -> str:
+        """Keep a damaged file; say how, or why not."""
+        try:
+            return f"it is kept as {self._state.set_aside()}"
+        except OSError as error:
+            return f"it cannot be kept under another name ({error})"

@@ -142,7 +142,10 @@ class Task(Checked, abc.ABC):
 
     @abc.abstractmethod
     def advance(self, state: Any, scene: Scene) -> Any:
-        """Give the state after what the scene shows; called once a period."""
+        """Give the state after what the scene shows.
+
+        Called once a period, and once more where the task's group has changed in it.
+        """
 
     @abc.abstractmethod
     def goals(self, state: Any, scene: Scene) -> Goals:
