@@ -25,9 +25,9 @@ from .program.guidance import Targets
 from .reasons import Reasons, Situation
 from .settings import Settings
 from .tasks import Goals
-from .team import Team
+from .team import Target, Team
 from .view import View
-from .work import Stage, Work
+from .work import Stage, Work, fingerprint
 
 LONGEST_STEP = 1.0
 """Longest time one step counts for, if that is not less than 2.5 periods; beyond it the loop
@@ -79,6 +79,7 @@ class Allocator:
         self._since = np.full(count, np.nan)
         self._restless = np.ones(count)
         self._work = Work(team)
+        self._moved: dict[str, tuple[MovedGoal, str]] = {}
         self._model = Model(team)
         self._poses = PoseBelief(self._model.fleet.fastest)
         self._assignment = np.full(count, -1)
@@ -331,11 +332,12 @@ class Allocator:
             assignment=found.task.copy(),
             since=self._since.copy(),
             commands=motion.control.commands,
-            goals=targets.points,
+            goals=np.where(view.places.steady[:, None], targets.points, np.nan),
             facing=targets.facing,
             navigates=model.navigates,
             poses=view.places.poses,
             heard=view.places.heard,
+            steady=view.places.steady,
             able=problem.eligible,
             suitability=view.suitability,
             efficacy=self._efficacy.eta.copy(),
@@ -349,12 +351,27 @@ class Allocator:
             notices=tuple(
                 notices(
                     model, self._settings, view.places, means.enough, self._charging.on, motion,
-                    self._work.remarks() | self._cut_off(view, means),
+                    self._work.remarks() | self._unheard_targets(view) | self._cut_off(view, means),
+                    self._features.remembered(),
                 )
             ),
             seconds=seconds,
             gap=found.gap,
         )
+
+    def _unheard_targets(self, view: View) -> dict[str, str]:
+        """Say of active tasks that the topic they keep to is silent."""
+        active = zip(self.team.tasks.items(), self._work.active(), strict=True)
+        topics = {
+            name: task.keeps_to.topic
+            for (name, task), now in active
+            if now and isinstance(task.keeps_to, Target) and task.keeps_to.topic
+        }
+        return {
+            name: f"{topic}, which it keeps to, is not heard"
+            for name, topic in topics.items()
+            if self._topics.silent(topic, view.now)
+        }
 
     def _cut_off(self, view: View, means: Means) -> dict[str, str]:
         """Say of active tasks that nobody who could do them gets there, or near enough."""
@@ -376,12 +393,13 @@ class Allocator:
         """Say in a word what each robot does."""
         return tuple(
             "silent" if not heard
-            else "held" if self.orders.hold or not steady
+            else "held" if self.orders.hold or not (steady or navigates)
             else "working" if task >= 0
             else errand or "idle"
-            for heard, steady, task, errand in zip(
+            for heard, steady, navigates, task, errand in zip(
                 view.places.heard,
                 view.places.steady,
+                self._model.navigates,
                 self._assignment,
                 errands.activity,
                 strict=True,
@@ -403,6 +421,8 @@ class Allocator:
         What was learned stays with a task's name. What was done stays too, unless the
         task's place or kind of work changed: then its work begins anew.
         """
+        same = {name for name, task in team.tasks.items() if self.team.tasks.get(name) == task}
+        self._moved = {name: move for name, move in self._moved.items() if name in same}
         model = Model(team)
         former = self._model.task_of
         kept = np.array([former.get(name, -1) for name in model.tasks], dtype=int)
@@ -421,8 +441,10 @@ class Allocator:
         task = self.team.tasks.get(moved.task)
         if task is None or (there := task.moved(moved.at, moved.heading)) == task:
             return
+        _, origin = self._moved.get(moved.task, (moved, fingerprint(task)))
         tasks = dict(self.team.tasks) | {moved.task: there}
         self.edit(self.team.with_tasks(tasks), self._now or 0.0)
+        self._moved[moved.task] = moved, origin
 
     def close(self) -> None:
         """End what runs beside the steps."""
@@ -443,10 +465,15 @@ class Allocator:
             self._energy.charge,
             self._charging.on,
             self._poses.poses,
+            self.orders.hold,
+            self._moved,
         )
 
     def recall(self, data: Mapping[str, Any]) -> None:
         """Take up what an earlier run left; names that no longer exist are passed over.
+
+        So are the ends and moves of tasks whose definition is another one now. Whoever
+        was told to stand still stands.
 
         Raises:
             ValueError: The data is not of the form :meth:`memory` gives.
@@ -456,10 +483,15 @@ class Allocator:
         for robot, task, value, failures, barred in memory.learned:
             if robot in robot_of and task in task_of:
                 self._efficacy.recall(robot_of[robot], task_of[task], value, failures, barred)
+        for moved, origin in memory.moved:
+            if moved.task in task_of and origin == fingerprint(self.team.tasks[moved.task]):
+                self._move(moved)
         for name, saved in memory.work.items():
             self._work.restore(name, saved)
-        for name in memory.finished:
-            self._work.end(name)
+        for name, work in memory.finished.items():
+            if name in task_of and work in ("", self._work.fingerprint(name)):
+                self._work.end(name)
+        self.orders = replace(self.orders, hold=self.orders.hold or memory.hold)
         for robot, task in memory.assignment.items():
             if robot in robot_of and task in task_of:
                 self._assignment[robot_of[robot]] = task_of[task]

@@ -35,6 +35,9 @@ AT_DOCK, AT_SPOT = 0.15, 0.5
 BEARINGS = 16
 """Directions from the dock in which a place to wait is looked for."""
 
+FALSE = 0.1
+"""Charge gained away from the dock from which the lower one was measured wrongly."""
+
 May = Callable[[np.ndarray, int], np.ndarray]
 """Tells at which of the points (n, 2) a robot may stand, shape (n,)."""
 
@@ -111,6 +114,7 @@ class Charging:
         count = len(model.robots)
         self.on = np.zeros(count, dtype=bool)
         self._since = np.zeros(count)
+        self._lowest = np.ones(count)
         self._holder: dict[int, int] = {}
         self._spots: dict[int, tuple[tuple, np.ndarray]] = {}
         self._docks = model.docks
@@ -122,7 +126,15 @@ class Charging:
             (crew.exhausted & (crew.charge < settings.charge_until))
             | (crew.charge <= settings.charge_below)
         )
-        goes_on = self.on & crew.spare & ~crew.called & (crew.charge < settings.charge_until)
+        away = np.linalg.norm(crew.points[:, :2] - self._docks, axis=1)
+        at_dock = crew.known & (away <= DOCKED)
+        lowest = np.where(self.on & ~at_dock, self._lowest, np.inf)
+        self._lowest = np.minimum(lowest, crew.charge)
+        # No battery fills on the way: what sent it there was a false measurement.
+        mistaken = crew.charge > self._lowest + FALSE
+        goes_on = self.on & crew.spare & ~crew.called & ~mistaken & (
+            crew.charge < settings.charge_until
+        )
         on = starts | goes_on
         self._since[on & ~self.on] = crew.now
         self.on = on

@@ -88,11 +88,13 @@ class Decision:
         since: When each robot got its present task, s, shape (N,).
         commands: Body velocities (vx, vy, vz, ω) for each robot, m/s and rad/s, shape (N, 4);
             0 for robots that bring their own navigation.
-        goals: Goal point of each robot, m, shape (N, 3); NaN without a task.
+        goals: Goal point of each robot, m, shape (N, 3); NaN without a task, and
+            for robots that are not steady.
         facing: Heading each robot is to take at its goal, rad, shape (N,); NaN: any.
         navigates: Robots that bring their own navigation, shape (N,).
         poses: Poses carried to ``time``, shape (N, 4).
         heard: Which robots are heard from, shape (N,).
+        steady: Those whose poses follow from one another too, shape (N,).
         able: Which robots are eligible for which task, shape (N, M).
         suitability: a_im, shape (N, M).
         efficacy: η_im, shape (N, M).
@@ -120,6 +122,7 @@ class Decision:
     navigates: np.ndarray
     poses: np.ndarray
     heard: np.ndarray
+    steady: np.ndarray
     able: np.ndarray
     suitability: np.ndarray
     efficacy: np.ndarray

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 
 import numpy as np
 
@@ -42,6 +42,7 @@ def notices(
     charging: np.ndarray,
     motion: Motion,
     remarks: Mapping[str, str],
+    remembered: Iterable[tuple[int, int, str]],
 ) -> Iterator[Notice]:
     """Name robots that are silent, astray, low, stopped, stuck or too near to something.
 
@@ -55,16 +56,24 @@ def notices(
         charging: Robots for which that is being seen to, shape (N,).
         motion: The commands, and what the rows did to them.
         remarks: Task to what is to be said of it.
+        remembered: Robot, feature and status name of failures an earlier run heard of.
     """
     for task, text in remarks.items():
         yield Notice(task, Level.WARN, text)
     names = model.robots
+    for i, f, status in remembered:
+        text = (
+            f"{model.features[f]} counts as failed: {status!r} said so before the restart and "
+            "has said nothing since"
+        )
+        yield Notice(names[i], Level.WARN, text)
     for i in np.flatnonzero(~places.heard):
         timed = np.isfinite(places.age[i])
         text = f"not heard for {places.age[i]:.1f} s" if timed else "never heard"
         yield Notice(names[i], Level.WARN, text)
     for i in np.flatnonzero(places.heard & ~places.steady):
-        text = f"its pose jumped by {places.jumped[i]:.1f} m: it stands until its poses agree"
+        does = "gets no other goal" if model.navigates[i] else "stands"
+        text = f"its pose jumped by {places.jumped[i]:.1f} m: it {does} until its poses agree"
         yield Notice(names[i], Level.WARN, text)
     if enough.shape[1]:
         for i in np.flatnonzero(places.heard & ~enough.any(axis=1)):

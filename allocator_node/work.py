@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 from collections.abc import Iterable
 from contextlib import suppress
 from dataclasses import dataclass, fields, replace
@@ -106,6 +107,16 @@ class Work:
             with suppress(ValueError):
                 self._states[name] = self.team.tasks[name].restored(saved)
 
+    def fingerprint(self, name: str) -> str:
+        """Give what tells a task's work from any other's, who may do it and when aside."""
+        task = self.team.tasks[name]
+        blank = type(task)(**{
+            part.name: getattr(task, part.name)
+            for part in fields(task)
+            if part.name == "name" or part.name not in _COMMON
+        })
+        return fingerprint(blank)
+
     def end(self, name: str) -> None:
         """Take a task as finished, as an earlier run left it."""
         if name in self.team.tasks:
@@ -168,8 +179,16 @@ class Stage:
         return Located(at, float(heading), view.places.velocities[robots].mean(axis=0))
 
 
+_COMMON = {part.name for part in fields(Task)}
+
+
+def fingerprint(task: Task) -> str:
+    """Give a short text that another definition of a task does not have."""
+    return hashlib.sha256(repr(task).encode()).hexdigest()[:16]
+
+
 def _same_work(old: Task, new: Task) -> bool:
     """Tell whether two tasks are the same but for who may do them and when."""
     if type(old) is not type(new):
         return False
-    return replace(old, **{part.name: getattr(new, part.name) for part in fields(Task)}) == new
+    return replace(old, **{name: getattr(new, name) for name in _COMMON}) == new

@@ -133,6 +133,22 @@ def test_nothing_is_taken_up_from_another_task_table():
         crew.allocator.close()
 
 
+def test_a_search_nobody_waits_for_any_more_is_over_all_the_same():
+    """Its graded task is switched off while it goes on; what is left is head counts."""
+    parts = ("camera", "gimbal")
+    robots = [robot(f"r{i}", i, 0, features=parts[: 1 + i % 2]) for i in range(4)]
+    graded = watch("graded", 5, 9, most=4, needs={"scan": 1.2})
+    crew = Crew(team_of(robots, [graded, watch("plain", 9, 9)]))
+    crew.allocator.assigner.budget = -1.0
+    crew.step()
+    assert crew.allocator.assigner.searching
+    crew.edit(replace(graded, active=False))
+    crew.allocator.assigner.wait()
+    crew.step()
+    assert not crew.allocator.assigner.searching
+    crew.allocator.close()
+
+
 def test_a_robot_that_fails_is_replaced_in_the_same_period():
     problem = hard()
     assigner = Assigner(budget=-1.0)

@@ -22,8 +22,8 @@ from allocator_node.preflight.terminal import letters
 from allocator_node.settings import Settings
 from allocator_node.sim.rehearsal import rehearse
 from allocator_node.sim.world_file import FeatureEvent, PoseEvent, StalledEvent, World
-from allocator_node.tasks import Patrol
-from allocator_node.team import Battery, HeadCount, KeepOut, Robot, Team, Way
+from allocator_node.tasks import Follow, Patrol
+from allocator_node.team import Battery, HeadCount, KeepOut, Robot, Target, Team, Way
 
 CONFIG = Path(__file__).parents[1] / "config"
 FARM = CONFIG / "solar_farm.yaml"
@@ -248,6 +248,29 @@ def test_places_too_near_to_an_edge_by_hand() -> None:
         ("dock", "big"): pytest.approx((0.6, 0.7)),
     }
     assert not inspect(team, Settings(margin=0.0)).tight
+
+
+def test_docks_within_a_metre_are_one_and_without_one_nobody_charges() -> None:
+    """500 W for 100 W: two at one dock get by; each at its own could hold it alone."""
+    battery = Battery(capacity_wh=100.0, idle_w=100.0, drive_w=0.0, charge_w=100.0, reserve=0.0)
+    robots = [
+        robot(name, 0.0, y, battery=battery, dock=(0.0, y)) for name, y in (("a", 0), ("b", 0.5))
+    ]
+    one = inspect(team_of(robots, [watch("w", 0, 0)]))
+    # Half of the time in the dock, half on watch: two in turn hold it for ever.
+    assert one.endurance[0].share == pytest.approx(1.0, abs=1e-3)
+    two = inspect(team_of(robots, [watch("w", 0, 0, count=2)]))
+    assert two.endurance[0].share == pytest.approx(0.5, abs=1e-3)
+    assert sum(outcome.loss.kind == "dock" for outcome in one.losses) == 1
+    without = [replace(each, dock=None) for each in robots]
+    assert inspect(team_of(without, [watch("w", 0, 0)])).endurance[0].share == 0.0
+
+
+def test_tasks_that_wait_are_told_as_waiting() -> None:
+    inactive = watch("idle", 5, 5, active=False)
+    kept = Follow(name="escort", target=Target(task="idle"), offset=(-2.0, 0.0))
+    found = inspect(team_of([robot("a", 0, 0)], [inactive, kept]))
+    assert found.waiting == ("idle", "escort") and not found.endurance
 
 
 def test_a_feature_without_diagnostics_is_told() -> None:

@@ -256,6 +256,36 @@ def test_stamps_alone() -> None:
     assert reader.time_of(50.0, 49.9, 49.8) == (49.8, "")
 
 
+def test_poses_that_come_late_are_as_old_as_they_are() -> None:
+    """A delay that grows is no clock that disagrees: nobody is taken to be where it was."""
+    reader, odd = StampReader(), ""
+    for k in range(600):
+        now = 1000.0 + 0.1 * k
+        stamp = now - 0.05 - 0.01 * k
+        when, odd = reader.time_of(now, now, stamp)
+        assert when == stamp
+    assert odd == "a message came 6.0 s late"
+    # With a longer pose_timeout, that is no news worth telling.
+    assert StampReader().time_of(100.0, 100.0, 97.5, believed=3.0) == (97.5, "")
+
+
+def test_a_clock_that_disagrees_from_the_start_or_drifts_is_not_believed() -> None:
+    reader = StampReader()
+    assert reader.time_of(100.0, 99.9, 97.0)[0] == 99.9
+    assert reader.time_of(100.1, 100.0, 97.1)[0] == 100.0
+    reader.forget()
+    # Half a millisecond a second slower; after an hour it is 1.8 s behind.
+    for k in range(3600):
+        when, odd = reader.time_of(1000.0 + k, 1000.0 + k, (1000.0 + k) * (1 - 5e-4) + 0.5)
+    assert when == 1000.0 + k and "behind this node's clock" in odd
+    # Set back by 5 s, and then right again.
+    reader.forget()
+    assert reader.time_of(50.0, 50.0, 49.9)[0] == 49.9
+    assert reader.time_of(50.1, 50.1, 45.0)[0] == 50.1
+    assert reader.time_of(50.2, 50.2, 45.1)[0] == 50.2
+    assert reader.time_of(50.3, 50.3, 50.2)[0] == 50.2
+
+
 def test_a_clock_that_was_set_is_noticed(monkeypatch) -> None:
     """Back at once; ahead only where less time went by, and not where time runs fast."""
     real = [50.0]
@@ -300,6 +330,20 @@ def test_health_keeps_the_last_report_of_each_name_we_know(post: Post) -> None:
     )
     assert [(r.name, r.level) for r in post.look().health] == [("placed/cam 1", 1)]
     assert post.look().health == ()
+
+
+def test_brackets_in_a_rule_hide_no_status(post: Post) -> None:
+    """What stands between brackets is in no message as it stands in the rule."""
+    rules = TEAM.replace('"placed/cam*"', '"placed [ab]: cam"')
+    inbox = Inbox(post.receiver, parse_team(rules))
+    publisher = post.sender.create_publisher(DiagnosticArray, "/diagnostics", 10)
+    until(lambda: publisher.get_subscription_count() == 2, "two listeners")
+    broken = DiagnosticStatus(name="placed b: cam", level=b"\x02")
+    publisher.publish(DiagnosticArray(status=[broken]))
+    time.sleep(0.1)
+    assert [report.name for report in inbox.observation(post.now()).health] == ["placed b: cam"]
+    inbox.close()
+    post.sender.destroy_publisher(publisher)
 
 
 def test_thousands_of_names_we_do_not_know_cost_next_to_nothing(post: Post, monkeypatch) -> None:
@@ -510,6 +554,13 @@ def test_a_pose_from_tf_is_news_only_when_its_stamp_is() -> None:
     tree.transform.transform.rotation.w = 0.0
     assert source.look(102.0) is None
     assert "quaternion" in complaints.last["tf rover/base_link"][0]
+    tree.transform.transform.rotation.w = 1.0
+    late = PoseTransform(tree, "rover/base_link", "site", complaints)
+    assert late.look(3700.0) is None, "an hour old: the robot died before we listened"
+    tree.transform.header.stamp.sec = 3700
+    assert late.look(3700.1).time == 3700.0
+    late.forget_times()
+    assert late.look(3705.0) is None, "our clock was set ahead; nothing came"
     lost = PoseTransform(tree, "rover/body", "site", complaints)
     assert lost.look(102.0) is None
     assert complaints.last["tf rover/body"][0] == "refused: no rover/body in site"

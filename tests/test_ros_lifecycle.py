@@ -32,6 +32,7 @@ from ros_bench import (  # noqa: E402
     until,
 )
 from std_msgs.msg import String  # noqa: E402
+from std_srvs.srv import SetBool  # noqa: E402
 
 from allocator_node.allocator import Allocator  # noqa: E402
 from allocator_node.recording import read_run  # noqa: E402
@@ -334,6 +335,76 @@ def test_a_clock_that_is_set_stops_robots_and_the_loop_goes_on(tmp_path: Path) -
         until(lambda: len(record) > paused + 20, "ten times as fast")
         assert made.node.loop._health.failures == 0
         until(lambda: busy(rovers), "a rover drives again")
+
+
+def test_where_no_time_goes_by_robots_stand_and_it_is_told(tmp_path: Path) -> None:
+    """use_sim_time, and whoever publishes /clock dies: no period comes any more."""
+    from rosgraph_msgs.msg import Clock
+
+    with bench(tmp_path, use_sim_time=True) as made:
+        clock = made.probe.node.create_publisher(Clock, "/clock", 10)
+        now, going = [100.0], [True]
+
+        def tick() -> None:
+            now[0] += 0.05 * going[0]
+            message = Clock()
+            message.clock.sec = int(now[0])
+            message.clock.nanosec = int(now[0] % 1 * 1e9)
+            clock.publish(message)
+
+        timer = made.probe.node.create_timer(0.05, tick)
+        rovers = Rovers(made.probe)
+        rovers.pose = lambda x, y, pose=rovers.pose: _unstamped(pose(x, y))
+        assert made.configure() and made.activate()
+        until(lambda: busy(rovers), "a rover drives")
+        timer.cancel()
+        until(lambda: standing(rovers), "they are told to stand")
+        until(lambda: "/clock must be published" in made.probe.log(), "a reason")
+        reports = made.probe.listen("/diagnostics", DiagnosticArray, 10)
+        until(
+            lambda: any(
+                "no time has gone by" in status.message
+                for _, message in reports
+                for status in message.status
+            ),
+            "an error in the diagnostics",
+        )
+        timer.reset()
+        until(lambda: busy(rovers), "time goes by, and a rover drives again")
+
+
+def test_hold_is_obeyed_at_once_and_through_a_restart(tmp_path: Path) -> None:
+    """Also where no period comes; and the next node says why nobody moves."""
+    state = tmp_path / "state.json"
+    with bench(tmp_path, state_file=str(state), rate=0.2) as made:
+        rovers = Rovers(made.probe)
+        assert made.configure() and made.activate()
+        until(lambda: busy(rovers), "a rover drives", 30)
+        record = rovers.commands[busy(rovers)[0]]
+        before = len(record)
+        made.probe.call(SetBool, "/allocator/hold", SetBool.Request(data=True))
+        until(lambda: len(record) > before and not moving(record[-1][1]), "it stands", 2)
+        until(lambda: json.loads(state.read_text())["memory"]["hold"], "it is saved", 2)
+    with bench(tmp_path, state_file=str(state)) as made:
+        rovers = made.start()
+        until(lambda: "as before the restart" in made.probe.log(), "it is told")
+        until(lambda: standing(rovers), "commands")
+        assert made.probe.set(kappa=0.003).successful  # makes no new orders
+        time.sleep(0.5)
+        assert standing(rovers)
+        made.probe.call(SetBool, "/allocator/hold", SetBool.Request(data=False))
+        until(lambda: busy(rovers), "a rover drives")
+
+
+def test_a_state_file_that_cannot_be_read_is_not_written_over(tmp_path: Path) -> None:
+    state = tmp_path / "state.json"
+    state.mkdir()  # not even root can read it
+    with bench(tmp_path, state_file=str(state)) as made:
+        made.start()
+        until(lambda: "writing none over it" in made.probe.log(), "it is told")
+        until(lambda: made.node.loop._decision is not None, "a decision")
+        assert made.deactivate()
+    assert state.is_dir()
 
 
 def _unstamped(message: PoseStamped) -> PoseStamped:

@@ -6,6 +6,7 @@ import math
 import re
 from dataclasses import replace
 from pathlib import Path
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
@@ -14,7 +15,7 @@ import yaml
 pytest.importorskip("rclpy", reason="needs ROS 2: rclpy is not installed")
 
 from diagnostic_msgs.msg import DiagnosticStatus  # noqa: E402
-from geometry_msgs.msg import Quaternion  # noqa: E402
+from geometry_msgs.msg import PoseStamped, Quaternion  # noqa: E402
 from sensor_msgs.msg import BatteryState  # noqa: E402
 from std_msgs.msg import Header  # noqa: E402
 from visualization_msgs.msg import Marker  # noqa: E402
@@ -29,10 +30,11 @@ from allocator_node.decision import (  # noqa: E402
 )
 from allocator_node.drives import Differential, Holonomic  # noqa: E402
 from allocator_node.ros import conversions, markers, outbox, parameters, sim_node  # noqa: E402
+from allocator_node.ros.command_topics import CommandTopics  # noqa: E402
 from allocator_node.ros.loop import MARKERS_EVERY  # noqa: E402
 from allocator_node.ros.state_file import StateFile  # noqa: E402
 from allocator_node.settings import Settings  # noqa: E402
-from allocator_node.team import KeepOut, Robot, Team  # noqa: E402
+from allocator_node.team import CommandSink, KeepOut, Robot, Team  # noqa: E402
 from allocator_node.team_file import read_team  # noqa: E402
 
 pytestmark = pytest.mark.ros
@@ -62,6 +64,7 @@ def decision(**changes) -> Decision:
         "navigates": np.array([False, False]),
         "poses": np.array([[1.0, 2.0, 0.0, 0.5], [3.0, 4.0, 0.0, 0.0]]),
         "heard": np.array([True, True]),
+        "steady": np.array([True, True]),
         "able": np.ones((2, 2), dtype=bool),
         "suitability": np.array([[1.0, 0.5], [0.0, 1.0]]),
         "efficacy": np.array([[0.5, 1.0], [1.0, 1.0]]),
@@ -285,3 +288,58 @@ def test_a_state_file_is_whole_at_any_time(tmp_path) -> None:
     assert set(state.load()["value"]) == {40}
     assert [path.name for path in (tmp_path / "deep").iterdir()] == ["state.json"]
     state.close()
+
+
+# Commands
+
+
+class Topic:
+    """Keeps what is published."""
+
+    def __init__(self, sent: list) -> None:
+        self.publish = sent.append
+
+
+@pytest.fixture
+def orders() -> tuple[CommandTopics, list[PoseStamped]]:
+    """Command topics of two robots with their own navigation, and what is sent on them."""
+    own = CommandSink(topic="goal", type="geometry_msgs/msg/PoseStamped")
+    robots = {name: replace(robot, command=own) for name, robot in TEAM.robots.items()}
+    sent: list[PoseStamped] = []
+    node = SimpleNamespace(create_publisher=lambda *topic: Topic(sent))
+    return CommandTopics(node, replace(TEAM, robots=robots)), sent
+
+
+def places(sent: list[PoseStamped]) -> list[tuple[float, float]]:
+    """Give where robots were sent to, and forget it."""
+    found = [(message.pose.position.x, message.pose.position.y) for message in sent]
+    sent.clear()
+    return found
+
+
+def test_robots_with_own_navigation_are_sent_nowhere_on_bad_poses(orders) -> None:
+    """One whose pose jumps keeps its goal; one that falls silent is told to stay there."""
+    topics, sent = orders
+    nowhere = np.full((2, 3), np.nan)
+    topics.send(decision())
+    assert places(sent) == [(5.0, 5.0), (3.0, 4.0)]
+    jumped = decision(steady=np.array([False, True]), goals=nowhere)
+    topics.send(jumped)
+    assert places(sent) == [(5.0, 5.0), (3.0, 4.0)]
+    topics.send(jumped, hold=True)
+    assert places(sent) == [(1.0, 2.0), (3.0, 4.0)]
+    # Carried by its velocity to the moment it fell silent; later poses are old ones.
+    moved = np.array([[1.5, 2.0, 0.0, 0.5], [3.0, 4.0, 0.0, 0.0]])
+    topics.send(decision(poses=moved))
+    places(sent)
+    silent = np.array([False, True])
+    topics.send(decision(steady=silent, heard=silent, goals=nowhere))
+    assert places(sent) == [(1.5, 2.0), (3.0, 4.0)]
+
+
+def test_a_robot_with_own_navigation_that_was_never_heard_is_sent_nowhere(orders) -> None:
+    """A place from before a restart is no place to send it to."""
+    topics, sent = orders
+    nobody = np.array([False, False])
+    topics.send(decision(steady=nobody, heard=nobody, goals=np.full((2, 3), np.nan)))
+    assert places(sent) == []

@@ -6,10 +6,10 @@ import math
 
 import numpy as np
 import pytest
-from builders import CAPABILITIES, team_of
+from builders import CAPABILITIES, Crew, robot, team_of, watch
 
 from allocator_node.allocator import Allocator
-from allocator_node.drives import Aerial, Differential, Drive
+from allocator_node.drives import Aerial, Differential, Drive, Holonomic
 from allocator_node.sim.world import SimulatedTeam
 from allocator_node.tasks import Patrol, Watch
 from allocator_node.team import HeadCount, KeepOut, Robot, Way
@@ -190,3 +190,34 @@ def test_a_flying_robot_and_one_on_the_ground_ignore_each_other():
     assert sideways < 0.05
     assert np.hypot(*(simulated.true_poses[0, :2] - (10, 0))) < 0.6
     assert np.hypot(*(simulated.true_poses[1, :2] - (0, 0))) < 0.6
+
+
+@pytest.mark.parametrize("drive", [WHEELS, Holonomic(max_speed=1.0)], ids=["wheels", "omni"])
+def test_robots_on_the_ground_keep_apart_whatever_their_localizations_say_of_height(drive) -> None:
+    """One by satellite, with the height above the sea, the other by odometry in a plane."""
+    crew = Crew(
+        team_of(
+            [robot("one", 0, 0, drive=drive), robot("two", 20, 0.2, math.pi, drive=drive)],
+            [watch("east", 20, 0), watch("west", 0, 0.2)],
+        )
+    )
+    crew.order(pins=frozenset({("one", "east"), ("two", "west")}))
+    least = math.inf
+    for _ in range(300):
+        crew.poses[1, 2] = 350.0
+        crew.drive(0.1)
+        least = min(least, math.dist(crew.poses[0, :2], crew.poses[1, :2]))
+    assert least > 0.8  # two bodies of 0.4 m
+    assert math.dist(crew.poses[0, :2], (20, 0)) < 1.0
+
+
+def test_a_drone_passes_over_what_is_far_below_it() -> None:
+    drone = robot("drone", 0, 0, drive=Aerial(max_speed=1.0, height=(3.0, 6.0)))
+    crew = Crew(team_of([drone, robot("rover", 5, 0)], [watch("east", 10, 0, 4.0)]))
+    crew.order(pins=frozenset({("drone", "east")}))
+    crew.poses[0, 2] = 4.0
+    least = math.inf
+    for _ in range(150):
+        crew.drive(0.1)
+        least = min(least, math.dist(crew.poses[0, :2], crew.poses[1, :2]))
+    assert least < 0.3

@@ -2,19 +2,22 @@
 
 from __future__ import annotations
 
+import json
 from collections import Counter
+from dataclasses import replace
 
 import numpy as np
 import pytest
-from builders import ROVER, Crew, doing, robot, team_of, watch
+from builders import ERROR, OK, ROVER, Crew, doing, robot, team_of, watch
 
 from allocator_node.drives import Aerial, Differential
 from allocator_node.model import Model
+from allocator_node.observation import MovedGoal
 from allocator_node.program import Safety
 from allocator_node.settings import Settings
 from allocator_node.sim.rehearsal import rehearse
-from allocator_node.tasks import Encircle, Patrol, Sweep, Visit
-from allocator_node.team import Battery, HeadCount, KeepOut, Target
+from allocator_node.tasks import Encircle, Follow, Patrol, Sweep, Task, Visit
+from allocator_node.team import Battery, HeadCount, HealthRule, KeepOut, Target
 
 FENCED = {"boundary": ((0, 0), (40, 0), (40, 12), (0, 12))}
 MOWER = {"features": ("camera",), "drive": ROVER}
@@ -198,3 +201,110 @@ def test_nobody_drives_onto_the_trail_of_a_silent_robot_from_within_its_circle()
     back = np.zeros((2, 3))
     back[0, :2] = 0.5 * np.array([0.5, -1.5])
     assert (rows.slackness(back) >= -1e-9).all()
+
+
+def test_a_wall_across_the_site_keeps_patrols_away_too() -> None:
+    """A kind that tells how far its work is finds no way through it."""
+    wall = KeepOut(name="wall", polygon=((19, -1), (21, -1), (21, 13), (19, 13)))
+    patrol = Patrol(name="round", waypoints=((30, 4), (34, 4), (34, 8)))
+    team = team_of([robot("a", 5, 6)], [patrol, watch("post", 30, 6)], **FENCED, keep_out=(wall,))
+    decision = Crew(team).step()
+    assert doing(decision) == {"a": None}
+    assert {n.about for n in decision.notices if "no robot" in n.text} == {"round", "post"}
+
+
+def test_a_goal_that_is_sent_again_and_again_keeps_nobody_from_learning() -> None:
+    """Another task's goal, the same place in every period; the robot sits in mud."""
+    robots = [robot("one", 0, 0), robot("two", -20, 5), robot("three", 0, 30)]
+    crew = Crew(team_of(robots, [watch("gate", 40, 0, priority=3), watch("pond", 0, 30)]))
+    crew.grip[0] = 0.0
+    for _ in range(100):
+        crew.goals.append(MovedGoal("pond", (0.0, 30.0, 0.0), None))
+        decision = crew.drive(0.1)
+    assert doing(decision)["two"] == "gate" and decision.efficacy[0, 0] < 1.0
+
+
+def test_one_false_charge_takes_nobody_off_for_long() -> None:
+    """A driver that restarts says 0 once."""
+    crew = Crew(team_of([robot("one", 8, 0, dock=(0, 0))], [watch("gate", 10, 0)]))
+    crew.charges[0] = 0.8
+    assert doing(crew.drive(1)) == {"one": "gate"}
+    crew.charges[0] = 0.0
+    assert doing(crew.step()) == {"one": None}
+    crew.charges[0] = 0.8
+    assert doing(crew.drive(1)) == {"one": "gate"}
+
+
+def test_a_decision_every_two_seconds_notices_a_silent_diagnostic() -> None:
+    rule = HealthRule(name="one: camera", feature="camera")
+    crew = Crew(team_of([robot("one", 0, 0, health=(rule,))],
+                        [watch("gate", 5, 0, each=("scan",))]), period=2.0)  # fmt: skip
+    crew.says("one: camera", OK)
+    assert doing(crew.step()) == {"one": "gate"}
+    assert doing(crew.wait(12)) == {"one": None}
+
+
+def test_a_target_nobody_tells_of_is_named() -> None:
+    follow = Follow(name="escort", target=Target(topic="beacon/pose"), offset=(-2.0, 0.0))
+    decision = Crew(team_of([robot("one", 0, 0)], [follow])).step()
+    said = {n.about: n.text for n in decision.notices}
+    assert said["escort"] == "beacon/pose, which it keeps to, is not heard"
+
+
+def after_restart(crew: Crew, *tasks: Task) -> Crew:
+    """Give a crew that goes on from what another one remembers, maybe with other tasks."""
+    memory = json.loads(json.dumps(crew.allocator.memory()))
+    table = {task.name: task for task in tasks} or crew.team.tasks
+    again = Crew(crew.team.with_tasks(table))
+    again.poses = crew.poses
+    again.allocator.recall(memory)
+    return again
+
+
+def test_a_restart_lets_nobody_go_who_was_told_to_stand() -> None:
+    crew = Crew(team_of([robot("one", 0, 0)], [watch("gate", 20, 0)]))
+    crew.drive(1)
+    crew.order(hold=True)
+    again = after_restart(crew)
+    decision = again.drive(1)
+    assert not decision.commands.any() and decision.activity == ("held",)
+    assert decision.since[0] == 0.0  # s: counted from the restart, not unknown
+    again.order(hold=False)
+    assert after_restart(again).drive(1).commands.any()
+
+
+def test_a_restart_leaves_tasks_where_they_were_moved_to() -> None:
+    """Unless the file says something else now."""
+    gate = watch("gate", 20, 0)
+    crew = Crew(team_of([robot("one", 0, 0)], [gate]))
+    crew.goals.append(MovedGoal("gate", (-20.0, 3.0, 0.0), None))
+    crew.step()
+    crew.goals.append(MovedGoal("gate", (-20.0, 5.0, 0.0), None))
+    crew.step()
+    assert after_restart(crew).allocator.team.tasks["gate"].at == (-20.0, 5.0)
+    again = after_restart(after_restart(crew))
+    assert again.allocator.team.tasks["gate"].at == (-20.0, 5.0)
+    assert after_restart(crew, watch("gate", 20, 9)).allocator.team.tasks["gate"].at == (20, 9)
+
+
+def test_a_visit_to_another_place_is_not_done_because_one_of_its_name_was() -> None:
+    visit = Visit(name="sample", at=(1, 0), dwell=0.5)
+    crew = Crew(team_of([robot("one", 0, 0)], [visit]))
+    assert crew.drive(5).finished == {"sample"}
+    assert after_restart(crew).step().finished == {"sample"}
+    assert after_restart(crew, replace(visit, priority=4)).step().finished == {"sample"}
+    moved = after_restart(crew, replace(visit, at=(9, 9)))
+    assert doing(moved.step()) == {"one": "sample"}
+
+
+def test_a_failure_only_an_earlier_run_heard_of_is_named() -> None:
+    rule = HealthRule(name="one: camera", feature="camera")
+    crew = Crew(team_of([robot("one", 0, 0, health=(rule,))],
+                        [watch("gate", 5, 0, each=("scan",))]))  # fmt: skip
+    crew.says("one: camera", ERROR)
+    crew.step()
+    again = after_restart(crew)
+    (said,) = (n.text for n in again.step().notices if n.about == "one")
+    assert said.startswith("camera counts as failed: 'one: camera' said so before the restart")
+    again.says("one: camera", OK)
+    assert doing(again.step()) == {"one": "gate"}

@@ -105,6 +105,15 @@ class FeatureBelief:
             if self._level(status, now, settings) != OK
         }
 
+    def remembered(self) -> list[tuple[int, int, str]]:
+        """Give (robot, feature, status name) of failures that only an earlier run heard of."""
+        return [
+            (i, f, name)
+            for (i, f), statuses in self.heard.items()
+            for name, status in statuses.items()
+            if status.time == math.inf and status.level != OK
+        ]
+
     def recall(self, name: str, level: int, message: str) -> None:
         """Take up a status of an earlier run: it stands until the next one of its name."""
         for place in self._spoken_for(name):

@@ -10,6 +10,9 @@ import numpy as np
 from ..observation import TargetPose
 from .poses import SMOOTHING
 
+SILENT = 5.0
+"""Time after which a person is told that a target is not heard, s."""
+
 
 @dataclass(frozen=True)
 class _Track:
@@ -34,6 +37,11 @@ class TargetBelief:
 
     def __init__(self) -> None:
         self._tracks: dict[str, _Track] = {}
+
+    def silent(self, topic: str, now: float) -> bool:
+        """Tell whether a topic was never heard, or not for :data:`SILENT` seconds."""
+        track = self._tracks.get(topic)
+        return track is None or now - track.time > SILENT
 
     def update(
         self, targets: Mapping[str, TargetPose], now: float, timeout: float

@@ -28,6 +28,9 @@ MOVED = 0.3
 REMEMBERED = 4096
 """Goals whose ways are kept at most."""
 
+STOPS_REMEMBERED = 512
+"""Tasks' stops of which it is kept who can come near, at most."""
+
 
 @dataclass(frozen=True)
 class Lead:
@@ -94,7 +97,7 @@ class Ways:
             stops: Points and how near one must come, m.
         """
         if stops not in self._admitted:
-            if len(self._admitted) >= REMEMBERED:
+            if len(self._admitted) >= STOPS_REMEMBERED:
                 self._admitted.clear()
             row = np.ones(len(self._size), dtype=bool)
             for point, within in stops:

@@ -70,6 +70,7 @@ class AllocatorNode(LifecycleNode):
             team = self._team(options)
             orders = parameters.orders(options, team, self._held)
             self.loop = Loop(self, team, options, settings, orders, self._make)
+            self._held = self.loop.allocator.orders.hold
         except (ParameterError, FileError, ImportError) as error:
             self.get_logger().error(f"not configured: {error}")
             return TransitionCallbackReturn.FAILURE

@@ -4,12 +4,16 @@ from __future__ import annotations
 
 import time
 
+import numpy as np
+
 BELIEVED = 1.0
-"""A stamp may be this much older than now, s."""
+"""A stamp may be this much older than now, s, where ``pose_timeout`` is not more."""
 
 EARLY = 0.1
 """A stamp may be this much ahead of now, s: clocks of two hosts in good agreement."""
 
+DRIFT = 1e-3
+"""No two clocks drift apart faster than this, s/s (common practice: 1e-4 at most)."""
 
 SET_AHEAD = 1.0
 """A clock further ahead than this, while less time went by, was set, s."""
@@ -38,6 +42,20 @@ class ClockWatch:
         return ahead if first and self._set_ahead else 0.0
 
 
+class Stillness:
+    """Tells for how long a clock has not moved."""
+
+    def __init__(self) -> None:
+        self._last: float | None = None
+        self._since = 0.0
+
+    def look(self, now: float) -> float:
+        """Give for how long ``now`` has been the same, s."""
+        if now != self._last:
+            self._last, self._since = now, time.monotonic()
+        return time.monotonic() - self._since
+
+
 def arrival_time(now: float, received: int, last_look: float) -> float:
     """Give when a message arrived, on the clock of ``now``, s.
 
@@ -60,16 +78,26 @@ class StampReader:
 
     A message that repeats the last stamp, or comes late with an older one,
     is no news. A stamp far from now comes from a clock that disagrees: then
-    the arrival counts.
+    the arrival counts. But where the clock agreed before and runs on, it is the
+    message that is late.
     """
 
     def __init__(self) -> None:
         self._last = 0.0
+        self._least = np.inf
 
-    def time_of(self, now: float, arrival: float, stamp: float) -> tuple[float | None, str]:
+    def time_of(
+        self, now: float, arrival: float, stamp: float, believed: float = BELIEVED
+    ) -> tuple[float | None, str]:
         """Give when the message held, s, and what is odd about it ("" if nothing).
 
         The time is None where the message is no news.
+
+        Args:
+            now: Time of this look, s.
+            arrival: When the message arrived, s.
+            stamp: Its stamp, s; 0: it has none.
+            believed: How much older than now a stamp may be, s.
         """
         if stamp <= 0:
             return arrival, ""
@@ -77,10 +105,15 @@ class StampReader:
             return None, "the same stamp came again, so the message is not new"
         if self._last - BELIEVED < stamp < self._last:
             return None, f"a message came late, {self._last - stamp:.2f} s behind the last one"
-        self._last = stamp
-        if -EARLY <= now - stamp <= BELIEVED:
-            return min(stamp, now), ""
         off = now - stamp
+        # Clocks drift: the least lag seen counts for less and less.
+        ran = stamp - self._last
+        self._least = min(off, self._least + DRIFT * ran) if ran > 0 else off
+        self._last = stamp
+        if -EARLY <= off <= believed:
+            return min(stamp, now), ""
+        if off > 0 and -EARLY <= self._least <= believed:
+            return stamp, f"a message came {off:.1f} s late"
         side = "behind" if off > 0 else "ahead of"
         return arrival, (
             f"stamps are {abs(off):.1f} s {side} this node's clock; "
@@ -89,4 +122,4 @@ class StampReader:
 
     def forget(self) -> None:
         """Take the next stamp as the first."""
-        self._last = 0.0
+        self._last, self._least = 0.0, np.inf

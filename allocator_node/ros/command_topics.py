@@ -43,23 +43,30 @@ class CommandTopics:
             )
             for robot in team.robots.values()
         ]
-        self._poses = np.full((len(self._robots), 4), np.nan)
+        count = len(self._robots)
+        self._poses, self._goals = np.full((count, 4), np.nan), np.full((count, 3), np.nan)
+        self._facing = np.full(count, np.nan)
 
     def send(self, decision: Decision, hold: bool = False) -> list[str]:
         """Send the commands of a decision.
 
-        With ``hold``, robots that navigate by themselves are sent to where they are.
+        With ``hold``, robots that navigate by themselves are sent to where they are;
+        silent ones to where they were when they fell silent. Those whose pose jumped keep
+        the goal they have: neither of their places can be told from the other.
 
         Returns:
             Robots whose command was not finite; they were told to stand.
         """
-        self._poses = decision.poses
+        steady = decision.steady
+        self._poses[steady] = decision.poses[steady]
+        self._goals[steady | ~decision.heard] = decision.goals[steady | ~decision.heard]
+        self._facing[steady] = decision.facing[steady]
         broken = ~np.isfinite(decision.commands).all(axis=1)
         commands = np.where(broken[:, None], 0.0, decision.commands)
-        goals = decision.goals
+        goals = self._goals
         if hold or broken.any():
             goals = np.where((broken | hold)[:, None], np.nan, goals)
-        self._publish(commands, goals, decision.facing, decision.time)
+        self._publish(commands, goals, self._facing, decision.time)
         return [decision.robots[i] for i in np.flatnonzero(broken)]
 
     def stand(self) -> None:

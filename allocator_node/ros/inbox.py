@@ -16,7 +16,7 @@ from std_msgs.msg import Float32
 
 from ..observation import HealthReport, MovedGoal, Observation, TargetPose
 from ..team import PoseSource, Robot, Team, target_topics
-from .clockwork import arrival_time
+from .clockwork import BELIEVED, arrival_time
 from .complaints import Complaints
 from .conversions import numbers, type_name, yaw_of
 from .polling import PolledSubscription
@@ -145,12 +145,17 @@ class Inbox:
             if key not in table:
                 table[key] = subscribe(key)
 
-    def observation(self, now: float) -> Observation:
-        """Give all that was heard up to ``now``, s on the node's clock."""
-        last = self._last
+    def observation(self, now: float, pose_timeout: float = BELIEVED) -> Observation:
+        """Give all that was heard up to ``now``, s on the node's clock.
+
+        Args:
+            now: Time, s.
+            pose_timeout: Age from which a pose is too old to be of use, s.
+        """
+        believed, last = max(BELIEVED, pose_timeout), self._last
         poses, times, velocities = last.poses.copy(), last.pose_times.copy(), last.velocities.copy()
         for i, source in enumerate(self._poses):
-            sighting = source.look(now)
+            sighting = source.look(now, believed)
             if sighting is not None:
                 poses[i], times[i] = sighting.pose, sighting.time
                 velocities[i] = sighting.velocity

@@ -11,6 +11,7 @@ from typing import Any
 
 import numpy as np
 from diagnostic_msgs.msg import DiagnosticArray
+from rclpy.clock import Clock, ClockType
 from rclpy.node import Node
 from rclpy.timer import Timer
 from visualization_msgs.msg import MarkerArray
@@ -19,7 +20,7 @@ from ..decision import Decision
 from ..observation import Observation, Orders
 from ..settings import Settings
 from ..team import Team
-from .clockwork import ClockWatch
+from .clockwork import ClockWatch, Stillness
 from .command_topics import CommandTopics, other_publishers
 from .inbox import Inbox
 from .loop_health import LoopHealth
@@ -47,6 +48,9 @@ SET_BACK = 1.0
 
 SEARCH_SHARE = 0.1
 """Share of a period that the search for an assignment may take; longer ones go on beside."""
+
+WATCH_EVERY, STILL = 0.5, 1.0
+"""Period of looking whether time goes by, and after how long it does not, s."""
 
 STOP_REPEATS = 3
 """The last command is sent so often: a robot may listen with best effort."""
@@ -99,6 +103,9 @@ class Loop:
         self._recorder: RecorderBeside | None = None
         self._commands: CommandTopics | None = None
         self._timer: Timer | None = None
+        self._watcher: Timer | None = None
+        self._steady = Clock(clock_type=ClockType.STEADY_TIME)
+        self._stillness = Stillness()
         self._decision: Decision | None = None
         self._trace = ""
         self._clock = ClockWatch()
@@ -129,12 +136,17 @@ class Loop:
             self._record(Path(self._options.record_to))
         self.active = True
         self._set_timer()
+        self._stillness = Stillness()
+        self._watcher = self._node.create_timer(WATCH_EVERY, self._watch, clock=self._steady)
 
     def stop(self) -> None:
         """Make every robot stand, then stop deciding; does nothing the second time."""
         if self._timer is not None:
             self._node.destroy_timer(self._timer)
             self._timer = None
+        if self._watcher is not None:
+            self._node.destroy_timer(self._watcher)
+            self._watcher = None
         self._let_go()
         self.occupied = ""
         if not self.active:
@@ -162,6 +174,21 @@ class Loop:
         if self._state is not None:
             self._state.close()
         self.allocator.close()
+
+    def _watch(self) -> None:
+        """Make robots stand where the clock stands still, for then no period comes."""
+        stood = self._stillness.look(self._now())
+        self._health.stalled = stood
+        if stood < STILL:
+            return
+        text = (
+            f"no time has gone by for {stood:.0f} s: with use_sim_time, /clock must be published, "
+            "and not paused; robots are told to stand"
+        )
+        self._log.error(text, throttle_duration_sec=10.0)
+        if stood < STILL + WATCH_EVERY:
+            self._guarded(self._stand)
+        self._guarded(self._report)
 
     # What the operator asks for
 
@@ -197,8 +224,11 @@ class Loop:
             self._let_go()
 
     def hold(self, hold: bool) -> None:
-        """Make all robots stand, or go on."""
+        """Make all robots stand at once, or go on; a restart changes nothing about it."""
         self.allocator.orders = replace(self.allocator.orders, hold=hold)
+        if hold:
+            self._guarded(self._stand)
+        self._guarded(self._save)
 
     # The period
 
@@ -243,7 +273,7 @@ class Loop:
             self._stand()
             self._forget_times(by)
             return
-        observation = self._inbox.observation(now)
+        observation = self._inbox.observation(now, self.allocator.settings.pose_timeout)
         if self._missed is not None:
             observation, self._missed = observation.since(self._missed), None
         if self._awaits(observation):
@@ -431,8 +461,14 @@ class Loop:
             if memory is not None:
                 self.allocator.recall(memory)
                 self._log.info(f"taken up from {self._state.path}")
+            if self.allocator.orders.hold:
+                self._log.warning("all robots stand, as before the restart: ~/hold lets them go")
         except OSError as error:
-            self._log.error(f"state_file: {error}; starting without it")
+            self._log.error(
+                f"state_file: {error}; starting without it, and writing none over it"
+            )
+            self._state.close()
+            self._state = None
         except (ValueError, TypeError, LookupError, AttributeError) as error:
             self._log.warning(
                 f"state_file: {self._state.path} is damaged ({error}); {self._set_aside()}, "

@@ -29,6 +29,7 @@ class LoopHealth:
     Attributes:
         period: Wanted length of a period, s.
         failures: Exceptions caught in the loop so far.
+        stalled: For how long the clock has not moved, s.
     """
 
     def __init__(self, name: str, period: float) -> None:
@@ -36,6 +37,7 @@ class LoopHealth:
         self._name = name
         self.period = period
         self.failures = 0
+        self.stalled = 0.0
         self._failed = -np.inf
         self._failure = ""
         self._began: float | None = None
@@ -115,6 +117,9 @@ class LoopHealth:
             return self._status(
                 "period", Level.ERROR, f"the loop failed: {self._failure}", values
             )
+        if self.stalled >= 1.0:
+            message = f"no time has gone by for {self.stalled:.0f} s: is /clock published?"
+            return self._status("period", Level.ERROR, message, values)
         if late:
             return self._status(
                 "period", Level.WARN, f"{late} of the last {len(periods)} periods missed", values

@@ -11,7 +11,7 @@ from nav_msgs.msg import Odometry
 from rclpy.node import Node
 
 from ..team import PoseSource
-from .clockwork import StampReader, arrival_time
+from .clockwork import BELIEVED, StampReader, arrival_time
 from .complaints import Complaints
 from .conversions import numbers, placed, pose_of, seconds_of, turned
 from .polling import PolledSubscription
@@ -60,8 +60,13 @@ class PoseTopic:
         """Type of its messages."""
         return self._subscription.message_type
 
-    def look(self, now: float) -> Sighting | None:
-        """Give the newest pose, if a good one came since the last look."""
+    def look(self, now: float, believed: float = BELIEVED) -> Sighting | None:
+        """Give the newest pose, if a good one came since the last look.
+
+        Args:
+            now: Time, s.
+            believed: How old a stamp may be, s, before another clock is thought of.
+        """
         last_look, self._last_look = self._last_look, now
         arrival = self._subscription.take()
         if arrival is None:
@@ -77,6 +82,7 @@ class PoseTopic:
             now,
             arrival_time(now, arrival.received, last_look),
             seconds_of(message.header.stamp),
+            believed,
         )
         if odd:
             self._complaints.warn(self.topic, odd)
@@ -161,23 +167,28 @@ class PoseTransform:
         self._transforms, self._child, self._frame = transforms, child, frame
         self._complaints = complaints
         self._stamps = StampReader()
-        self._stamp = -1.0
+        self._stamp: float | None = None
         self.topic = f"tf {child}"
 
-    def look(self, now: float) -> Sighting | None:
-        """Give the newest pose, if a good one came since the last look."""
+    def look(self, now: float, believed: float = BELIEVED) -> Sighting | None:
+        """Give the newest pose, if a good one came since the last look.
+
+        Args:
+            now: Time, s.
+            believed: How old a stamp may be, s, before another clock is thought of.
+        """
         try:
             found = self._transforms.newest(self._frame, self._child)
             stamp = seconds_of(found.header.stamp)
-            if stamp == self._stamp:
-                return None  # Nothing came: the tree still holds the last one.
-            self._stamp = stamp
+            last, self._stamp = self._stamp, stamp
+            if stamp == last or (last is None and now - stamp > believed):
+                return None  # Nothing came: the tree still holds an old one.
             moved = found.transform
             pose = pose_of(Pose(position=_point(moved), orientation=moved.rotation))
         except ValueError as error:
             self._complaints.refuse(self.topic, str(error))
             return None
-        when, odd = self._stamps.time_of(now, now, stamp)
+        when, odd = self._stamps.time_of(now, now, stamp, believed)
         if odd:
             self._complaints.warn(self.topic, odd)
         return None if when is None else Sighting(pose, NOT_MEASURED, when)
@@ -185,7 +196,7 @@ class PoseTransform:
     def forget_times(self) -> None:
         """Take the next transform as the first."""
         self._stamps.forget()
-        self._stamp = -1.0
+        self._stamp = None
 
     def close(self) -> None:
         """Nothing to end: the tree is shared."""
