@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 import shapely
 
-from ..drives import Fleet, level
 from ..team import Team
 
 
@@ -22,8 +21,6 @@ class Site:
         self._radii = np.array([robot.radius for robot in team.robots.values()])
         self._first, self._second = np.triu_indices(len(self._radii), 1)
         self._clearance = height_clearance
-        flies = Fleet([robot.drive for robot in team.robots.values()]).flies
-        self._fly = flies[self._first] | flies[self._second]
         self._boundary = shapely.Polygon(team.boundary) if team.boundary else None
         self._keep_out = shapely.union_all([shapely.Polygon(k.polygon) for k in team.keep_out])
         for area in (self._boundary, self._keep_out):
@@ -38,7 +35,7 @@ class Site:
         apart = poses[self._first] - poses[self._second]
         gap = np.hypot(apart[:, 0], apart[:, 1])
         gap -= self._radii[self._first] + self._radii[self._second]
-        gap[~level(apart[:, 2], self._fly, self._clearance)] = np.inf
+        gap[np.abs(apart[:, 2]) >= self._clearance] = np.inf
         if not np.isfinite(gap).any():
             return None
         pair = int(np.argmin(gap))
