@@ -16,7 +16,7 @@ from .charging import Charging, Crew, Errands
 from .decision import Decision
 from .memory import Memory, remember
 from .model import Model
-from .notices import notices, shortfalls
+from .notices import notices, out_of_reach, shortfalls, targets_unheard
 from .observation import MovedGoal, Observation, Orders
 from .pilot import Motion, Pilot
 from .program import Assigner, Assignment, Problem, price
@@ -25,7 +25,7 @@ from .program.guidance import Targets
 from .reasons import Reasons, Situation
 from .settings import Settings
 from .tasks import Goals
-from .team import Target, Team
+from .team import Team
 from .view import View
 from .work import Stage, Work, fingerprint
 
@@ -351,43 +351,21 @@ class Allocator:
             notices=tuple(
                 notices(
                     model, self._settings, view.places, means.enough, self._charging.on, motion,
-                    self._work.remarks() | self._unheard_targets(view) | self._cut_off(view, means),
-                    self._features.remembered(),
+                    self._remarks(view, means), self._features.remembered(),
                 )
             ),
             seconds=seconds,
             gap=found.gap,
         )
 
-    def _unheard_targets(self, view: View) -> dict[str, str]:
-        """Say of active tasks that the topic they keep to is silent."""
-        active = zip(self.team.tasks.items(), self._work.active(), strict=True)
-        topics = {
-            name: task.keeps_to.topic
-            for (name, task), now in active
-            if now and isinstance(task.keeps_to, Target) and task.keeps_to.topic
-        }
-        return {
-            name: f"{topic}, which it keeps to, is not heard"
-            for name, topic in topics.items()
-            if self._topics.silent(topic, view.now)
-        }
-
-    def _cut_off(self, view: View, means: Means) -> dict[str, str]:
-        """Say of active tasks that nobody who could do them gets there, or near enough."""
-        able = (view.suitability > 0) & view.places.heard[:, None] & self._work.active()
-        lost = able.any(axis=0) & ~(able & means.way).any(axis=0)
-        far = np.zeros(len(lost), dtype=bool)
-        if not means.admitted.all():
-            alone = able & self._model.alone(view.capability)
-            far = alone.any(axis=0) & ~(alone & means.admitted).any(axis=0)
-        tasks = self._model.tasks
-        return {
-            tasks[m]: "the margins keep everyone that could do it from coming near enough"
-            for m in np.flatnonzero(far)
-        } | {
-            tasks[m]: "no robot that could do it finds a way there" for m in np.flatnonzero(lost)
-        }
+    def _remarks(self, view: View, means: Means) -> dict[str, str]:
+        """Give what is to be said of tasks: by themselves, of their targets, of the way."""
+        active = self._work.active()
+        return (
+            self._work.remarks()
+            | targets_unheard(self.team, active, self._topics, view.now)
+            | out_of_reach(self._model, active, view, means)
+        )
 
     def _activity(self, view: View, errands: Errands) -> tuple[str, ...]:
         """Say in a word what each robot does."""

@@ -6,12 +6,16 @@ from collections.abc import Iterable, Iterator, Mapping
 
 import numpy as np
 
+from .belief import TargetBelief
 from .belief.poses import Places
 from .decision import Level, Notice, Shortfall
 from .model import Model
 from .pilot import Motion
 from .program import Assignment
+from .program.formulate import Means
 from .settings import Settings
+from .team import Target, Team
+from .view import View
 
 NOISE = 4.0
 """How far into a margin a robot must be to be named, in standard deviations of the poses,
@@ -95,3 +99,47 @@ def notices(
         seen.add((i, other))
         what = names[other] if other >= 0 else "the boundary or a keep-out area"
         yield Notice(names[i], Level.ERROR, f"nearer to {what} than the margin allows")
+
+
+def targets_unheard(
+    team: Team, active: np.ndarray, topics: TargetBelief, now: float
+) -> dict[str, str]:
+    """Say of active tasks that the topic they keep to is silent.
+
+    Args:
+        team: The team with its present task table.
+        active: Tasks to be done now, shape (M,).
+        topics: What is known of the topics.
+        now: Time, s.
+    """
+    kept = {
+        name: task.keeps_to.topic
+        for (name, task), on in zip(team.tasks.items(), active, strict=True)
+        if on and isinstance(task.keeps_to, Target) and task.keeps_to.topic
+    }
+    return {
+        name: f"{topic}, which it keeps to, is not heard"
+        for name, topic in kept.items()
+        if topics.silent(topic, now)
+    }
+
+
+def out_of_reach(model: Model, active: np.ndarray, view: View, means: Means) -> dict[str, str]:
+    """Say of active tasks that nobody who could do them gets there, or near enough.
+
+    Args:
+        model: The team.
+        active: Tasks to be done now, shape (M,).
+        view: What is known.
+        means: Ways, and the room at their ends.
+    """
+    able = (view.suitability > 0) & view.places.heard[:, None] & active
+    lost = able.any(axis=0) & ~(able & means.way).any(axis=0)
+    far = np.zeros(len(lost), dtype=bool)
+    if not means.admitted.all():
+        alone = able & model.alone(view.capability)
+        far = alone.any(axis=0) & ~(alone & means.admitted).any(axis=0)
+    said = dict.fromkeys(
+        np.flatnonzero(far), "the margins keep everyone that could do it from coming near enough"
+    ) | dict.fromkeys(np.flatnonzero(lost), "no robot that could do it finds a way there")
+    return {model.tasks[m]: text for m, text in said.items()}
