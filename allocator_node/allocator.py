@@ -424,6 +424,16 @@ class Allocator:
         self.edit(self.team.with_tasks(tasks), self._now or 0.0)
         self._moved[moved.task] = moved, origin
 
+    def _move_again(self, moved: MovedGoal, origin: str) -> None:
+        """Move a task as in an earlier run, unless it is defined in another way now."""
+        task = self.team.tasks.get(moved.task)
+        if task is None:
+            return
+        if task.moved(moved.at, moved.heading) == task:
+            self._moved[moved.task] = moved, origin
+        elif origin == fingerprint(task):
+            self._move(moved)
+
     def close(self) -> None:
         """End what runs beside the steps."""
         self.assigner.close()
@@ -462,8 +472,7 @@ class Allocator:
             if robot in robot_of and task in task_of:
                 self._efficacy.recall(robot_of[robot], task_of[task], value, failures, barred)
         for moved, origin in memory.moved:
-            if moved.task in task_of and origin == fingerprint(self.team.tasks[moved.task]):
-                self._move(moved)
+            self._move_again(moved, origin)
         for name, saved in memory.work.items():
             self._work.restore(name, saved)
         for name, work in memory.finished.items():

@@ -105,6 +105,7 @@ class Loop:
         self._timer: Timer | None = None
         self._watcher: Timer | None = None
         self._steady = Clock(clock_type=ClockType.STEADY_TIME)
+        self._still = False
         self._stillness = Stillness()
         self._decision: Decision | None = None
         self._trace = ""
@@ -180,14 +181,16 @@ class Loop:
         stood = self._stillness.look(self._now())
         self._health.stalled = stood
         if stood < STILL:
+            self._still = False
             return
         text = (
             f"no time has gone by for {stood:.0f} s: with use_sim_time, /clock must be published, "
             "and not paused; robots are told to stand"
         )
         self._log.error(text, throttle_duration_sec=10.0)
-        if stood < STILL + WATCH_EVERY:
+        if not self._still:
             self._guarded(self._stand)
+        self._still = True
         self._guarded(self._report)
 
     # What the operator asks for
