@@ -384,7 +384,10 @@ def test_hold_is_obeyed_at_once_and_through_a_restart(tmp_path: Path) -> None:
         before = len(record)
         made.probe.call(SetBool, "/allocator/hold", SetBool.Request(data=True))
         until(lambda: len(record) > before and not moving(record[-1][1]), "it stands", 2)
-        until(lambda: json.loads(state.read_text())["memory"]["hold"], "it is saved", 2)
+        until(
+            lambda: state.exists() and json.loads(state.read_text())["memory"]["hold"],
+            "it is saved", 2,
+        )  # fmt: skip
     with bench(tmp_path, state_file=str(state)) as made:
         rovers = made.start()
         until(lambda: "as before the restart" in made.probe.log(), "it is told")
