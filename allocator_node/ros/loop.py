@@ -6,6 +6,7 @@ import time
 import traceback
 from collections.abc import Callable
 from dataclasses import replace
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -231,7 +232,7 @@ class Loop:
         self.allocator.orders = replace(self.allocator.orders, hold=hold)
         if hold:
             self._guarded(self._stand)
-        self._guarded(self._save)
+        self._guarded(partial(self._save, surely=True))
 
     # The period
 
@@ -445,11 +446,11 @@ class Loop:
         if self.active:
             self._set_timer()
 
-    def _save(self) -> None:
+    def _save(self, surely: bool = False) -> None:
         if self._state is None:
             return
         try:
-            self._state.save_soon(self.allocator.memory())
+            self._state.save_soon(self.allocator.memory(), surely)
         except OSError as error:
             self._log.error(
                 f"state_file: nothing is saved: {error}", throttle_duration_sec=10.0

@@ -57,17 +57,21 @@ class StateFile:
         os.replace(self.path, aside)
         return aside
 
-    def save_soon(self, memory: dict[str, Any]) -> None:
+    def save_soon(self, memory: dict[str, Any], surely: bool = False) -> None:
         """Write in the background, unless the last write is still under way.
+
+        Args:
+            memory: What is kept.
+            surely: Write it in that case too, after the last one.
 
         Raises:
             OSError: The write before this one failed.
         """
-        if self._pending is not None:
-            if not self._pending.done():
-                return
+        if self._pending is not None and self._pending.done():
             pending, self._pending = self._pending, None
             pending.result()
+        if self._pending is not None and not surely:
+            return
         self._pending = self._writer.submit(self._write, _text(memory))
 
     def save(self, memory: dict[str, Any]) -> None:
