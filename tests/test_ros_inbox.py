@@ -339,10 +339,14 @@ def test_brackets_in_a_rule_hide_no_status(post: Post) -> None:
     publisher = post.sender.create_publisher(DiagnosticArray, "/diagnostics", 10)
     until(lambda: publisher.get_subscription_count() == 2, "two listeners")
     broken = DiagnosticStatus(name="placed b: cam", level=b"\x02")
-    publisher.publish(DiagnosticArray(status=[broken]))
-    time.sleep(0.1)
-    assert [report.name for report in inbox.observation(post.now()).health] == ["placed b: cam"]
+
+    def heard() -> list[str]:
+        publisher.publish(DiagnosticArray(status=[broken]))
+        return [report.name for report in inbox.observation(post.now()).health]
+
+    assert until(heard, "the status") == ["placed b: cam"]
     inbox.close()
+    post.look()
     post.sender.destroy_publisher(publisher)
 
 

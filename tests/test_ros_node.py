@@ -415,7 +415,11 @@ def test_unused_diagnostics_do_no_harm(running: Bench) -> None:
     statuses.append(
         DiagnosticStatus(name=CAMERA[robot], level=bytes([9]), values=[KeyValue(key="a")])
     )
-    diagnostics.publish(DiagnosticArray(status=statuses))
-    until(lambda: "has level 9, not 0..3" in running.probe.log(), "a refusal")
+
+    def refused() -> bool:
+        diagnostics.publish(DiagnosticArray(status=statuses))
+        return "has level 9, not 0..3" in running.probe.log()
+
+    until(refused, "a refusal")
     time.sleep(0.3)
     assert busy(running.rovers) == [robot]
