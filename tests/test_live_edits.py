@@ -149,7 +149,9 @@ class Live(RuleBasedStateMachine):
         busy = np.flatnonzero(decision.assignment >= 0)
         assert decision.able[busy, decision.assignment[busy]].all()
         heads = np.bincount(decision.assignment[busy], minlength=len(model.most))
-        assert (heads <= model.most).all()
+        # Pins are obeyed beyond the head count.
+        pinned = model.mask(crew.allocator.orders.pins).sum(axis=0)
+        assert (heads <= np.maximum(model.most, pinned)).all()
         for robot, task in crew.allocator.orders.bans:
             assert decision.task_of(decision.robots.index(robot)) != task
         assert ((decision.efficacy >= 0) & (decision.efficacy <= 1)).all()
