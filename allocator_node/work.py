@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Iterable
 from contextlib import suppress
-from dataclasses import dataclass, fields, replace
+from dataclasses import dataclass, fields
 from functools import partial
 from typing import Any
 
@@ -109,13 +109,7 @@ class Work:
 
     def fingerprint(self, name: str) -> str:
         """Give what tells a task's work from any other's, who may do it and when aside."""
-        task = self.team.tasks[name]
-        blank = type(task)(**{
-            part.name: getattr(task, part.name)
-            for part in fields(task)
-            if part.name == "name" or part.name not in _COMMON
-        })
-        return fingerprint(blank)
+        return fingerprint(_bare(self.team.tasks[name]))
 
     def end(self, name: str) -> None:
         """Take a task as finished, as an earlier run left it."""
@@ -179,7 +173,14 @@ class Stage:
         return Located(at, float(heading), view.places.velocities[robots].mean(axis=0))
 
 
-_COMMON = {part.name for part in fields(Task)}
+_ASIDE = {part.name for part in fields(Task)} - {"name"}
+"""What every task has beside its work."""
+
+
+def _bare(task: Task) -> Task:
+    """Give a task without who may do it and when."""
+    work = {p.name: getattr(task, p.name) for p in fields(task) if p.name not in _ASIDE}
+    return type(task)(**work)
 
 
 def fingerprint(task: Task) -> str:
@@ -189,6 +190,4 @@ def fingerprint(task: Task) -> str:
 
 def _same_work(old: Task, new: Task) -> bool:
     """Tell whether two tasks are the same but for who may do them and when."""
-    if type(old) is not type(new):
-        return False
-    return replace(old, **{name: getattr(new, name) for name in _COMMON}) == new
+    return type(old) is type(new) and _bare(old) == _bare(new)

@@ -106,7 +106,6 @@ class Loop:
         self._timer: Timer | None = None
         self._watcher: Timer | None = None
         self._steady = Clock(clock_type=ClockType.STEADY_TIME)
-        self._still = False
         self._stillness = Stillness()
         self._decision: Decision | None = None
         self._trace = ""
@@ -179,19 +178,17 @@ class Loop:
 
     def _watch(self) -> None:
         """Make robots stand where the clock stands still, for then no period comes."""
-        stood = self._stillness.look(self._now())
-        self._health.stalled = stood
-        if stood < STILL:
-            self._still = False
+        stood, told = self._stillness.look(self._now()), self._health.stalled > 0
+        self._health.stalled = stood if stood >= STILL else 0.0
+        if not self._health.stalled:
             return
         text = (
             f"no time has gone by for {stood:.0f} s: with use_sim_time, /clock must be published, "
             "and not paused; robots are told to stand"
         )
         self._log.error(text, throttle_duration_sec=10.0)
-        if not self._still:
+        if not told:
             self._guarded(self._stand)
-        self._still = True
         self._guarded(self._report)
 
     # What the operator asks for

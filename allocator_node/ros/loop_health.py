@@ -29,7 +29,7 @@ class LoopHealth:
     Attributes:
         period: Wanted length of a period, s.
         failures: Exceptions caught in the loop so far.
-        stalled: For how long the clock has not moved, s.
+        stalled: For how long the clock has stood still, s; 0: it runs.
     """
 
     def __init__(self, name: str, period: float) -> None:
@@ -117,7 +117,7 @@ class LoopHealth:
             return self._status(
                 "period", Level.ERROR, f"the loop failed: {self._failure}", values
             )
-        if self.stalled >= 1.0:
+        if self.stalled:
             message = f"no time has gone by for {self.stalled:.0f} s: is /clock published?"
             return self._status("period", Level.ERROR, message, values)
         if late:
